@@ -1,0 +1,1 @@
+"""What the operator types, sees and prints: one short module per noun."""

@@ -1,0 +1,1 @@
+"""From samples to vectors to a stored reading: drivers, ring, signal, pipeline, daemon, control."""

@@ -1,0 +1,1 @@
+"""Pure arithmetic on arrays: no clock, no thread, no I/O."""

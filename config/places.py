@@ -14,15 +14,18 @@ from pathlib import Path, PureWindowsPath
 SERVICE_FOLDER = Path("/run/revmark")
 """RuntimeDirectory of the systemd unit in config/service."""
 
-REMOTE_TYPES = frozenset(
-    "9p afs beegfs ceph cifs coda davfs gfs2 glusterfs gpfs lustre ncpfs nfs nfs4 ocfs2 orangefs prl_fs "
-    "pvfs2 smb3 smbfs sshfs vboxsf vmhgfs".split()
-)
+# fmt: off
+REMOTE_TYPES = frozenset({
+    "9p", "afs", "beegfs", "ceph", "cifs", "coda", "davfs", "gfs2", "glusterfs", "gpfs", "lustre", "ncpfs",
+    "nfs", "nfs4", "ocfs2", "orangefs", "prl_fs", "pvfs2", "smb3", "smbfs", "sshfs", "vboxsf", "vmhgfs",
+})
 """Types of file system that another machine (or a virtual machine's host) serves: the store's shared memory
 does not work there. With the prefix ``fuse.`` they count as well, and so do those below."""
-REMOTE_FUSE = frozenset(
-    "ceph-fuse curlftpfs davfs2 gcsfuse goofys google-drive-ocamlfuse gvfsd-fuse onedriver rclone s3fs".split()
-)
+REMOTE_FUSE = frozenset({
+    "ceph-fuse", "curlftpfs", "davfs2", "gcsfuse", "goofys", "google-drive-ocamlfuse", "gvfsd-fuse",
+    "onedriver", "rclone", "s3fs", "vmhgfs-fuse",
+})
+# fmt: on
 
 
 def runtime_folders(env: Mapping[str, str] = os.environ) -> tuple[Path, ...]:
@@ -97,7 +100,7 @@ def _read_mountinfo() -> str:
 
 
 def _remote_type(path: Path, mountinfo: str) -> str | None:
-    """Type of the innermost mount above ``path`` when it is remote; of equal ones the last hides the others."""
+    """The innermost mount's type when it is remote; of mounts at one place the last hides the others."""
     inner, kind = Path(), ""
     for line in mountinfo.splitlines():
         fields, _, rest = line.partition(" - ")
@@ -124,9 +127,9 @@ def _unescape(text: str) -> str:
 
 def _remote_drive(path: Path) -> str | None:
     """GetDriveType of the drive: 4 is a network drive."""
-    if sys.platform != "win32":
-        return None
-    import ctypes
+    if sys.platform == "win32":
+        import ctypes
 
-    drive = path.resolve().drive + "\\"
-    return "network drive" if ctypes.windll.kernel32.GetDriveTypeW(drive) == 4 else None
+        if ctypes.windll.kernel32.GetDriveTypeW(path.resolve().drive + "\\") == 4:
+            return "network drive"
+    return None

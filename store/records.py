@@ -451,3 +451,67 @@ class MountDraft:
     """Balancing speeds; empty = the machine's service speed."""
     carry_over: bool = False
     """True: what was fitted in the job's previous mount is fitted still."""
+
+
+@dataclass(frozen=True, slots=True)
+class SetUpDraft:
+    """A set-up as the stand file and the driver give it; the ledger gives it identity and revision."""
+
+    stand: str
+    ends: tuple[str, str]
+    angles_seen_from: str
+    zero: str
+    channels: tuple[ChannelSetUp, ...]
+    pulse: PulseSetUp
+    rate_hz: float
+    driver: str
+
+
+# --- what lists and status show ----------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class RunLine:
+    """One line of a list of runs: made by a single query, without the readings themselves."""
+
+    name: str
+    other_name: str | None
+    """``U/1`` of a run that was assigned later."""
+    job_number: str | None
+    machine_serial: str | None
+    origin: Origin
+    state: RunState
+    reason: str
+    void: str | None
+    operator: str
+    started_us: int
+    ended_us: int | None
+    readings: int
+    labels: tuple[Label, ...]
+    speed_hz: float | None
+    """Of the newest labelled reading, else of the newest; None = no reading."""
+
+
+@dataclass(frozen=True, slots=True)
+class StoreEvent:
+    """Something worth keeping that is no measurement (a clock step, a drop-out, a recovery)."""
+
+    at_us: int
+    kind: str
+    text: str
+
+
+@dataclass(frozen=True, slots=True)
+class StoreInfo:
+    store_id: UUID
+    made_us: int
+    made_by: str
+    schema: str
+    """Revision of the schema (0001, ...)."""
+    sqlite: str
+    """Version of the SQLite library in use."""
+    sqlite_wal_reset_safe: bool
+    """False: this SQLite has the WAL-reset bug; harmless as only one connection writes and checkpoints."""
+    file_bytes: int
+    wal_bytes: int
+    raw_bytes: int

@@ -1,0 +1,172 @@
+"""What operators ask of the daemon: each act is checked against what the stand does now, then written.
+
+The ledger keeps the rules of what is stored; here are the rules of what is turning. All answers are
+plain JSON (keys and units: store/asjson.py).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+from config.errors import Refusal
+from daq.board import Board, StandState
+from daq.requests import (
+    AssignAsked,
+    MachineAsked,
+    MountAsked,
+    PieceBody,
+    RemovalAsked,
+    Request,
+    SenseBody,
+    UnmountAsked,
+    VoidAsked,
+    WeightAsked,
+)
+from daq.writer import Writer
+from store import asjson
+from store.history import History
+from store.ledger import Ledger
+from store.records import (
+    MachineDraft,
+    MarkPosition,
+    MountDraft,
+    PieceDraft,
+    Sense,
+    WeightPlane,
+)
+
+Json = dict[str, Any]
+
+
+def refuse_if_turning(board: Board, what: str) -> None:
+    """Raises Refusal while the rotor turns, or may turn without its pulses."""
+    live = board.read()
+    if live.state is StandState.TURNING:
+        speed = f" ({live.speed_hz * 60:.0f} r/min)" if live.speed_hz else ""
+        raise Refusal(f"The rotor is turning{speed}; {what} is refused.", "Run it down and lock it out first.")
+    if live.state is StandState.PULSES_LOST:
+        raise Refusal(
+            f"The once-per-rev signal is lost while the probes still vibrate; {what} is refused.",
+            "Treat the rotor as turning until you have seen and locked it out.",
+        )
+
+
+def require_lock_out(board: Board, *, locked_out: bool) -> None:
+    """Raises Refusal unless the operator says that the drive is locked out; no pulses is not standstill."""
+    refuse_if_turning(board, "work on its weights")
+    if not locked_out:
+        state = board.read().state
+        raise Refusal(
+            f"The state is {state!s}, which does not prove that the rotor stands still.",
+            "Stop and lock out the drive, see it at rest, then say so with --locked-out.",
+        )
+
+
+def _sense(body: SenseBody) -> Sense:
+    return Sense(body.turn, body.seen_from)
+
+
+def _piece(body: PieceBody) -> PieceDraft:
+    return PieceDraft(body.plane, body.mass_g, body.hole, body.angle_deg, body.radius_mm)
+
+
+class Desk:
+    """Machines, mounts, weights and corrections of the record."""
+
+    def __init__(self, writer: Writer, history: History, board: Board, ends: tuple[str, str]) -> None:
+        self._writer = writer
+        self._history = history
+        self._board = board
+        self._ends = ends
+
+    def _once(self, asked: Request, verb: str, act: Callable[[Ledger], Json]) -> Json:
+        body = asked.model_dump(mode="json", exclude={"key"})
+        return self._writer.ask(lambda ledger: ledger.once(asked.key, verb, body, lambda: act(ledger)))
+
+    def add_machine(self, asked: MachineAsked, peer: str) -> Json:
+        planes = tuple(
+            WeightPlane(p.number, p.radius_mm, p.holes, _sense(p.numbering), p.position_mm)
+            for p in asked.planes
+        )
+        for plane in planes:
+            self._check_end(plane.numbering.seen_from, f"the hole numbering of plane {plane.number}")
+        draft = MachineDraft(
+            asked.serial,
+            asked.model,
+            asked.rotor_mass_kg,
+            asked.service_hz,
+            asked.grade_mm_s,
+            asked.permissible_gmm,
+            asked.bearing_loads_kg,
+            asked.vibration_limit_um_pk,
+            planes,
+            asked.first_critical_hz,
+        )
+        who = asked.who or peer
+        return self._once(asked, "machine", lambda led: asjson.machine_json(led.add_machine(draft, who)))
+
+    def mount(self, asked: MountAsked, peer: str) -> Json:
+        refuse_if_turning(self._board, "a mount")
+        self._check_end(asked.rotation.seen_from, "the direction of rotation")
+        draft = MountDraft(
+            asked.serial,
+            asked.job,
+            _sense(asked.rotation),
+            tuple(MarkPosition(m.plane, m.from_hole1_deg) for m in asked.marks),
+            asked.mark_how,
+            asked.mark_width_deg,
+            asked.support,
+            asked.coupling,
+            tuple(_piece(p) for p in asked.fitted),
+            asked.speeds_hz,
+            asked.carry_over,
+        )
+        who = asked.who or peer
+        return self._once(asked, "mount", lambda led: asjson.mount_json(led.mount(draft, who), asked.job))
+
+    def unmount(self, asked: UnmountAsked, peer: str) -> Json:
+        refuse_if_turning(self._board, "taking the machine off")
+
+        def act(ledger: Ledger) -> Json:
+            ended = ledger.unmount(asked.who or peer)
+            return {"ended": asjson.mount_json(ended) if ended else None}
+
+        return self._once(asked, "unmount", act)
+
+    def weight(self, asked: WeightAsked, peer: str) -> Json:
+        require_lock_out(self._board, locked_out=asked.locked_out)
+        piece, who = _piece(asked.piece), asked.who or peer
+
+        def act(ledger: Ledger) -> Json:
+            do = ledger.drill if asked.drilled else ledger.fit
+            return {"weights": [asjson.weight_json(w) for w in do(piece, who, asked.after)]}
+
+        return self._once(asked, "weight", act)
+
+    def remove(self, asked: RemovalAsked, peer: str) -> Json:
+        require_lock_out(self._board, locked_out=asked.locked_out)
+        if asked.all == (asked.hole is not None):
+            raise Refusal("Which weights came off is not said.", "Name one hole, or all with --all.")
+
+        def act(ledger: Ledger) -> Json:
+            gone = ledger.remove(asked.plane, asked.who or peer, hole=asked.hole, every=asked.all)
+            return {"weights": [asjson.weight_json(w) for w in gone]}
+
+        return self._once(asked, "remove", act)
+
+    def void(self, asked: VoidAsked, peer: str) -> Json:
+        who = asked.who or peer
+        return self._once(asked, "void", lambda led: asjson.run_json(led.void_run(asked.run, asked.why, who)))
+
+    def assign(self, asked: AssignAsked, peer: str) -> Json:
+        who = asked.who or peer
+        return self._once(asked, "assign", lambda led: asjson.run_json(led.assign_run(asked.run, asked.job, who)))
+
+    def _check_end(self, end: str, what: str) -> None:
+        if end not in self._ends:
+            raise Refusal(
+                f"This stand has no end named {end!r}, from which {what} is seen.",
+                f"Its ends are {self._ends[0]!r} and {self._ends[1]!r}.",
+            )
+

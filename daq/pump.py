@@ -1,0 +1,174 @@
+"""The driver thread: opens the source, moves its blocks into the ring, and opens it again when it fails.
+
+It only reads and copies. What is asked of a driver (turn the rotor, play the next file) is done here
+between two reads, so that a driver is only ever touched by one thread.
+"""
+
+from __future__ import annotations
+
+import logging
+import queue
+import threading
+from collections import deque
+from collections.abc import Callable
+from concurrent.futures import Future
+from dataclasses import dataclass
+from typing import Any
+
+from config.errors import DriverError
+from daq.board import Board, StandState
+from daq.clock import Clock
+from daq.drivers.base import Block, Driver, EndOfSource, SourceInfo
+from daq.ring import Ring, RingReader
+
+READ_S = 0.2
+RING_S = 20.0
+FIRST_BACK_OFF_S, LONGEST_BACK_OFF_S = 0.5, 5.0
+ACT_WITHIN_S = 10.0
+ROOM_S = 0.2
+
+log = logging.getLogger("revmark.driver")
+
+
+@dataclass(frozen=True, slots=True)
+class Notice:
+    """Something that happened to the source after ``position`` frames had gone into the ring."""
+
+    position: int
+    kind: str
+    """``ended``, ``lost`` or ``back``."""
+    text: str
+
+
+class Pump:
+    """Owns the driver and the ring's writing end."""
+
+    def __init__(self, driver: Driver, board: Board, clock: Clock) -> None:
+        self._driver = driver
+        self._board = board
+        self._clock = clock
+        self._acts: queue.SimpleQueue[tuple[str, dict[str, Any], Future[Any]]] = queue.SimpleQueue()
+        self._back_off_s = FIRST_BACK_OFF_S
+        self.notices: deque[Notice] = deque()
+        self.opened = threading.Event()
+        self.info: SourceInfo | None = None
+        self.ring: Ring | None = None
+        self.reader: RingReader | None = None
+        self.fatal: DriverError | None = None
+        """Set when the source can never be opened as it is configured."""
+
+    def act(self, verb: str, **arguments: Any) -> Any:
+        """Ask the driver to do something, on its own thread. Raises DriverError."""
+        future: Future[Any] = Future()
+        self._acts.put((verb, arguments, future))
+        try:
+            return future.result(ACT_WITHIN_S)
+        except TimeoutError as error:
+            raise DriverError(
+                "The source did not answer in time.", "See revmark status.", kind="timeout"
+            ) from error
+
+    def run(self, stop: threading.Event, beat: Callable[[], None]) -> None:
+        """The thread's body."""
+        try:
+            while not stop.is_set() and self.fatal is None:
+                beat()
+                try:
+                    self._open()
+                    self._stream(stop, beat)
+                except DriverError as error:
+                    self._lost(error)
+                    self._pause(stop, beat)
+        finally:
+            self._driver.close()
+            if self.ring is not None:
+                self.ring.close()
+            self.opened.set()
+
+    def _open(self) -> None:
+        info = self._driver.open()
+        if self.ring is None:
+            frames = int(RING_S * info.rate_hz)
+            self.ring = Ring(frames, len(info.volts_per_count), info.dtype)
+            self.reader = self.ring.reader("analysis")
+        elif self.info is not None and not info.same_stream(self.info):
+            self.fatal = DriverError(
+                "The source came back with another rate, scale or number of channels.",
+                "Restart revmark serve so that the set-up is recorded anew.",
+                kind="config",
+                retryable=False,
+            )
+            raise self.fatal
+        else:
+            self._note("back", info.description)
+        self.info = info
+        self._board.post(source=info.description)
+        log.info("source open: %s, %.10g samples/s", info.description, info.rate_hz)
+        self.opened.set()
+
+    def _stream(self, stop: threading.Event, beat: Callable[[], None]) -> None:
+        while not stop.is_set():
+            beat()
+            self._do_acts()
+            came = self._driver.read(READ_S)
+            if isinstance(came, EndOfSource):
+                self._note("ended", came.reason)
+            elif came is not None:
+                self._back_off_s = FIRST_BACK_OFF_S
+                self._write(came, stop, beat)
+
+    def _write(self, block: Block, stop: threading.Event, beat: Callable[[], None]) -> None:
+        assert self.ring is not None and self.reader is not None
+        frames = len(block.counts)
+        while not self._driver.paces_itself and not stop.is_set():
+            if self.ring.wait_room(frames, self.reader, ROOM_S):
+                break
+            beat()
+        self.ring.write(block)
+
+    def _do_acts(self) -> None:
+        while True:
+            try:
+                verb, arguments, future = self._acts.get_nowait()
+            except queue.Empty:
+                return
+            if not future.set_running_or_notify_cancel():
+                continue
+            try:
+                future.set_result(self._driver.act(verb, **arguments))
+            except Exception as error:
+                future.set_exception(error)
+
+    def _lost(self, error: DriverError) -> None:
+        log.error("source lost: %s", error)
+        self._driver.close()
+        self._note("lost", error.cause)
+        self._board.post(
+            state=StandState.SOURCE_LOST, detail=error.cause, source=f"lost: {error}", speed_hz=None
+        )
+        if not error.retryable:
+            self.fatal = error
+
+    def _pause(self, stop: threading.Event, beat: Callable[[], None]) -> None:
+        until = self._clock.monotonic() + self._back_off_s
+        self._back_off_s = min(2 * self._back_off_s, LONGEST_BACK_OFF_S)
+        while self.fatal is None and self._clock.monotonic() < until:
+            beat()
+            self._refuse_acts()
+            if self._clock.wait(stop, min(READ_S, self._back_off_s)):
+                return
+
+    def _refuse_acts(self) -> None:
+        while True:
+            try:
+                _, _, future = self._acts.get_nowait()
+            except queue.Empty:
+                return
+            if future.set_running_or_notify_cancel():
+                future.set_exception(
+                    DriverError("The source is lost.", "It is opened again by itself; see revmark status.", kind="gone")
+                )
+
+    def _note(self, kind: str, text: str) -> None:
+        position = self.ring.written if self.ring is not None else 0
+        self.notices.append(Notice(position, kind, text))

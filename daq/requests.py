@@ -1,0 +1,139 @@
+"""What may be asked over the control channel: one model per act, unknown keys refused, numbers finite."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import BaseModel, ConfigDict, Field
+
+Key = Annotated[str, Field(min_length=8, max_length=64, pattern=r"^[0-9A-Za-z_-]+$")]
+Name = Annotated[str, Field(min_length=1, max_length=64)]
+Text = Annotated[str, Field(max_length=500)]
+Finite = Annotated[float, Field(allow_inf_nan=False)]
+Positive = Annotated[float, Field(gt=0, allow_inf_nan=False, le=1e9)]
+PlaneNumber = Annotated[int, Field(ge=1, le=99)]
+
+
+class Request(BaseModel):
+    """Every act carries a client-made key (a retry is no second act) and who asks."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+    key: Key
+    who: Annotated[str, Field(max_length=64)] = ""
+
+
+class SenseBody(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    turn: Literal["clockwise", "counterclockwise"]
+    seen_from: Name
+
+
+class PlaneBody(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    number: PlaneNumber
+    radius_mm: Positive
+    holes: Annotated[int, Field(ge=0, le=1000)]
+    numbering: SenseBody
+    position_mm: Finite | None = None
+
+
+class MachineAsked(Request):
+    serial: Name
+    model: Name
+    rotor_mass_kg: Positive
+    service_hz: Positive
+    grade_mm_s: Positive | None = None
+    permissible_gmm: Positive | None = None
+    bearing_loads_kg: tuple[Positive, ...] = ()
+    vibration_limit_um_pk: Positive | None = None
+    planes: tuple[PlaneBody, ...] = ()
+    first_critical_hz: Positive | None = None
+
+
+class PieceBody(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    plane: PlaneNumber
+    mass_g: Positive
+    hole: Annotated[int, Field(ge=1, le=1000)] | None = None
+    angle_deg: Finite | None = None
+    radius_mm: Positive | None = None
+
+
+class MarkPositionBody(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    plane: PlaneNumber
+    from_hole1_deg: Finite
+
+
+class MountAsked(Request):
+    serial: Name
+    job: Name
+    rotation: SenseBody
+    marks: tuple[MarkPositionBody, ...] = ()
+    mark_how: Text | None = None
+    mark_width_deg: Finite | None = None
+    support: Text = ""
+    coupling: Text = ""
+    fitted: tuple[PieceBody, ...] = ()
+    carry_over: bool = False
+    speeds_hz: tuple[Positive, ...] = ()
+
+
+class UnmountAsked(Request):
+    pass
+
+
+class MarkAsked(Request):
+    label: Literal["O", "O+T", "check", "trim", "slow-roll"]
+    choose: Literal["last", "next"] | None = None
+    confirmed: bool = False
+
+
+class CancelAsked(Request):
+    """Cancels the mark whose key is ``mark``, or the pending one."""
+
+    mark: Key | None = None
+
+
+class WeightAsked(Request):
+    piece: PieceBody
+    drilled: bool = False
+    locked_out: bool = False
+    after: Name | None = None
+    """Name of the run after which it was really done (a late entry); None = now."""
+
+
+class RemovalAsked(Request):
+    plane: PlaneNumber
+    hole: Annotated[int, Field(ge=1, le=1000)] | None = None
+    all: bool = False
+    locked_out: bool = False
+
+
+class SimStartAsked(Request):
+    speed_hz: Positive | None = None
+
+
+class SimStopAsked(Request):
+    pass
+
+
+class SimNextAsked(Request):
+    file: Annotated[str, Field(max_length=4096)] | None = None
+
+
+class SimFaultAsked(Request):
+    kind: Name
+    seconds: Positive = 1.0
+    channel: Name | None = None
+
+
+class VoidAsked(Request):
+    run: Name
+    why: Annotated[str, Field(min_length=1, max_length=500)]
+
+
+class AssignAsked(Request):
+    run: Name
+    job: Name

@@ -1,0 +1,113 @@
+"""When a run begins and ends, and what the stand's state is: a pure state machine in source time.
+
+A run is pulses begin -> pulses end, above a minimum speed for a minimum time (so that jogging and
+windmilling make no runs). Pulses lost while the probes still vibrate leave the run open.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+from daq.board import StandState
+
+SHORTEST_QUIET_S, LONGEST_QUIET_S = 1.0, 10.0
+QUIET_PERIODS = 3.0
+"""Pulses have ended after this many of the last period without one, within the two bounds."""
+
+
+@dataclass(frozen=True, slots=True)
+class Hop:
+    """What one step of the analysis saw. Times are seconds of source time in one opening of the source."""
+
+    t_s: float
+    sample: int
+    last_edge_s: float | None
+    """Time of the newest pulse edge; None = none since the source opened."""
+    period_s: float | None
+    """The newest time between two edges."""
+    vibrating: bool
+    """The probes move much as they did while turning."""
+
+
+@dataclass(frozen=True, slots=True)
+class Began:
+    """A run has begun; ``sample`` and ``t_s`` are of its first step above minimum speed."""
+
+    t_s: float
+    sample: int
+    segment: int
+
+
+@dataclass(frozen=True, slots=True)
+class Ended:
+    state: Literal["complete", "interrupted"]
+    reason: str
+
+
+class RunWatch:
+    """Feed it hops; it says when a run began or ended and keeps the stand's state."""
+
+    def __init__(self, minimum_hz: float, minimum_s: float) -> None:
+        self._minimum_hz = minimum_hz
+        self._minimum_s = minimum_s
+        self.state = StandState.NO_PULSES
+        self.open = False
+        self._since: tuple[float, int, int] | None = None
+        self._slow_since_s: float | None = None
+
+    def step(self, hop: Hop, segment: int) -> Began | Ended | None:
+        self.state = self._state(hop)
+        fast = self.state is StandState.TURNING and self._is_fast(hop)
+        if not self.open:
+            return self._waits(hop, segment, fast=fast)
+        if self.state is StandState.NO_PULSES:
+            return self._end("complete", "pulses ended")
+        if fast or self.state is StandState.PULSES_LOST:
+            self._slow_since_s = None
+            return None
+        if self._slow_since_s is None:
+            self._slow_since_s = hop.t_s
+        if hop.t_s - self._slow_since_s >= self._minimum_s:
+            return self._end("complete", "below minimum speed")
+        return None
+
+    def source_ended(self, reason: str) -> Ended | None:
+        """The source ends by itself, perhaps while turning."""
+        self.state = StandState.NO_PULSES
+        self._since = None
+        return self._end("complete", reason) if self.open else None
+
+    def source_lost(self, reason: str) -> Ended | None:
+        """The source failed; nothing is known of the rotor until it is back."""
+        self.state = StandState.SOURCE_LOST
+        self._since = None
+        return self._end("interrupted", reason) if self.open else None
+
+    def _state(self, hop: Hop) -> StandState:
+        if hop.last_edge_s is not None:
+            quiet_s = QUIET_PERIODS * (hop.period_s or SHORTEST_QUIET_S)
+            quiet_s = min(max(quiet_s, SHORTEST_QUIET_S), LONGEST_QUIET_S)
+            if hop.t_s - hop.last_edge_s <= quiet_s:
+                return StandState.TURNING
+        was_turning = self.state in (StandState.TURNING, StandState.PULSES_LOST)
+        return StandState.PULSES_LOST if was_turning and hop.vibrating else StandState.NO_PULSES
+
+    def _is_fast(self, hop: Hop) -> bool:
+        return hop.period_s is not None and hop.period_s * self._minimum_hz <= 1.0
+
+    def _waits(self, hop: Hop, segment: int, *, fast: bool) -> Began | None:
+        if not fast:
+            self._since = None
+            return None
+        if self._since is None:
+            self._since = (hop.t_s, hop.sample, segment)
+        if hop.t_s - self._since[0] < self._minimum_s:
+            return None
+        self.open, self._slow_since_s = True, None
+        t_s, sample, first_segment = self._since
+        return Began(t_s, sample, first_segment)
+
+    def _end(self, state: Literal["complete", "interrupted"], reason: str) -> Ended:
+        self.open, self._since, self._slow_since_s = False, None, None
+        return Ended(state, reason)

@@ -1,0 +1,123 @@
+"""Where the daemon tells who may talk to it how: the runtime file and the Unix socket, with their modes.
+
+Alone: folder 0700, file and socket 0600. With a group of operators: folder 2750, file 0640, socket
+0660, all of that group, so that its members may mark and read and nobody else may.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import secrets
+import socket
+from contextlib import suppress
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from config.errors import StandFileError
+
+LONGEST_SOCKET_PATH = 100
+"""Bytes; the system allows 107."""
+
+
+@dataclass(frozen=True, slots=True)
+class Access:
+    """Who besides the service's user may talk to the daemon."""
+
+    gid: int | None
+
+    @property
+    def folder_mode(self) -> int:
+        return 0o700 if self.gid is None else 0o2750
+
+    @property
+    def file_mode(self) -> int:
+        return 0o600 if self.gid is None else 0o640
+
+    @property
+    def socket_mode(self) -> int:
+        return 0o600 if self.gid is None else 0o660
+
+    @property
+    def store_mode(self) -> int:
+        return 0o600 if self.gid is None else 0o660
+
+
+def access_of(group: str | None) -> Access:
+    """The access a stand file asks for. Raises StandFileError when the group does not exist."""
+    if not group:
+        return Access(None)
+    try:
+        import grp
+
+        return Access(grp.getgrnam(group).gr_gid)
+    except (ImportError, KeyError) as error:
+        raise StandFileError(
+            f"The group {group!r} of access.group does not exist on this PC.",
+            f"Make it (groupadd {group}) or leave access.group empty.",
+        ) from error
+
+
+def give(path: Path, mode: int, gid: int | None) -> None:
+    """Set the group first, then the mode (a change of group clears the set-group bit)."""
+    if gid is not None:
+        os.chown(path, -1, gid)
+    if os.name == "posix":
+        path.chmod(mode)
+
+
+class Runtime:
+    """The runtime file and socket of one daemon. The store's lock must be held: stale ones are replaced."""
+
+    def __init__(self, folder: Path, store: Path, access: Access) -> None:
+        self._access = access
+        self._folder = folder
+        stem = hashlib.sha256(os.fsencode(store)).hexdigest()[:12]
+        self.file = folder / f"{stem}.json"
+        self.socket_path = folder / f"{stem}.sock"
+        self.token = secrets.token_urlsafe(32)
+        self.instance = secrets.token_hex(8)
+
+    def make_folder(self) -> None:
+        made = not self._folder.exists()
+        self._folder.mkdir(parents=True, exist_ok=True)
+        if made or self._folder.stat().st_uid == _uid():
+            give(self._folder, self._access.folder_mode, self._access.gid)
+
+    def unix_socket(self) -> socket.socket | None:
+        """A listening Unix socket; None where the system has none or the path is too long for one."""
+        if not hasattr(socket, "AF_UNIX") or len(os.fsencode(self.socket_path)) > LONGEST_SOCKET_PATH:
+            return None
+        with suppress(FileNotFoundError):
+            self.socket_path.unlink()
+        link = socket.socket(socket.AF_UNIX, socket.SOCK_STREAM)
+        before = os.umask(0o177)
+        try:
+            link.bind(os.fspath(self.socket_path))
+        finally:
+            os.umask(before)
+        give(self.socket_path, self._access.socket_mode, self._access.gid)
+        link.listen(64)
+        return link
+
+    def publish(self, content: dict[str, Any], *, has_socket: bool) -> None:
+        """Write the runtime file under another name, with its mode from the first byte, then rename it."""
+        told = {**content, "token": self.token, "instance": self.instance, "pid": os.getpid()}
+        told["socket"] = os.fspath(self.socket_path) if has_socket else None
+        draft = self.file.with_suffix(f".{secrets.token_hex(4)}.new")
+        handle = os.open(draft, os.O_WRONLY | os.O_CREAT | os.O_EXCL, 0o600)
+        with os.fdopen(handle, "w") as out:
+            json.dump(told, out)
+        give(draft, self._access.file_mode, self._access.gid)
+        draft.replace(self.file)
+
+    def withdraw(self) -> None:
+        for path in (self.file, self.socket_path):
+            with suppress(OSError):
+                path.unlink()
+
+
+def _uid() -> int:
+    return os.getuid() if hasattr(os, "getuid") else -1

@@ -1,0 +1,140 @@
+"""The writer thread: the one place where the ledger is called.
+
+Two queues. What operators ask is done at once and its failure goes back to who asked. What the analysis
+records (runs, readings) is done in order and never lost to a full disk: it waits in memory and is tried
+again with back-off, and the board says that the store is blocked. The record queue is bounded; beyond
+its bound readings are counted as dropped, never silently.
+"""
+
+from __future__ import annotations
+
+import logging
+import queue
+import threading
+from collections import deque
+from collections.abc import Callable
+from concurrent.futures import Future
+from typing import Any, TypeVar
+
+from config.errors import RevmarkError, StoreError
+from daq.board import Board
+from daq.clock import Clock
+from store.ledger import Ledger
+
+T = TypeVar("T")
+Record = Callable[[Ledger], None]
+
+RECORDS_HELD = 64
+"""Finished readings and run borders that may wait for a blocked store."""
+FIRST_RETRY_S, LONGEST_RETRY_S = 0.2, 10.0
+ANSWER_WITHIN_S = 30.0
+IDLE_S = 0.2
+
+log = logging.getLogger("revmark.writer")
+
+
+class Writer:
+    """Runs ledger calls on its own thread; see the module's text for the two queues."""
+
+    def __init__(self, ledger: Ledger, board: Board, clock: Clock) -> None:
+        self._ledger = ledger
+        self._board = board
+        self._clock = clock
+        self._asked: queue.SimpleQueue[tuple[Callable[[Ledger], Any], Future[Any]] | None] = queue.SimpleQueue()
+        self._records: deque[Record] = deque()
+        self._lock = threading.Lock()
+        self._retry_at = 0.0
+        self._retry_s = FIRST_RETRY_S
+        self.dropped = 0
+
+    def ask(self, act: Callable[[Ledger], T]) -> T:
+        """Do ``act`` on the writer thread and return its answer after its commit.
+
+        Raises what ``act`` raises, or StoreError (kind ``locked``) when the writer does not answer in time.
+        """
+        future: Future[T] = Future()
+        self._asked.put((act, future))
+        try:
+            return future.result(ANSWER_WITHIN_S)
+        except TimeoutError as error:
+            raise StoreError(
+                "The store did not answer in time.", "See revmark status; nothing was acknowledged.", kind="locked"
+            ) from error
+
+    def record(self, act: Record, *, droppable: bool) -> None:
+        """Queue a record of the analysis. A droppable one (a reading) is counted and left out when full."""
+        with self._lock:
+            full = droppable and len(self._records) >= RECORDS_HELD
+            if not full:
+                self._records.append(act)
+        if full:
+            self._drop(f"store blocked and {RECORDS_HELD} records held")
+        self._asked.put(None)
+
+    def _drop(self, why: str) -> None:
+        self.dropped += 1
+        self._board.post(dropped_readings=self.dropped)
+        log.error("dropped: %s", why)
+
+    def run(self, stop: threading.Event, beat: Callable[[], None]) -> None:
+        """The thread's body: until ``stop`` is set and the records are written (or blocked)."""
+        while not (stop.is_set() and self._drained()):
+            beat()
+            self._serve_one(IDLE_S)
+            self._write_records()
+        self._ledger.checkpoint()
+
+    def _drained(self) -> bool:
+        with self._lock:
+            return self._asked.empty() and (not self._records or self._blocked())
+
+    def _blocked(self) -> bool:
+        return self._clock.monotonic() < self._retry_at
+
+    def _serve_one(self, wait_s: float) -> None:
+        try:
+            item = self._asked.get(timeout=wait_s)
+        except queue.Empty:
+            return
+        if item is None:
+            return
+        act, future = item
+        if not future.set_running_or_notify_cancel():
+            return
+        try:
+            answer = act(self._ledger)
+        except BaseException as error:
+            future.set_exception(error)
+        else:
+            future.set_result(answer)
+            self._ledger.checkpoint()
+
+    def _write_records(self) -> None:
+        while not self._blocked():
+            with self._lock:
+                head = self._records[0] if self._records else None
+            if head is None:
+                return
+            try:
+                head(self._ledger)
+            except StoreError as error:
+                self._hold(error)
+                return
+            except RevmarkError as error:
+                self._drop(f"a record was refused: {error}")
+            with self._lock:
+                self._records.popleft()
+            self._freed()
+            self._ledger.checkpoint()
+
+    def _hold(self, error: StoreError) -> None:
+        self._retry_at = self._clock.monotonic() + self._retry_s
+        self._retry_s = min(2 * self._retry_s, LONGEST_RETRY_S)
+        self._board.post(store=f"blocked: {error.cause}")
+        log.error("store blocked, %d records held: %s", len(self._records), error)
+
+    def _freed(self) -> None:
+        if self._retry_s != FIRST_RETRY_S:
+            log.warning("store writes again")
+            self._retry_s, self._retry_at = FIRST_RETRY_S, 0.0
+            self._board.post(store="ok")

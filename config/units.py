@@ -49,10 +49,13 @@ DETECTORS = {"pk": 1.0, "pp": 2.0, "rms": 1 / math.sqrt(2)}
 _NUMBER = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*([^\s\d].*?)?\s*$")
 
 
-def parse_quantity(text: str, measure: Measure, *, minimum: float | None = None) -> float:
+def parse_quantity(
+    text: str, measure: Measure, *, minimum: float | None = None, maximum: float | None = None
+) -> float:
     """``3.0g``, ``140 mm``, ``1500rpm`` in the base unit of ``measure``.
 
-    Raises BadQuantity when the number has no unit, an unknown one, or lies below ``minimum`` (base unit).
+    Raises BadQuantity when the number has no unit, an unknown one, or lies below ``minimum`` or above
+    ``maximum`` (both in the base unit).
     """
     units = _UNITS[measure]
     found = _NUMBER.match(text)
@@ -70,6 +73,10 @@ def parse_quantity(text: str, measure: Measure, *, minimum: float | None = None)
     if minimum is not None and value < minimum:
         raise BadQuantity(
             f"{text!r} is too small.", f"The {measure} must be at least {minimum:g} {next(iter(units))}."
+        )
+    if maximum is not None and value > maximum:
+        raise BadQuantity(
+            f"{text!r} is too large.", f"The {measure} must be at most {maximum:g} {next(iter(units))}."
         )
     return value
 

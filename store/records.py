@@ -304,7 +304,7 @@ class Run:
 
 @dataclass(frozen=True, slots=True)
 class Mark:
-    """An act of labelling, from the question to its end. ``key`` is made by the client: a retry is no second mark."""
+    """An act of labelling, from question to end. ``key`` is made by the client: a retry is no second mark."""
 
     key: str
     label: Label

@@ -116,7 +116,7 @@ class Counters:
 class DriverOptions(BaseModel):
     """Base of every driver's ``Options``: unknown keys are refused, values never change."""
 
-    model_config = ConfigDict(extra="forbid", frozen=True)
+    model_config = ConfigDict(extra="forbid", frozen=True, allow_inf_nan=False)
 
 
 OptionsT = TypeVar("OptionsT", bound=DriverOptions)

@@ -1,0 +1,1 @@
+"""The parts of the simulated source: its machines, their motion, their signals, its faults."""

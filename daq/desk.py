@@ -113,7 +113,7 @@ class Desk:
             asked.serial,
             asked.job,
             _sense(asked.rotation),
-            tuple(MarkPosition(m.plane, m.from_hole1_deg) for m in asked.marks),
+            self._marks(asked),
             asked.mark_how,
             asked.mark_width_deg,
             asked.support,
@@ -162,6 +162,15 @@ class Desk:
     def assign(self, asked: AssignAsked, peer: str) -> Json:
         who = asked.who or peer
         return self._once(asked, "assign", lambda led: asjson.run_json(led.assign_run(asked.run, asked.job, who)))
+
+    def _marks(self, asked: MountAsked) -> tuple[MarkPosition, ...]:
+        """The rotor mark's place by plane; one given for no plane in particular holds for all."""
+        if not asked.marks:
+            return ()
+        planes = self._history.machine(asked.serial).model.planes
+        for_all = {p.number: m.from_hole1_deg for m in asked.marks if m.plane is None for p in planes}
+        by_plane = for_all | {m.plane: m.from_hole1_deg for m in asked.marks if m.plane is not None}
+        return tuple(MarkPosition(plane, degrees) for plane, degrees in sorted(by_plane.items()))
 
     def _check_end(self, end: str, what: str) -> None:
         if end not in self._ends:

@@ -61,8 +61,10 @@ class PieceBody(BaseModel):
 
 
 class MarkPositionBody(BaseModel):
+    """``plane`` None = every plane of the machine."""
+
     model_config = ConfigDict(extra="forbid", frozen=True)
-    plane: PlaneNumber
+    plane: PlaneNumber | None = None
     from_hole1_deg: Finite
 
 

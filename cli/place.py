@@ -1,0 +1,48 @@
+"""Where a reading command reads: the store of the running daemon, or of the stand file named."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from cli.client import START_IT, find
+from config.errors import DaemonError
+
+if TYPE_CHECKING:
+    from store.history import History
+
+
+def store_path(stand: str | None) -> Path:
+    """The store meant. Raises DaemonError when no daemon runs and no stand file is named."""
+    if stand is not None:
+        from config.stand import load_stand
+
+        return load_stand(Path(stand)).store_path
+    try:
+        return Path(find(None).store)
+    except DaemonError as error:
+        raise DaemonError(error.cause, f"Name the stand whose store to read: --stand FILE. {START_IT}") from error
+
+
+@contextmanager
+def reading(stand: str | None) -> Iterator[History]:
+    """The history of the stand meant, opened for reading."""
+    from store.history import History
+
+    with History.open(store_path(stand)) as history:
+        yield history
+
+
+def newest_job(history: History) -> str:
+    """The job of what is mounted now, else the newest. Raises Refusal when there is none."""
+    from config.errors import Refusal
+
+    mount = history.current_mount()
+    jobs = history.jobs()
+    if mount is not None:
+        return next(j.number for j in jobs if j.id == mount.job_id)
+    if not jobs:
+        raise Refusal("The store holds no job yet.", "Begin one with revmark mount MACHINE --job NUMBER.")
+    return max(jobs, key=lambda j: j.opened_us).number

@@ -1,0 +1,197 @@
+"""The daemon of one stand: one process, four threads (driver, analysis, writer, control), each supervised.
+
+``serve`` runs it in the foreground until a signal and returns the exit code: 0 stopped, 1 refused,
+75 try again (a part failed; nothing acknowledged is lost), 78 the configuration must be mended first.
+"""
+
+from __future__ import annotations
+
+import logging
+import os
+import signal
+import sys
+import threading
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from types import FrameType
+
+from config.errors import DriverError, RevmarkError, StandFileError, StoreError
+from config.places import runtime_folder_for_daemon
+from config.stand import Stand
+from config.version import __version__
+from daq.analysis import Analysis
+from daq.board import Board
+from daq.clock import Clock, SystemClock
+from daq.control import Identity, application, loopback_socket, serve_control
+from daq.drivers.base import Driver
+from daq.drivers.registry import make_driver
+from daq.interface import acts, questions
+from daq.pump import Pump
+from daq.recorder import Recorder
+from daq.runtime import Access, Runtime, access_of, give
+from daq.setup import channel_plan
+from daq.supervise import Part, Supervisor
+from daq.writer import Writer
+from store.database import create_store
+from store.history import History
+from store.ledger import Ledger
+
+OK, REFUSED, TRY_AGAIN, CONFIGURATION = 0, 1, 75, 78
+WATCH_EVERY_S = 0.5
+SWITCH_INTERVAL_S = 0.0005
+"""Cuts what a Python loop elsewhere in the process costs the reader (STORE.md section 5)."""
+CONFIGURATION_TROUBLE = ("newer", "older", "network", "corrupt", "missing", "read_only")
+
+log = logging.getLogger("revmark.daemon")
+
+
+def serve(stand: Stand, clock: Clock | None = None, ready: Callable[[str], None] = lambda _: None) -> int:
+    """Serve ``stand`` until SIGTERM or SIGINT; ``ready`` is told, in a line, when marks are taken."""
+    clock = clock or SystemClock()
+    sys.setswitchinterval(SWITCH_INTERVAL_S)
+    try:
+        access = access_of(stand.access.group)
+        os.umask(0o077 if access.gid is None else 0o007)
+        driver = make_driver(
+            stand.source.driver, stand.source.options, channel_plan(stand), clock=clock, folder=stand.folder
+        )
+        with _ledger(stand, clock, access) as ledger:
+            return Daemon(stand, ledger, driver, access, clock).run(ready)
+    except (StandFileError, DriverError) as error:
+        log.error("%s", error)
+        return CONFIGURATION
+    except StoreError as error:
+        log.error("%s", error)
+        return _code_of(error)
+    except RevmarkError as error:
+        log.error("%s", error)
+        return REFUSED
+
+
+def _code_of(error: StoreError) -> int:
+    if error.kind in CONFIGURATION_TROUBLE:
+        return CONFIGURATION
+    return REFUSED if error.kind == "locked" else TRY_AGAIN
+
+
+@contextmanager
+def _ledger(stand: Stand, clock: Clock, access: Access) -> Iterator[Ledger]:
+    path = stand.store_path
+    if not path.exists():
+        create_store(path, clock=clock, software=__version__)
+        log.info("new, empty store %s", path)
+    ledger = Ledger.open(path, clock=clock, software=__version__)
+    try:
+        _give_store(path, access)
+        for run in ledger.recover():
+            log.warning("run %s was open when the daemon ended; closed as interrupted", run.name)
+        yield ledger
+    finally:
+        ledger.close()
+
+
+def _give_store(path: Path, access: Access) -> None:
+    """The store's files to the group of operators; what belongs to somebody else is left as it is."""
+    for file in (path, *(path.with_name(path.name + end) for end in ("-wal", "-shm", ".lock"))):
+        if file.exists() and (not hasattr(os, "getuid") or file.stat().st_uid == os.getuid()):
+            give(file, access.store_mode, access.gid)
+
+
+class Daemon:
+    """Builds the parts, runs them, and takes them down in order."""
+
+    def __init__(self, stand: Stand, ledger: Ledger, driver: Driver, access: Access, clock: Clock) -> None:
+        self._stand = stand
+        self._ledger = ledger
+        self._access = access
+        self._clock = clock
+        self._board = Board(clock)
+        self._writer = Writer(ledger, self._board, clock)
+        self._pump = Pump(driver, self._board, clock)
+        self._recorder = Recorder(self._writer, self._board, stand)
+        self._analysis = Analysis(stand, self._pump, self._recorder, self._board, clock)
+        self._supervisor = Supervisor(clock)
+        self._asked_to_stop = threading.Event()
+
+    def run(self, ready: Callable[[str], None]) -> int:
+        runtime = Runtime(runtime_folder_for_daemon(), self._stand.store_path, self._access)
+        with History.open(self._stand.store_path) as history, self._signals():
+            parts = self._parts(runtime, history)
+            try:
+                for part in parts:
+                    self._supervisor.start(part)
+                    if part.name == "driver":
+                        self._pump.opened.wait(5.0)
+                if self._pump.fatal is None:
+                    ready(f"{self._stand.name}: marks are taken; store {self._stand.store_path}")
+                code = self._watch(parts)
+            finally:
+                runtime.withdraw()
+                self._take_down(parts)
+            return code
+
+    def _parts(self, runtime: Runtime, history: History) -> list[Part]:
+        """In the order of starting; they are stopped in the reverse of the order of the samples' way."""
+        runtime.make_folder()
+        tcp = loopback_socket()
+        unix = runtime.unix_socket()
+        port = tcp.getsockname()[1]
+        hosts = frozenset({f"127.0.0.1:{port}", f"localhost:{port}"})
+        identity = Identity(__version__, history.info().schema, runtime.instance)
+        desk = (self._stand, self._writer, history, self._board, self._pump, self._analysis, self._clock)
+        app = application(identity, runtime.token, lambda: hosts, acts(*desk), questions(*desk))
+        sockets = [tcp] if unix is None else [tcp, unix]
+        runtime.publish(
+            {
+                "stand": self._stand.name,
+                "stand_file": os.path.realpath(self._stand.file),
+                "store": str(self._stand.store_path),
+                "port": port,
+                "started_us": self._clock.now_us(),
+            },
+            has_socket=unix is not None,
+        )
+        return [
+            Part("writer", self._writer.run, 60.0, 30.0),
+            Part("driver", self._pump.run, 30.0),
+            Part("analysis", self._analysis.run, 60.0, 20.0),
+            Part("control", lambda stop, beat: serve_control(app, sockets, stop, beat), 30.0),
+        ]
+
+    def _watch(self, parts: list[Part]) -> int:
+        while not self._asked_to_stop.is_set():
+            if self._pump.fatal is not None:
+                log.error("%s", self._pump.fatal)
+                return CONFIGURATION
+            trouble = self._supervisor.trouble(parts)
+            if trouble is not None:
+                log.error("%s The daemon ends; start it again.", trouble)
+                return TRY_AGAIN
+            self._clock.wait(self._supervisor.ended, WATCH_EVERY_S)
+            self._clock.wait(self._asked_to_stop, WATCH_EVERY_S)
+        log.info("asked to stop")
+        return OK
+
+    def _take_down(self, parts: list[Part]) -> None:
+        by_name = {part.name: part for part in parts}
+        for name in ("control", "driver", "analysis", "writer"):
+            self._supervisor.stop(by_name[name])
+        log.info("stopped")
+
+    @contextmanager
+    def _signals(self) -> Iterator[None]:
+        """The first signal asks for an orderly end, the second ends at once."""
+
+        def asked(number: int, _frame: FrameType | None) -> None:
+            if self._asked_to_stop.is_set():
+                os._exit(128 + number)
+            self._asked_to_stop.set()
+            self._supervisor.ended.set()
+
+        before = {n: signal.signal(n, asked) for n in (signal.SIGTERM, signal.SIGINT)}
+        try:
+            yield
+        finally:
+            for number, handler in before.items():
+                signal.signal(number, handler)

@@ -1,0 +1,101 @@
+"""The control channel's paths, each with what answers it. One table for acts, one for questions."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict
+from typing import Any
+
+from config.stand import Stand
+from daq import requests
+from daq.analysis import Analysis
+from daq.board import Board
+from daq.clock import Clock
+from daq.control import Act, Question
+from daq.desk import Desk
+from daq.marks import MarkDesk
+from daq.pump import Pump
+from daq.rotor_desk import RotorDesk
+from daq.writer import Writer
+from store import asjson
+from store.history import History
+
+Json = dict[str, Any]
+NO_PARAMETERS: frozenset[str] = frozenset()
+
+
+def acts(
+    stand: Stand,
+    writer: Writer,
+    history: History,
+    board: Board,
+    pump: Pump,
+    analysis: Analysis,
+    clock: Clock,
+) -> tuple[Act, ...]:
+    desk = Desk(writer, history, board, stand.ends)
+    marks = mark_desk(stand, writer, history, board, analysis, clock)
+    rotor = RotorDesk(pump, history, board, stand)
+    return (
+        Act("/v1/machine", requests.MachineAsked, desk.add_machine),
+        Act("/v1/mount", requests.MountAsked, desk.mount),
+        Act("/v1/unmount", requests.UnmountAsked, desk.unmount),
+        Act("/v1/weight", requests.WeightAsked, desk.weight),
+        Act("/v1/weight/remove", requests.RemovalAsked, desk.remove),
+        Act("/v1/run/void", requests.VoidAsked, desk.void),
+        Act("/v1/run/assign", requests.AssignAsked, desk.assign),
+        Act("/v1/mark", requests.MarkAsked, marks.ask),
+        Act("/v1/mark/cancel", requests.CancelAsked, marks.cancel),
+        Act("/v1/sim/start", requests.SimStartAsked, rotor.start),
+        Act("/v1/sim/stop", requests.SimStopAsked, rotor.stop),
+        Act("/v1/sim/next", requests.SimNextAsked, rotor.next),
+        Act("/v1/sim/fault", requests.SimFaultAsked, rotor.fault),
+    )
+
+
+def questions(
+    stand: Stand,
+    writer: Writer,
+    history: History,
+    board: Board,
+    _pump: Pump,
+    analysis: Analysis,
+    clock: Clock,
+) -> tuple[Question, ...]:
+    marks = mark_desk(stand, writer, history, board, analysis, clock)
+
+    def status(_given: Mapping[str, str]) -> Json:
+        return status_json(stand, history, board)
+
+    return (
+        Question("/v1/hello", NO_PARAMETERS, lambda _given: {"stand": stand.name}),
+        Question("/v1/status", NO_PARAMETERS, status),
+        Question("/v1/mark/pending", NO_PARAMETERS, marks.pending),
+        Question("/v1/mark/state/{key}", frozenset({"wait_s"}), marks.state),
+    )
+
+
+def mark_desk(
+    stand: Stand, writer: Writer, history: History, board: Board, analysis: Analysis, clock: Clock
+) -> MarkDesk:
+    show = {c.name: c.shown.name for c in stand.channels if c.shown is not None}
+    return MarkDesk(writer, history, board, clock, analysis, stand.run.slow_roll_limit_hz, show)
+
+
+def status_json(stand: Stand, history: History, board: Board) -> Json:
+    """What ``revmark status --json`` prints."""
+    live, mount, pending, info = board.read(), history.current_mount(), history.pending_mark(), history.info()
+    number = next((j.number for j in history.jobs() if mount and j.id == mount.job_id), None)
+    told = asdict(live)
+    speed = told.pop("speed_hz")
+    return {
+        "stand": stand.name,
+        "stand_file": str(stand.file),
+        "store": str(stand.store_path),
+        "live": {**told, "state": str(live.state), "speed_rpm": None if speed is None else speed * 60},
+        "mount": asjson.mount_json(mount, number) if mount else None,
+        "pending": asjson.mark_json(pending) if pending else None,
+        "sqlite": info.sqlite,
+        "wal_reset_safe": info.sqlite_wal_reset_safe,
+        "wal_bytes": info.wal_bytes,
+    }

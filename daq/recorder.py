@@ -1,0 +1,71 @@
+"""Between analysis and writer: turns what happened into ledger calls, in order, and tells the board.
+
+The analysis never waits for the store: it hands over and goes on. Runs have no identity until their
+opening is committed, so later records of a run look it up when they are written.
+"""
+
+from __future__ import annotations
+
+import logging
+
+from config.stand import Stand
+from daq.board import Board
+from daq.runs import Ended
+from daq.writer import Writer
+from store.ledger import Ledger
+from store.records import ReadingDraft, Run, RunDraft, RunState
+
+log = logging.getLogger("revmark.record")
+
+
+class Recorder:
+    """The analysis thread calls it; the writer thread does the work."""
+
+    def __init__(self, writer: Writer, board: Board, stand: Stand) -> None:
+        self._writer = writer
+        self._board = board
+        self._slow_roll_limit_hz = stand.run.slow_roll_limit_hz
+        self._total_mib = stand.raw.total_mib
+        self._run: Run | None = None
+
+    def began(self, draft: RunDraft) -> None:
+        def write(ledger: Ledger) -> None:
+            self._run = ledger.open_run(draft)
+            log.info("run %s began", self._run.name)
+            self._board.post(run=self._run.name)
+
+        self._writer.record(write, droppable=False)
+
+    def reading(self, draft: ReadingDraft) -> None:
+        def write(ledger: Ledger) -> None:
+            if self._run is None:
+                return
+            reading, mark = ledger.add_reading(
+                self._run.id, draft, slow_roll_limit_hz=self._slow_roll_limit_hz
+            )
+            taken = f", labelled {mark.label}" if mark else ""
+            log.info("run %s reading %d stored%s", self._run.name, reading.number, taken)
+            ledger.age_raw(self._total_mib)
+            self._board.stir()
+
+        self._writer.record(write, droppable=True)
+
+    def ended(self, ended: Ended, ended_us: int, still_out: str) -> None:
+        def write(ledger: Ledger) -> None:
+            if self._run is None:
+                return
+            run, mark = ledger.close_run(
+                self._run.id, RunState(ended.state), ended.reason, ended_us, still_out, fast_enough=True
+            )
+            log.info("run %s ended: %s (%s)", run.name, run.state, run.reason)
+            if mark is not None:
+                log.warning("mark %s was missed: %s", mark.label, mark.detail)
+            self._run = None
+            self._board.post(run=None, steady=False, still_out="", vectors=())
+
+        self._writer.record(write, droppable=False)
+
+    def event(self, kind: str, text: str) -> None:
+        """Something worth keeping that is no measurement."""
+        log.warning("%s: %s", kind, text)
+        self._writer.record(lambda ledger: ledger.note_event(kind, text), droppable=False)

@@ -1,0 +1,153 @@
+"""What is wrong with a window of samples: flags with a stable code and a sentence each.
+
+A flag is ``code`` or ``code:channel`` and travels with the reading; ``sentence`` puts it into words.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daq.signal.shapes import ChannelParams, Floats
+
+CLIP_RUN = 3
+"""So many samples in a row at the end of the scale are clipped."""
+CLIP_SHARE = 0.001
+"""Closer than this to the end of the scale, as a share of the scale."""
+FEWEST_PULSE_SAMPLES = 3
+FLAT_COUNTS = 2
+"""A probe whose samples stay within so many counts is flat."""
+
+NO_PULSES = "no_pulses"
+LOST_PULSES = "once_per_rev_lost"
+MISSED = "missed_pulses"
+DOUBLES = "double_pulses"
+FEW_SAMPLES = "few_samples"
+SAMPLES_LOST = "samples_lost"
+CLIPPED = "clipped"
+FLAT = "flat"
+GAP = "gap_voltage"
+WEAK = "weak_1x"
+
+SENTENCES: dict[str, str] = {
+    NO_PULSES: "No once-per-rev pulses stand out, so there is no speed and no phase.",
+    LOST_PULSES: "The once-per-rev signal is lost while the probes still vibrate.",
+    MISSED: "Some once-per-rev pulses were missed; the turns they belong to are left out.",
+    DOUBLES: "Some once-per-rev pulses came twice; the turns they cut are left out.",
+    FEW_SAMPLES: "The pulse or the turn has too few samples: the sampling rate is too low for this speed.",
+    SAMPLES_LOST: "Samples were lost inside the window; nothing is computed across the gap.",
+    CLIPPED: "{channel} is clipped: its voltage reaches the end of the input's range.",
+    FLAT: "{channel} is flat: its signal does not move at all.",
+    GAP: "{channel} has its gap voltage outside the limits of the stand file.",
+    WEAK: "{channel} has a 1X that hardly stands above its noise.",
+}
+"""Codes and what they mean."""
+
+
+def flag(code: str, channel: str | None = None) -> str:
+    """The flag as it is stored."""
+    return code if channel is None else f"{code}:{channel}"
+
+
+def sentence(flagged: str) -> str:
+    """A stored flag in one sentence; an unknown code (a newer version's) is named as it is."""
+    code, _, channel = flagged.partition(":")
+    text = SENTENCES.get(code, f"Flag {code} of {{channel}}." if channel else f"Flag {code}.")
+    return text.format(channel=channel or "a probe")
+
+
+def describe(flags: Sequence[str]) -> tuple[str, ...]:
+    """All flags in sentences."""
+    return tuple(sentence(f) for f in flags)
+
+
+class RangeScan:
+    """Extremes of probe counts, and whether they are clipped. Feed it blocks in order."""
+
+    def __init__(self, channels: Sequence[ChannelParams]) -> None:
+        scales = np.array([c.full_scale_counts for c in channels], np.int64).reshape(-1, 2)
+        margin = np.floor(CLIP_SHARE * (scales[:, 1] - scales[:, 0]) / 2)
+        self._lowest = scales[:, 0] + margin
+        self._highest = scales[:, 1] - margin
+        self.low = np.full(len(scales), np.iinfo(np.int64).max)
+        self.high = np.full(len(scales), np.iinfo(np.int64).min)
+        self.clipped = np.zeros(len(scales), bool)
+        self._tail: NDArray[Any] | None = None
+
+    def add(self, counts: NDArray[Any]) -> None:
+        """Take (frames, probes) counts that follow the previous ones."""
+        if not len(counts):
+            return
+        low, high = counts.min(axis=0), counts.max(axis=0)
+        np.minimum(self.low, low, out=self.low)
+        np.maximum(self.high, high, out=self.high)
+        if ((low <= self._lowest) | (high >= self._highest)).any():
+            self._look_for_clipping(counts)
+        self._tail = counts[-(CLIP_RUN - 1) :].copy()
+
+    def combine(self, other: RangeScan) -> None:
+        """Take in what another scan saw."""
+        self.low = np.minimum(self.low, other.low)
+        self.high = np.maximum(self.high, other.high)
+        self.clipped |= other.clipped
+
+    @property
+    def flat(self) -> NDArray[np.bool_]:
+        """Shape (probes,): nothing moves."""
+        return (self.high >= self.low) & (self.high - self.low <= FLAT_COUNTS)
+
+    def _look_for_clipping(self, counts: NDArray[Any]) -> None:
+        whole = counts if self._tail is None else np.concatenate((self._tail, counts))
+        for at_end in (whole >= self._highest, whole <= self._lowest):
+            run = at_end[: len(whole) - CLIP_RUN + 1].copy()
+            for shift in range(1, CLIP_RUN):
+                run &= at_end[shift : len(whole) - CLIP_RUN + 1 + shift]
+            self.clipped |= run.any(axis=0)
+
+
+def probe_flags(
+    channels: Sequence[ChannelParams],
+    scan: RangeScan,
+    gap_v: Floats,
+    amplitude: Floats,
+    residual_sd: Floats,
+    min_signal_to_noise: float,
+) -> list[str]:
+    """Flags of the probes; ``gap_v``, ``amplitude`` of 1X (0-peak) and ``residual_sd`` have shape (probes,)."""
+    found = []
+    for i, c in enumerate(channels):
+        out = (c.gap_low_v is not None and gap_v[i] < c.gap_low_v) or (
+            c.gap_high_v is not None and gap_v[i] > c.gap_high_v
+        )
+        weak = not amplitude[i] >= min_signal_to_noise * residual_sd[i]
+        tests = ((CLIPPED, scan.clipped[i]), (FLAT, scan.flat[i]), (GAP, out), (WEAK, weak))
+        found += [flag(code, c.name) for code, bad in tests if bad]
+    return found
+
+
+def pulse_flags(missed: int, doubles: int, pulse_samples: float, samples_per_turn: float) -> list[str]:
+    """Flags of the once-per-rev channel; ``pulse_samples`` is how long the pulse lasts, the shorter side."""
+    few = pulse_samples < FEWEST_PULSE_SAMPLES or samples_per_turn < 2 * FEWEST_PULSE_SAMPLES
+    tests = ((MISSED, missed > 0), (DOUBLES, doubles > 0), (FEW_SAMPLES, few))
+    return [code for code, bad in tests if bad]
+
+
+def ac_rms(counts: NDArray[Any]) -> Floats:
+    """Rms about the mean of (frames, probes) counts; shape (probes,), in counts. Take a second or more."""
+    found: Floats = counts.std(axis=0, dtype=np.float64)
+    return found
+
+
+def still_vibrating(now_rms: Floats, turning_rms: Floats, residual_sd: Floats) -> bool:
+    """True when the probes move now about as they did while pulses came, so that the rotor turns still.
+
+    All of shape (probes,) in one unit per probe: rms about the mean now and while turning, and the noise
+    (residual) while turning. A probe has a vote when turning showed clearly above its noise; one that keeps
+    more than a quarter of that power says yes."""
+    noise = residual_sd**2
+    moved = turning_rms**2 - noise
+    votes = moved > 0.44 * noise  # turning rms 1.2 times the noise
+    return bool(np.any(votes & (now_rms**2 - noise > 0.25 * moved)))

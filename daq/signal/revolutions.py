@@ -1,0 +1,206 @@
+"""Turns between once-per-rev edges: good or not, the angle of every sample in them, the speed.
+
+The angle within a turn comes from the parabolas through neighbouring edges, because constant speed per turn
+is biased on ramps (METHODS 8.8). All positions are sample indices.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daq.signal.shapes import Floats
+
+MISSED_RATIO = 1.6
+DOUBLE_RATIO = 0.6
+UNEVEN_RATIO = 0.85
+"""A turn shorter than this beside a double pulse is the other half of the split turn."""
+MEDIAN_TURNS = 7
+
+
+# --- turns -----------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Turns:
+    """The turns between n edges, n - 1 of them, each marked good or not."""
+
+    edges: Floats
+    """Shape (n,), absolute sample index."""
+    good: NDArray[np.bool_]
+    """Shape (n - 1,): a whole single turn."""
+    curve: Floats
+    """Shape (n - 1,): second divided difference of the turn count, turns per sample squared."""
+    missed: int
+    """Pulses that did not come."""
+    doubles: int
+    """Pulses too many."""
+
+    @property
+    def periods(self) -> Floats:
+        return np.diff(self.edges)
+
+    @property
+    def first_samples(self) -> NDArray[np.int64]:
+        """Shape (n,): the first sample at or after each edge."""
+        return np.ceil(self.edges).astype(np.int64)
+
+    def stretches(self) -> list[tuple[int, int]]:
+        """Runs of good turns as (first turn, stop turn)."""
+        marks = np.diff(np.concatenate(([False], self.good, [False])).astype(np.int8))
+        return list(
+            zip(np.flatnonzero(marks == 1).tolist(), np.flatnonzero(marks == -1).tolist(), strict=True)
+        )
+
+    def speed(self, rate_hz: float) -> float:
+        """Mean speed over the good turns, Hz; 0 when there are none."""
+        length = float(self.periods[self.good].sum())
+        return float(self.good.sum()) * rate_hz / length if length > 0 else 0.0
+
+    def part(self, first: int, stop: int) -> Turns:
+        """Turns ``first`` to ``stop`` with the curvature their neighbours gave them."""
+        return Turns(
+            self.edges[first : stop + 1],
+            self.good[first:stop],
+            self.curve[first:stop],
+            self.missed,
+            self.doubles,
+        )
+
+
+def turns_of(edges: Floats) -> Turns:
+    """Turns between ``edges`` (ascending sample indices), judged against the median of their neighbours.
+
+    A turn over 1.6 times the median has missed pulses in it; under 0.6 times it is cut by a double pulse."""
+    edges = np.asarray(edges, np.float64)
+    if len(edges) < 2:
+        return Turns(edges, np.zeros(0, bool), np.zeros(0), 0, 0)
+    ratio = _ratio_to_neighbours(np.diff(edges))
+    long = ratio > MISSED_RATIO
+    short = ratio < DOUBLE_RATIO
+    beside = np.zeros(len(short), bool)
+    beside[1:] |= short[:-1]
+    beside[:-1] |= short[1:]
+    good = ~(long | short | (beside & (ratio < UNEVEN_RATIO)))
+    missed = int(np.sum(np.rint(ratio[long]) - 1))
+    return Turns(edges, good, _curvature(edges, good), missed, _count_doubles(ratio, short))
+
+
+def _ratio_to_neighbours(periods: Floats) -> Floats:
+    """Each period over the median of the (up to) seven around it; at the ends of the first and last seven."""
+    width = min(MEDIAN_TURNS, len(periods))
+    medians = np.median(np.lib.stride_tricks.sliding_window_view(periods, width), axis=1)
+    lead = (width - 1) // 2
+    at = np.clip(np.arange(len(periods)) - lead, 0, len(medians) - 1)
+    return np.asarray(periods / medians[at], np.float64)
+
+
+def _count_doubles(ratio: Floats, short: NDArray[np.bool_]) -> int:
+    """Pulses too many: in each run of short turns, how many more than the turns they add up to."""
+    marks = np.diff(np.concatenate(([False], short, [False])).astype(np.int8))
+    starts, stops = np.flatnonzero(marks == 1), np.flatnonzero(marks == -1)
+    if not len(starts):
+        return 0
+    total = np.concatenate(([0.0], np.cumsum(ratio)))
+    return int(np.sum((stops - starts) - np.rint(total[stops] - total[starts])))
+
+
+def _curvature(edges: Floats, good: NDArray[np.bool_]) -> Floats:
+    """Mean of the parabolas through (previous, own, next) edges; one of them at the ends of a stretch."""
+    curve, weight = np.zeros(len(good)), np.zeros(len(good))
+    if len(good) > 1:
+        periods = np.diff(edges)
+        both = good[:-1] & good[1:]
+        second = np.where(both, (1 / periods[1:] - 1 / periods[:-1]) / (periods[1:] + periods[:-1]), 0.0)
+        for part in (slice(0, -1), slice(1, None)):
+            curve[part] += second
+            weight[part] += both
+    return np.divide(curve, weight, out=curve, where=weight > 0)
+
+
+def turn_fractions(turns: Turns, start: int, stop: int) -> Floats:
+    """Where in its turn each sample ``start`` <= i < ``stop`` lies, in turns 0..1 from the edge.
+
+    All of these samples must lie between the first and the last edge, within one stretch of good turns."""
+    first = turns.first_samples
+    k0 = int(np.searchsorted(first, start, side="right")) - 1
+    k1 = int(np.searchsorted(first, stop, side="left"))
+    bounds = np.clip(first[k0 : k1 + 1], start, stop)
+    lengths = np.diff(bounds)
+    base = start  # positions relative to it keep their digits
+    u = np.arange(stop - start, dtype=np.float64)
+    u -= np.repeat(turns.edges[k0:k1] - base, lengths)
+    if not turns.curve[k0:k1].any():
+        return u * np.repeat(1 / turns.periods[k0:k1], lengths)
+    curve = turns.curve[k0:k1]
+    slope = 1 / turns.periods[k0:k1] - curve * turns.periods[k0:k1]
+    return u * (np.repeat(slope, lengths) + np.repeat(curve, lengths) * u)
+
+
+def angles_at(edges: Floats, positions: Floats) -> Floats:
+    """Angle in radians at any ``positions`` (sample indices) between the first and the last edge; the first
+    edge is 0, each further one 2 pi more. For tests and small arrays; ValueError outside the edges."""
+    positions = np.asarray(positions, np.float64)
+    turns = turns_of(edges)
+    if len(edges) < 2 or positions.min() < edges[0] or positions.max() > edges[-1]:
+        raise ValueError("an angle is known between the first and the last edge only")
+    k = np.clip(np.searchsorted(edges, positions, side="right") - 1, 0, len(edges) - 2)
+    t, p = positions - edges[k], turns.periods[k]
+    return 2 * np.pi * (k + t / p + turns.curve[k] * t * (t - p))
+
+
+# --- the clock -------------------------------------------------------------------------------------------
+
+
+class RevolutionClock:
+    """Speed, and whether it turns, from the newest edges of a stream. Positions are source sample indices."""
+
+    def __init__(self, rate_hz: float, *, longest_turn_s: float = 2.5) -> None:
+        self.rate_hz = rate_hz
+        self.longest_turn_s = longest_turn_s
+        """No pulse for longer than this is "no pulses", however slow it turned."""
+        self.pulses = 0
+        """Edges seen since the start."""
+        self._edges: deque[float] = deque(maxlen=MEDIAN_TURNS + 1)
+        self._now = 0.0
+
+    def restart(self) -> None:
+        """A gap in the samples: edges before it say nothing about the turn across it."""
+        self._edges.clear()
+
+    def feed(self, edges: Floats, next_sample: int) -> None:
+        """Take the edges found in samples before ``next_sample``."""
+        self._edges.extend(edges.tolist())
+        self.pulses += len(edges)
+        self._now = float(next_sample)
+
+    @property
+    def since_edge_s(self) -> float:
+        """Time from the last edge to the newest sample; inf when there is no edge."""
+        return (self._now - self._edges[-1]) / self.rate_hz if self._edges else float("inf")
+
+    @property
+    def patience_s(self) -> float:
+        """A longer wait than this means that the pulses have stopped: four turns, 0.25 s at least."""
+        if len(self._edges) < 2:
+            return self.longest_turn_s
+        turn_s = (self._edges[-1] - self._edges[-2]) / self.rate_hz
+        return min(max(4 * turn_s, 0.25), self.longest_turn_s)
+
+    @property
+    def turning(self) -> bool:
+        """True while pulses come: two or more, and the last not longer ago than ``patience_s``."""
+        return len(self._edges) >= 2 and self.since_edge_s <= self.patience_s
+
+    @property
+    def speed_hz(self) -> float | None:
+        """Speed over the newest turn that is neither too long nor too short; None when not turning."""
+        if not self.turning:
+            return None
+        turns = turns_of(np.array(self._edges))
+        good = np.flatnonzero(turns.good)
+        period = turns.periods[good[-1]] if len(good) else float(np.median(turns.periods))
+        return float(self.rate_hz / period)

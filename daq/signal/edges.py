@@ -149,8 +149,7 @@ class EdgeFinder:
         self._sign = 1.0 if params.edge == "falling" else -1.0
         self._fixed = trigger
         self._follower = None if trigger else TriggerFollower(params, rate_hz)
-        self.pulse_samples: deque[int] = deque(maxlen=64)
-        """Samples beyond the dead band after the newest edges, before the signal came back."""
+        self._lengths: dict[bool, deque[int]] = {s: deque(maxlen=64) for s in (False, True)}
         self.restart()
 
     @property
@@ -158,10 +157,16 @@ class EdgeFinder:
         """What is used now; None while there are no pulses that stand out."""
         return self._fixed or (self._follower.trigger if self._follower else None)
 
+    @property
+    def pulse_length(self) -> float:
+        """Median number of samples that the newest pulses lasted, the shorter side; inf when not known."""
+        sides = [float(np.median(lengths)) for lengths in self._lengths.values() if lengths]
+        return min(sides, default=float("inf"))
+
     def restart(self) -> None:
         """Forget the signal (a gap in the samples); the trigger stays."""
         self._armed = False
-        self._below_since: int | None = None
+        self._since: int | None = None
         self._last: float | None = None
         self._first_cross = self._last_cross = np.nan
 
@@ -237,13 +242,12 @@ class EdgeFinder:
             self._last_cross = crossings[-1]
 
     def _note_lengths(self, side: NDArray[np.bool_], where: NDArray[np.int64]) -> None:
+        """Book how long the signal stayed on each side of the dead band (True above)."""
         previous = np.concatenate(([self._armed], side[:-1]))
         for i in np.flatnonzero(previous != side):
-            if not side[i]:
-                self._below_since = int(where[i])
-            elif self._below_since is not None:
-                self.pulse_samples.append(int(where[i]) - self._below_since)
-                self._below_since = None
+            if self._since is not None:
+                self._lengths[not side[i]].append(int(where[i]) - self._since)
+            self._since = int(where[i])
 
 
 def _sides(

@@ -86,7 +86,10 @@ class RangeScan:
         np.maximum(self.high, high, out=self.high)
         if ((low <= self._lowest) | (high >= self._highest)).any():
             self._look_for_clipping(counts)
-        self._tail = counts[-(CLIP_RUN - 1) :].copy()
+        whole = counts
+        if len(counts) < CLIP_RUN - 1 and self._tail is not None:
+            whole = np.concatenate((self._tail, counts))
+        self._tail = whole[-(CLIP_RUN - 1) :].copy()
 
     def combine(self, other: RangeScan) -> None:
         """Take in what another scan saw."""
@@ -97,7 +100,8 @@ class RangeScan:
     @property
     def flat(self) -> NDArray[np.bool_]:
         """Shape (probes,): nothing moves."""
-        return (self.high >= self.low) & (self.high - self.low <= FLAT_COUNTS)
+        spread = self.high - self.low
+        return np.asarray((spread >= 0) & (spread <= FLAT_COUNTS))
 
     def _look_for_clipping(self, counts: NDArray[Any]) -> None:
         whole = counts if self._tail is None else np.concatenate((self._tail, counts))
@@ -116,7 +120,7 @@ def probe_flags(
     residual_sd: Floats,
     min_signal_to_noise: float,
 ) -> list[str]:
-    """Flags of the probes; ``gap_v``, ``amplitude`` of 1X (0-peak) and ``residual_sd`` have shape (probes,)."""
+    """Flags of the probes; ``gap_v``, 1X ``amplitude`` (0-peak) and ``residual_sd`` have shape (probes,)."""
     found = []
     for i, c in enumerate(channels):
         out = (c.gap_low_v is not None and gap_v[i] < c.gap_low_v) or (

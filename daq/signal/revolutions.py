@@ -7,6 +7,7 @@ is biased on ramps (METHODS 8.8). All positions are sample indices.
 from __future__ import annotations
 
 from collections import deque
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -34,10 +35,18 @@ class Turns:
     """Shape (n - 1,): a whole single turn."""
     curve: Floats
     """Shape (n - 1,): second divided difference of the turn count, turns per sample squared."""
-    missed: int
-    """Pulses that did not come."""
-    doubles: int
-    """Pulses too many."""
+    missed_in: NDArray[np.int64]
+    """Shape (n - 1,): pulses that did not come in each turn."""
+    doubles_in: NDArray[np.int64]
+    """Shape (n - 1,): pulses too many, booked to the last of the turns they cut."""
+
+    @property
+    def missed(self) -> int:
+        return int(self.missed_in.sum())
+
+    @property
+    def doubles(self) -> int:
+        return int(self.doubles_in.sum())
 
     @property
     def periods(self) -> Floats:
@@ -66,18 +75,20 @@ class Turns:
             self.edges[first : stop + 1],
             self.good[first:stop],
             self.curve[first:stop],
-            self.missed,
-            self.doubles,
+            self.missed_in[first:stop],
+            self.doubles_in[first:stop],
         )
 
 
-def turns_of(edges: Floats) -> Turns:
+def turns_of(edges: Floats, breaks: Sequence[int] = ()) -> Turns:
     """Turns between ``edges`` (ascending sample indices), judged against the median of their neighbours.
 
-    A turn over 1.6 times the median has missed pulses in it; under 0.6 times it is cut by a double pulse."""
+    A turn over 1.6 times the median has missed pulses in it; under 0.6 times it is cut by a double pulse.
+    ``breaks`` are samples before which others were lost: a turn across one is not good either."""
     edges = np.asarray(edges, np.float64)
     if len(edges) < 2:
-        return Turns(edges, np.zeros(0, bool), np.zeros(0), 0, 0)
+        none = np.zeros(0, np.int64)
+        return Turns(edges, np.zeros(0, bool), np.zeros(0), none, none)
     ratio = _ratio_to_neighbours(np.diff(edges))
     long = ratio > MISSED_RATIO
     short = ratio < DOUBLE_RATIO
@@ -85,7 +96,9 @@ def turns_of(edges: Floats) -> Turns:
     beside[1:] |= short[:-1]
     beside[:-1] |= short[1:]
     good = ~(long | short | (beside & (ratio < UNEVEN_RATIO)))
-    missed = int(np.sum(np.rint(ratio[long]) - 1))
+    for sample in breaks:
+        good[max(0, int(np.searchsorted(edges, sample)) - 1) : np.searchsorted(edges, sample)] = False
+    missed = np.where(long, np.rint(ratio) - 1, 0).astype(np.int64)
     return Turns(edges, good, _curvature(edges, good), missed, _count_doubles(ratio, short))
 
 
@@ -98,14 +111,15 @@ def _ratio_to_neighbours(periods: Floats) -> Floats:
     return np.asarray(periods / medians[at], np.float64)
 
 
-def _count_doubles(ratio: Floats, short: NDArray[np.bool_]) -> int:
+def _count_doubles(ratio: Floats, short: NDArray[np.bool_]) -> NDArray[np.int64]:
     """Pulses too many: in each run of short turns, how many more than the turns they add up to."""
+    extra = np.zeros(len(ratio), np.int64)
     marks = np.diff(np.concatenate(([False], short, [False])).astype(np.int8))
     starts, stops = np.flatnonzero(marks == 1), np.flatnonzero(marks == -1)
-    if not len(starts):
-        return 0
-    total = np.concatenate(([0.0], np.cumsum(ratio)))
-    return int(np.sum((stops - starts) - np.rint(total[stops] - total[starts])))
+    if len(starts):
+        total = np.concatenate(([0.0], np.cumsum(ratio)))
+        extra[stops - 1] = (stops - starts) - np.rint(total[stops] - total[starts]).astype(np.int64)
+    return extra
 
 
 def _curvature(edges: Floats, good: NDArray[np.bool_]) -> Floats:

@@ -7,7 +7,7 @@ the three-parameter sine fit of IEEE 1057 (METHODS 8.1) with more orders beside 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 from typing import Any
@@ -107,6 +107,17 @@ class Accumulator:
         self._square = self._square + other._square + 2 * shift * sums + other.samples * shift**2
         self.samples += other.samples
 
+    def only(self, orders: Sequence[int]) -> Accumulator:
+        """The same sums with some of the orders left out."""
+        if tuple(orders) == self.orders:
+            return self
+        at = [self.orders.index(k) for k in orders]
+        rows = np.array([0, *(r for k in at for r in (1 + 2 * k, 2 + 2 * k))])
+        kept = Accumulator(orders)
+        kept.samples, kept._reference, kept._square = self.samples, self._reference, self._square
+        kept._gram, kept._cross = self._gram[np.ix_(rows, rows)], self._cross[rows]
+        return kept
+
     def solve(self) -> Fit | None:
         """The fit; None with fewer samples than twice the unknowns or angles that do not tell them apart."""
         size = len(self._gram)
@@ -114,7 +125,7 @@ class Accumulator:
             return None
         if np.linalg.cond(self._gram) > 1e8:
             return None
-        inverse: Floats = np.linalg.inv(self._gram)
+        inverse = np.asarray(np.linalg.inv(self._gram), np.float64)
         found = np.linalg.solve(self._gram, self._cross)
         rss = np.maximum(0.0, self._square - np.einsum("ij,ij->j", found, self._cross))
         variance = rss / (self.samples - size)
@@ -157,14 +168,13 @@ def pieces(start: int, stop: int) -> list[tuple[int, int]]:
     return list(pairwise([*range(start, stop, PIECE_FRAMES), stop]))
 
 
-def add_turns(into: Accumulator, turns: Turns, counts: NDArray[Any], first_sample: int = 0) -> None:
-    """Add the samples of all good turns. ``counts`` (frames, probes) starts at sample ``first_sample`` and
-    holds them all."""
+def turn_pieces(turns: Turns) -> Iterator[tuple[Floats, int, int]]:
+    """All samples in good turns, piece by piece: (fractions of a turn, first sample, stop sample)."""
     bounds = turns.first_samples
     for first, stop in turns.stretches():
         stretch = turns.part(first, stop)
         for a, b in pieces(int(bounds[first]), int(bounds[stop])):
-            into.add(turn_fractions(stretch, a, b), counts[a - first_sample : b - first_sample])
+            yield turn_fractions(stretch, a, b), a, b
 
 
 # --- the covariance that is stated ----------------------------------------------------------------------

@@ -1,0 +1,208 @@
+"""Live 1X of short blocks: fed with the stream, gives one fit per block of whole turns.
+
+What is stored comes from ``daq.signal.measure`` over the whole window; these blocks tell whether and when the
+window is worth it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daq.signal.edges import EdgeFinder
+from daq.signal.health import RangeScan, probe_flags, pulse_flags
+from daq.signal.revolutions import MEDIAN_TURNS, RevolutionClock, Turns, turn_fractions, turns_of
+from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams
+from daq.signal.vectors import Accumulator, Fit, pieces
+
+SPEED_STEP_S = 0.1
+"""Shortest time over which a speed is taken: jitter of the edges is not hunting."""
+LEAD_S = 0.1
+"""Samples kept while there is no edge: a slow edge is confirmed after it has passed."""
+
+
+def usable_orders(orders: Sequence[int], samples_per_turn: float) -> tuple[int, ...]:
+    """Those of ``orders`` that the sampling can tell: at least 2.2 samples in each of their periods."""
+    return tuple(k for k in orders if samples_per_turn >= 2.2 * k)
+
+
+def speed_spread_hz(periods: Floats, rate_hz: float) -> float:
+    """Standard deviation of the speed over steps of ``SPEED_STEP_S`` or one turn; ``periods`` in samples."""
+    if len(periods) < 2:
+        return 0.0
+    step = max(1, int(np.ceil(SPEED_STEP_S * rate_hz / np.median(periods))))
+    steps = len(periods) // step
+    if steps < 2:
+        return 0.0
+    lengths = periods[: steps * step].reshape(steps, step).sum(axis=1)
+    return float(np.std(step * rate_hz / lengths, ddof=1))
+
+
+class BlockFitter:
+    """Turns a stream of counts into :class:`BlockFit` s, each of whole turns over ``block_s`` or more.
+
+    A turn is worked on once the edge after its end is known, so that the result does not hang on how the
+    stream is cut. A new segment, or samples that do not follow each other, start everything anew.
+    """
+
+    def __init__(
+        self,
+        pulse: PulseParams,
+        channels: Sequence[ChannelParams],
+        rate_hz: float,
+        *,
+        block_s: float,
+        orders: Sequence[int] = (1, 2, 3),
+        min_signal_to_noise: float = 3.0,
+        longest_turn_s: float = 2.5,
+    ) -> None:
+        self.channels = tuple(channels)
+        self.rate_hz = rate_hz
+        self.block_s = block_s
+        self.finder = EdgeFinder(pulse, rate_hz)
+        self.clock = RevolutionClock(rate_hz, longest_turn_s=longest_turn_s)
+        """Speed and turning, as of the newest sample fed."""
+        self._orders = tuple(orders)
+        self._min_signal_to_noise = min_signal_to_noise
+        self._scale = np.array([c.units_per_count for c in self.channels])
+        self._volts = np.array([c.volts_per_count for c in self.channels])
+        self._skew_s = np.array([c.skew_s for c in self.channels])
+        self._segment: int | None = None
+        self._next = 0
+        self._edges: Floats = np.empty(0)
+        self._forget()
+
+    def feed(self, counts: NDArray[Any], first_sample: int, segment: int = 0) -> list[BlockFit]:
+        """Take (frames, 1 + probes) counts; the blocks completed by them, oldest first."""
+        if segment != self._segment or first_sample != self._next:
+            self.finder.restart()
+            self.clock.restart()
+            self._forget()
+        self._segment, self._next = segment, first_sample + len(counts)
+        self._chunks.append((first_sample, counts))
+        edges = self.finder.feed(counts[:, 0], first_sample)
+        self.clock.feed(edges, self._next)
+        self._edges = np.concatenate((self._edges, edges))
+        done = list(self._work()) if len(edges) else []
+        if len(self._edges) and not self._patient():
+            self._forget()
+        self._trim()
+        return done
+
+    # --- state -------------------------------------------------------------------------------------------
+
+    def _forget(self) -> None:
+        """No edges, no samples, no block begun."""
+        self._edges = np.empty(0)
+        self._at = 0
+        self._chunks: list[tuple[int, NDArray[Any]]] = []
+        self._missed = self._doubles = 0
+        self._begin_block()
+
+    def _begin_block(self) -> None:
+        self._sums = Accumulator(self._orders)
+        self._scan = RangeScan(self.channels)
+        self._periods: list[Floats] = []
+        self._start: float | None = None
+
+    def _patient(self) -> bool:
+        return self.clock.since_edge_s <= self.clock.patience_s
+
+    def _trim(self) -> None:
+        """Drop the samples and the edges that nothing will ask for again."""
+        extra = self._at - MEDIAN_TURNS
+        if extra > 0:
+            self._edges = self._edges[extra:]
+            self._at -= extra
+        needed = self._edges[self._at] if len(self._edges) else self._next - LEAD_S * self.rate_hz
+        while self._chunks and self._chunks[0][0] + len(self._chunks[0][1]) <= needed:
+            del self._chunks[0]
+
+    # --- work --------------------------------------------------------------------------------------------
+
+    def _work(self) -> Iterator[BlockFit]:
+        """Work on all turns that are ready: those with an edge known after their end."""
+        turns = turns_of(self._edges)
+        ready = len(self._edges) - 2
+        held = self._chunks[0][0]
+        while self._at < ready and turns.first_samples[self._at] < held:
+            self._at += 1
+        while self._at < ready:
+            if self._start is None:
+                self._start = float(self._edges[self._at])
+            due = self._start + self.block_s * self.rate_hz
+            stop = self._at + 1 + int(np.searchsorted(self._edges[self._at + 1 : ready], due))
+            stop = min(stop, ready)
+            self._take(turns.part(self._at, stop))
+            self._at = stop
+            if self._edges[stop] >= due:
+                fit = self._finish(float(self._edges[stop]))
+                self._begin_block()
+                if fit is not None:
+                    yield fit
+
+    def _take(self, turns: Turns) -> None:
+        self._missed += turns.missed
+        self._doubles += turns.doubles
+        self._periods.append(turns.periods[turns.good])
+        bounds = turns.first_samples
+        for first, stop in turns.stretches():
+            stretch = turns.part(first, stop)
+            for start, counts in self._samples(int(bounds[first]), int(bounds[stop])):
+                self._sums.add(turn_fractions(stretch, start, start + len(counts)), counts)
+                self._scan.add(counts)
+
+    def _samples(self, start: int, stop: int) -> Iterator[tuple[int, NDArray[Any]]]:
+        """Probe counts of samples ``start`` to ``stop`` in pieces, each with its first sample."""
+        for at, counts in self._chunks:
+            for a, b in pieces(max(start, at), min(stop, at + len(counts))):
+                yield a, counts[a - at : b - at, 1:]
+
+    def _finish(self, end: float) -> BlockFit | None:
+        periods = np.concatenate(self._periods)
+        fit = self._solved(periods)
+        if fit is None or self._start is None:
+            return None
+        speed_hz = len(periods) * self.rate_hz / float(periods.sum())
+        block = self._block(fit, speed_hz, self._start, end, periods)
+        self._missed = self._doubles = 0
+        return block
+
+    def _solved(self, periods: Floats) -> Fit | None:
+        if not len(periods):
+            return None
+        orders = usable_orders(self._orders, float(np.median(periods)))
+        return self._sums.only(orders).solve() if 1 in orders else None
+
+    def _block(self, fit: Fit, speed_hz: float, start: float, end: float, periods: Floats) -> BlockFit:
+        size = np.abs(self._scale)
+        white = fit.cov[fit.orders.index(1)]
+        vectors = fit.value(1) * self._scale * np.exp(2j * np.pi * speed_hz * self._skew_s)
+        gap_v = fit.offset * self._volts
+        residual_sd = fit.residual_sd * size
+        flags = pulse_flags(
+            self._missed, self._doubles, self.finder.pulse_length, self.rate_hz / speed_hz
+        ) + probe_flags(
+            self.channels, self._scan, gap_v, np.abs(vectors), residual_sd, self._min_signal_to_noise
+        )
+        return BlockFit(
+            segment=self._segment or 0,
+            first_sample=int(np.ceil(start)),
+            stop_sample=int(np.ceil(end)),
+            t_start_s=start / self.rate_hz,
+            t_end_s=end / self.rate_hz,
+            revolutions=len(periods),
+            speed_hz=speed_hz,
+            speed_sd_hz=speed_spread_hz(periods, self.rate_hz),
+            vectors=vectors,
+            se=np.sqrt(np.trace(white, axis1=1, axis2=2) / 2) * size,
+            residual_sd=residual_sd,
+            ac_rms=fit.ac_rms * size,
+            gap_v=gap_v,
+            missed=self._missed,
+            doubles=self._doubles,
+            flags=tuple(flags),
+        )

@@ -62,9 +62,13 @@ def user_runtime_folder(env: Mapping[str, str] = os.environ) -> Path:
     """``revmark`` in the user's own runtime folder (XDG_RUNTIME_DIR where it is set)."""
     if sys.platform != "win32" and env.get("XDG_RUNTIME_DIR"):
         return Path(env["XDG_RUNTIME_DIR"]) / "revmark"
+    import warnings
+
     import platformdirs
 
-    return platformdirs.user_runtime_path("revmark", appauthor=False)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # that the session has no runtime folder is what is asked for here
+        return platformdirs.user_runtime_path("revmark", appauthor=False)
 
 
 def _is_ours(folder: Path) -> bool:

@@ -45,13 +45,14 @@ def sentences(error: ValidationError, model: type[BaseModel], prefix: str = "") 
     for item in error.errors(include_url=False):
         if item["type"] == "too_short" and len(item["input"]) >= item["ctx"]["min_length"]:
             continue  # pydantic counts sound items only; the unsound ones are listed by themselves
-        key = ".".join(str(part + 1) if isinstance(part, int) else part for part in item["loc"])
-        found.append((".".join(filter(None, (prefix, key))) or "(file)", _sentence(item, model)))
+        loc = tuple(_as_typed(model, item["loc"]))
+        key = ".".join(str(part + 1) if isinstance(part, int) else part for part in loc)
+        found.append((".".join(filter(None, (prefix, key))) or "(file)", _sentence(item, model, loc)))
     return found
 
 
-def _sentence(item: ErrorDetails, model: type[BaseModel]) -> str:
-    kind, loc = item["type"], item["loc"]
+def _sentence(item: ErrorDetails, model: type[BaseModel], loc: tuple[int | str, ...]) -> str:
+    kind = item["type"]
     owner, field = _find(model, loc)
     if kind == "missing":
         return _missing(field)
@@ -126,6 +127,14 @@ def _model_in(annotation: Any) -> type[BaseModel] | None:
     if get_origin(annotation) in (tuple, list, Union, UnionType):
         return next(filter(None, map(_model_in, get_args(annotation))), None)
     return None
+
+
+def _as_typed(model: type[BaseModel], loc: tuple[int | str, ...]) -> Iterator[int | str]:
+    """``loc`` with keys as typed: of a default that does not fit, pydantic gives the field's inner name."""
+    for depth, part in enumerate(loc):
+        owner, _ = _find(model, loc[: depth + 1])
+        field = owner.model_fields.get(part) if isinstance(part, str) else None
+        yield field.alias if field and field.alias else part
 
 
 def _find(model: type[BaseModel], loc: tuple[int | str, ...]) -> tuple[type[BaseModel], FieldInfo | None]:

@@ -164,7 +164,7 @@ class Channel(Section):
             raise wrong(str(error)) from error
         kind = info.data.get("kind", found.kind)
         if found.kind != kind:
-            raise wrong(f"{text!r} is the sensitivity of a {found.kind} probe, but kind is {kind!r}.")
+            raise wrong(f"{text!r} is the sensitivity for {found.kind}, but kind is {kind!r}.")
         return found.volts_per_unit
 
     @field_validator("gap_limits_v")

@@ -10,7 +10,8 @@ from pydantic import ValidationError
 
 def sentences(error: ValidationError, known: Iterable[str] = ()) -> list[tuple[str, str]]:
     """(dotted key, sentence) for each mistake; ``known`` keys are offered for a misspelt one."""
-    return [(_key(item["loc"]), _sentence(item, tuple(known))) for item in error.errors(include_url=False)]
+    keys = tuple(known)
+    return [(_key(item["loc"]), _sentence(item, keys)) for item in error.errors(include_url=False)]
 
 
 def did_you_mean(word: str, known: Iterable[str]) -> str:

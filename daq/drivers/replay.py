@@ -17,6 +17,7 @@ from config.errors import BadQuantity, DriverError, Refusal
 from config.units import parse_quantity
 from daq.drivers.base import Chunk, Driver, DriverOptions, EndOfSource, Samples, SourceInfo
 from daq.drivers.csvfile import CsvRecording
+from daq.drivers.pace import FAST, PaceOrFast
 from daq.drivers.wav import WavRecording
 
 RATE_TOLERANCE = 1e-6
@@ -55,7 +56,8 @@ class ReplayOptions(DriverOptions):
     """Played in this order, one per ``next``; relative to the stand file's folder."""
     full_scale: Annotated[float, BeforeValidator(_volts)]
     """Volts, written "30 V": what the highest count means; for CSV the ends of the range."""
-    pace: Literal["real", "fast"] | Annotated[float, Field(gt=0, le=1000)] = "real"
+    pace: PaceOrFast = 1.0
+    """"real", "fast" or recorded seconds per second."""
     rate_hz: Annotated[float, Field(gt=0)] | None = None
     """Expected; None = as the first file that can be read says."""
     bits: Literal[16, 24, 32] | None = None
@@ -86,7 +88,7 @@ class ReplayDriver(Driver[ReplayOptions]):
     verbs = ("next",)
 
     def _prepare(self) -> None:
-        self.paces_itself = self.options.pace != "fast"
+        self.paces_itself = self.options.pace != FAST
         self._next_file = 0
         self._playing: Recording | None = None
 
@@ -103,7 +105,7 @@ class ReplayDriver(Driver[ReplayOptions]):
             volts_per_count=(self.options.full_scale / full,) * columns,
             full_scale_counts=(-full, full - 1),
             origin="replayed",
-            description=f"replay of {len(self.options.files)} files, pace {self.options.pace}",
+            description=f"replay of {len(self.options.files)} files, {self._pace_words()}",
         )
 
     def _read(self, timeout_s: float) -> Chunk | EndOfSource | None:
@@ -134,8 +136,7 @@ class ReplayDriver(Driver[ReplayOptions]):
         return self._frames if frames is None else min(self._frames, frames - self._at)
 
     def _due_s(self, sample: int) -> float:
-        pace = self.options.pace if isinstance(self.options.pace, float) else 1.0
-        return self._origin_s + sample / (self._rate_hz * pace)
+        return self._origin_s + sample / (self._rate_hz * self.options.pace)
 
     def _next_chunk(self) -> Chunk | EndOfSource | None:
         playing = self._playing
@@ -163,6 +164,9 @@ class ReplayDriver(Driver[ReplayOptions]):
         if self._playing is not None:
             self._playing.close()
         self._playing = None
+
+    def _pace_words(self) -> str:
+        return f"{self.options.pace:g} times real pace" if self.paces_itself else "as fast as it is read"
 
     # --- files ---------------------------------------------------------------------------------------
 

@@ -96,7 +96,7 @@ class SimulatedDriver(Driver[SimulatedOptions]):
             volts_per_count=(self._painter.volts_per_count,) * columns,
             full_scale_counts=(-FULL_COUNTS, FULL_COUNTS - 1),
             origin="simulated",
-            description=f"simulated rotor, seed {options.seed}, {options.pace_factor:g} times real pace",
+            description=f"simulated rotor, seed {options.seed}, {options.pace:g} times real pace",
         )
 
     def _read(self, timeout_s: float) -> Chunk | EndOfSource | None:
@@ -121,7 +121,7 @@ class SimulatedDriver(Driver[SimulatedOptions]):
     @property
     def _per_s(self) -> float:
         """Samples in one second of the clock."""
-        return self.options.rate_hz * self.options.pace_factor
+        return self.options.rate_hz * self.options.pace
 
     def _begin(self, now_s: float) -> None:
         self._origin_s, self._origin = now_s, self._at

@@ -7,6 +7,7 @@ from typing import Annotated, Literal
 from pydantic import Field, model_validator
 
 from daq.drivers.base import DriverOptions
+from daq.drivers.pace import Pace
 from daq.drivers.rotor import RigidRotor
 
 Above0 = Annotated[float, Field(gt=0)]
@@ -56,8 +57,8 @@ class FaultOptions(DriverOptions):
 class SimulatedOptions(DriverOptions):
     rate_hz: Annotated[float, Field(ge=1000, le=204800)] = 12800.0
     block_s: Annotated[float, Field(ge=0.01, le=1.0)] = 0.1
-    pace: Literal["real"] | Annotated[float, Field(gt=0, le=1000)] = "real"
-    """Stream seconds per second."""
+    pace: Pace = 1.0
+    """"real" or stream seconds per second."""
     full_scale_v: Above0 = 30.0
     seed: Annotated[int, Field(ge=0)] = 1
 
@@ -106,7 +107,3 @@ class SimulatedOptions(DriverOptions):
         if self.initial_times[0] > self.initial_times[1]:
             raise ValueError("initial_times must be written least first")
         return self
-
-    @property
-    def pace_factor(self) -> float:
-        return 1.0 if self.pace == "real" else self.pace

@@ -31,15 +31,15 @@ class Address:
     store: str
     port: int
     token: str
-    socket: str | None
+    unix: str | None
 
     def connect(self) -> socket.socket:
         """A connected socket. Raises OSError when nobody answers."""
-        if self.socket and hasattr(socket, "AF_UNIX"):
+        if self.unix and hasattr(socket, "AF_UNIX"):
             link = socket.socket(socket.AF_UNIX, socket.SOCK_STREAM)
             try:
                 link.settimeout(CONNECT_S)
-                link.connect(self.socket)
+                link.connect(self.unix)
             except OSError:
                 link.close()
             else:
@@ -166,8 +166,8 @@ def _unpack(status: int, body: bytes, address: Address) -> Any:
     low, high = told.get("protocol", [0, 0])
     if not low <= PROTOCOL <= high:
         raise DaemonError(
-            f"The daemon of {address.stand} is version {told.get('version', '?')} and speaks protocol {low} to {high}, "
-            f"this command {PROTOCOL}.",
+            f"The daemon of {address.stand} is version {told.get('version', '?')} and speaks protocol "
+            f"{low} to {high}, this command {PROTOCOL}.",
             "Restart the daemon with the revmark installed now.",
         )
     if status >= 400:

@@ -69,7 +69,13 @@ def list_(stand: str | None, *, as_json: bool) -> None:
         print_json(machines)
         return
     rows = [
-        (m["machine"], m["model"], f"{m['rotor_mass_kg']:g}", f"{m['service_rpm']:.0f}", finite(m["grade_mm_s"]))
+        (
+            m["machine"],
+            m["model"],
+            f"{m['rotor_mass_kg']:g}",
+            f"{m['service_rpm']:.0f}",
+            finite(m["grade_mm_s"]),
+        )
         for m in machines
     ]
     say(table(rows, ["machine", "model", "rotor kg", "service r/min", "grade G"], "llrrr"))
@@ -93,10 +99,9 @@ def show(serial: str, stand: str | None, *, as_json: bool) -> None:
 
 
 def _described(machine: dict[str, Any]) -> list[str]:
-    lines = [
-        f"machine {clean(machine['machine'])}, model {clean(machine['model'])}, revision {machine['revision']}: "
-        f"rotor {machine['rotor_mass_kg']:g} kg, service speed {machine['service_rpm']:.0f} r/min"
-    ]
+    what = f"machine {clean(machine['machine'])}, model {clean(machine['model'])}"
+    speed = f"service speed {machine['service_rpm']:.0f} r/min"
+    lines = [f"{what}, revision {machine['revision']}: rotor {machine['rotor_mass_kg']:g} kg, {speed}"]
     if machine["grade_mm_s"] is not None:
         lines.append(f"  balance grade G {machine['grade_mm_s']:g}")
     if machine["permissible_gmm"] is not None:
@@ -104,6 +109,8 @@ def _described(machine: dict[str, Any]) -> list[str]:
     if machine["first_critical_rpm"] is not None:
         lines.append(f"  first critical speed {machine['first_critical_rpm']:.0f} r/min")
     for plane in machine["planes"]:
-        holes = f"{plane['holes']} holes numbered {clean(plane['numbered'])}" if plane["holes"] else "any angle"
+        holes = (
+            f"{plane['holes']} holes numbered {clean(plane['numbered'])}" if plane["holes"] else "any angle"
+        )
         lines.append(f"  plane {plane['plane']}: radius {plane['radius_mm']:g} mm, {holes}")
     return lines

@@ -8,6 +8,7 @@ from __future__ import annotations
 import importlib
 import os
 import sys
+
 import click
 
 from config.errors import RevmarkError
@@ -19,7 +20,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "demo": ("cli.demo:command", "A whole balance job by itself, on the simulated stand."),
     "job": ("cli.job:group", "Jobs: one visit of one machine to the stand."),
     "machine": ("cli.machine:group", "Machines and their models."),
-    "mark": ("cli.mark:command", "Label a run's reading: O, O+T, check, trim or slow-roll."),
+    "mark": ("cli.mark:command", "Label a run's reading: O, O+T, check, trim, slow-roll."),
     "mount": ("cli.mount:command", "Say which machine stands on the stand, and how."),
     "plot": ("cli.plot:group", "Pictures of a job."),
     "run": ("cli.run:group", "Runs and their readings."),
@@ -32,7 +33,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
 }
 
 EPILOG = (
-    "Exit codes: 0 done, 1 refused or failed, 2 typed wrong; serve also 75 (try again) and 78 (configuration). "
+    "Exit codes: 0 done, 1 refused or failed, 2 typed wrong; serve also 75 (try again), 78 (configuration). "
     "revmark logs and computes; it is no machine protection system."
 )
 
@@ -40,10 +41,10 @@ EPILOG = (
 class LazyGroup(click.Group):
     """A group whose commands are imported when they are asked for (Click's manual, "Lazily Loading")."""
 
-    def list_commands(self, ctx: click.Context) -> list[str]:
+    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002
         return sorted(COMMANDS)
 
-    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:  # noqa: ARG002
         if cmd_name not in COMMANDS:
             return None
         module, _, name = COMMANDS[cmd_name][0].partition(":")
@@ -57,15 +58,13 @@ class LazyGroup(click.Group):
     def resolve_command(
         self, ctx: click.Context, args: list[str]
     ) -> tuple[str | None, click.Command | None, list[str]]:
-        try:
-            return super().resolve_command(ctx, args)
-        except click.UsageError as error:
+        if args and args[0] not in COMMANDS and not args[0].startswith("-"):
             import difflib
 
             near = difflib.get_close_matches(args[0], COMMANDS, 1)
-            if near:
-                error.message += f" Did you mean {near[0]!r}?"
-            raise
+            hint = f" Did you mean {near[0]!r}?" if near else ""
+            raise click.UsageError(f"There is no command {args[0]!r}.{hint}", ctx)
+        return super().resolve_command(ctx, args)
 
 
 @click.group(cls=LazyGroup, epilog=EPILOG, context_settings={"max_content_width": 80})

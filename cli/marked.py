@@ -21,7 +21,8 @@ def print_marked(answer: Json) -> None:
     reading = answer["reading"]
     say(
         f"{mark['label']} is run {clean(mark['run'])}, reading {mark['reading']}: "
-        f"{reading['speed_rpm']:.1f} r/min, {reading['revolutions']} revolutions in {reading['duration_s']:.1f} s"
+        f"{reading['speed_rpm']:.1f} r/min, {reading['revolutions']} revolutions "
+        f"in {reading['duration_s']:.1f} s"
     )
     say(vector_table(reading["vectors"], answer.get("show")))
     for text in answer.get("flag_texts", []):

@@ -75,10 +75,8 @@ def _body(machine: str, operator: str, told: Mapping[str, Any]) -> dict[str, Any
 
 
 def _described(mount: Mapping[str, Any], told: Mapping[str, Any]) -> list[str]:
-    lines = [
-        f"{clean(mount['machine'])} (model {clean(mount['model'])}) is mounted for job {clean(mount['job'])}, "
-        f"turning {clean(mount['rotation'])}."
-    ]
+    what = f"{clean(mount['machine'])} (model {clean(mount['model'])})"
+    lines = [f"{what} is mounted for job {clean(mount['job'])}, turning {clean(mount['rotation'])}."]
     fitted = "clean" if told["is_clean"] else f"{len(told['fitted'])} weights listed"
     lines.append(f"Fitted already: {'as in its last mount' if told['carry_over'] else fitted}.")
     for mark in mount["marks"]:

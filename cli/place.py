@@ -23,7 +23,9 @@ def store_path(stand: str | None) -> Path:
     try:
         return Path(find(None).store)
     except DaemonError as error:
-        raise DaemonError(error.cause, f"Name the stand whose store to read: --stand FILE. {START_IT}") from error
+        raise DaemonError(
+            error.cause, f"Name the stand whose store to read: --stand FILE. {START_IT}"
+        ) from error
 
 
 @contextmanager

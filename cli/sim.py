@@ -25,7 +25,7 @@ def _act(stand: str | None, verb: str, body: dict[str, Any], *, as_json: bool) -
 
 @group.command()
 @stand_option
-@click.option("--rpm", metavar="SPEED", help='Speed to run up to, such as 1500; default: the stand file\'s.')
+@click.option("--rpm", metavar="SPEED", help="Speed to run up to, such as 1500; default: the stand file's.")
 @json_option
 def start(stand: str | None, rpm: str | None, *, as_json: bool) -> None:
     """Run the simulated rotor up, with the weights fitted now."""

@@ -55,5 +55,7 @@ def _lines(answer: Json) -> list[str]:
 
 
 def _live_table(vectors: list[Json]) -> str:
-    rows = [(v["channel"], f"{v['amplitude_pk']:.3f}", f"{v['unit']} pk", f"{v['lag_deg']:.1f}") for v in vectors]
+    rows = [
+        (v["channel"], f"{v['amplitude_pk']:.3f}", f"{v['unit']} pk", f"{v['lag_deg']:.1f}") for v in vectors
+    ]
     return table(rows, ["channel", "1X now", "unit", "lag deg"], "lrlr")

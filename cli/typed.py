@@ -14,7 +14,7 @@ SENSE = re.compile(r"^(clockwise|counterclockwise|cw|ccw)\s+(?:seen\s+)?from\s+(
 SENSE_EXAMPLE = 'Write for example "clockwise from drive".'
 
 
-class Quantity(click.ParamType):
+class Quantity(click.ParamType[Any]):
     """A number with its unit, in the base unit of its measure."""
 
     def __init__(self, measure: Measure, minimum: float | None = None) -> None:
@@ -43,7 +43,7 @@ class Speed(Quantity):
         return super().convert(value, param, ctx)
 
 
-class SenseType(click.ParamType):
+class SenseType(click.ParamType[Any]):
     """``clockwise from drive`` as {turn, seen_from}."""
 
     name = "sense"
@@ -66,8 +66,8 @@ def parse_sense(text: str) -> dict[str, str]:
     return {"turn": turn, "seen_from": found.group(2)}
 
 
-class PlaneType(click.ParamType):
-    """``"1: radius 140mm, holes 24, at -220mm, numbered clockwise from drive"`` as the control channel's plane."""
+class PlaneType(click.ParamType[Any]):
+    """``"1: radius 140mm, holes 24, at -220mm, numbered clockwise from drive"`` as the daemon takes it."""
 
     name = "plane"
     example = 'Write for example "1: radius 140mm, holes 24, at -220mm, numbered clockwise from drive".'
@@ -100,7 +100,7 @@ class PlaneType(click.ParamType):
         }
 
 
-class PieceType(click.ParamType):
+class PieceType(click.ParamType[Any]):
     """``"plane 1 hole 3 2.1g"`` or ``"plane 1 at 40deg 2.1g"`` as the control channel's piece."""
 
     name = "piece"
@@ -122,7 +122,7 @@ class PieceType(click.ParamType):
             self.fail(str(error), param, ctx)
 
 
-class RotorMarkType(click.ParamType):
+class RotorMarkType(click.ParamType[Any]):
     """``7.5deg`` for every plane, or ``1=7.5deg`` for one: angle from hole 1, counted as the holes are."""
 
     name = "angle"

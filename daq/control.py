@@ -79,7 +79,9 @@ class Question:
 class Gate:
     """Pure ASGI middleware: refuses what does not come from our own command line."""
 
-    def __init__(self, app: ASGIApp, token: str, hosts: Callable[[], frozenset[str]], identity: Identity) -> None:
+    def __init__(
+        self, app: ASGIApp, token: str, hosts: Callable[[], frozenset[str]], identity: Identity
+    ) -> None:
         self._app = app
         self._token = token
         self._hosts = hosts
@@ -220,7 +222,11 @@ class PeerProtocol(H11Protocol):
 
     def connection_made(self, transport: Transport) -> None:  # type: ignore[override]
         link = transport.get_extra_info("socket")
-        if link is not None and link.family == getattr(socket, "AF_UNIX", None) and hasattr(socket, "SO_PEERCRED"):
+        if (
+            link is not None
+            and link.family == getattr(socket, "AF_UNIX", None)
+            and hasattr(socket, "SO_PEERCRED")
+        ):
             packed = link.getsockopt(socket.SOL_SOCKET, socket.SO_PEERCRED, struct.calcsize("3i"))
             self.app_state = {**self.app_state, "peer_uid": struct.unpack("3i", packed)[1]}
         super().connection_made(transport)
@@ -270,4 +276,3 @@ def loopback_socket() -> socket.socket:
     link.bind(("127.0.0.1", 0))
     link.listen(64)
     return link
-

@@ -24,8 +24,7 @@ from daq.analysis import Analysis
 from daq.board import Board
 from daq.clock import Clock, SystemClock
 from daq.control import Identity, application, loopback_socket, serve_control
-from daq.drivers.base import Driver
-from daq.drivers.registry import make_driver
+from daq.drivers.registry import AnyDriver, make_driver
 from daq.interface import acts, questions
 from daq.pump import Pump
 from daq.recorder import Recorder
@@ -101,7 +100,7 @@ def _give_store(path: Path, access: Access) -> None:
 class Daemon:
     """Builds the parts, runs them, and takes them down in order."""
 
-    def __init__(self, stand: Stand, ledger: Ledger, driver: Driver, access: Access, clock: Clock) -> None:
+    def __init__(self, stand: Stand, ledger: Ledger, driver: AnyDriver, access: Access, clock: Clock) -> None:
         self._stand = stand
         self._ledger = ledger
         self._access = access

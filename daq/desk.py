@@ -44,7 +44,9 @@ def refuse_if_turning(board: Board, what: str) -> None:
     live = board.read()
     if live.state is StandState.TURNING:
         speed = f" ({live.speed_hz * 60:.0f} r/min)" if live.speed_hz else ""
-        raise Refusal(f"The rotor is turning{speed}; {what} is refused.", "Run it down and lock it out first.")
+        raise Refusal(
+            f"The rotor is turning{speed}; {what} is refused.", "Run it down and lock it out first."
+        )
     if live.state is StandState.PULSES_LOST:
         raise Refusal(
             f"The once-per-rev signal is lost while the probes still vibrate; {what} is refused.",
@@ -161,7 +163,9 @@ class Desk:
 
     def assign(self, asked: AssignAsked, peer: str) -> Json:
         who = asked.who or peer
-        return self._once(asked, "assign", lambda led: asjson.run_json(led.assign_run(asked.run, asked.job, who)))
+        return self._once(
+            asked, "assign", lambda led: asjson.run_json(led.assign_run(asked.run, asked.job, who))
+        )
 
     def _marks(self, asked: MountAsked) -> tuple[MarkPosition, ...]:
         """The rotor mark's place by plane; one given for no plane in particular holds for all."""
@@ -178,4 +182,3 @@ class Desk:
                 f"This stand has no end named {end!r}, from which {what} is seen.",
                 f"Its ends are {self._ends[0]!r} and {self._ends[1]!r}.",
             )
-

@@ -1,4 +1,4 @@
-"""Marks as operators ask for them: acknowledged after their commit, waited for, answered with what they took."""
+"""Marks as operators ask for them: acknowledged after their commit, waited for, answered."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ from config.errors import Refusal
 from daq.board import Board, Live
 from daq.clock import Clock
 from daq.requests import CancelAsked, MarkAsked
-from daq.signal.health import flag_text
+from daq.signal.health import sentence
 from daq.writer import Writer
 from store import asjson, casework
 from store.history import History
@@ -99,7 +99,7 @@ class MarkDesk:
         if mark.state is MarkState.LABELLED and mark.reading_id is not None and mark.run_name is not None:
             reading = self._history.reading(mark.reading_id)
             told["reading"] = asjson.reading_json(reading)
-            told["flag_texts"] = [flag_text(f) for f in reading.flags]
+            told["flag_texts"] = [sentence(f) for f in reading.flags]
             told.update(self._judged(mark, reading))
         return told
 

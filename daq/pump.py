@@ -18,7 +18,8 @@ from typing import Any
 from config.errors import DriverError
 from daq.board import Board, StandState
 from daq.clock import Clock
-from daq.drivers.base import Block, Driver, EndOfSource, SourceInfo
+from daq.drivers.base import Block, EndOfSource, SourceInfo
+from daq.drivers.registry import AnyDriver
 from daq.ring import Ring, RingReader
 
 READ_S = 0.2
@@ -43,7 +44,7 @@ class Notice:
 class Pump:
     """Owns the driver and the ring's writing end."""
 
-    def __init__(self, driver: Driver, board: Board, clock: Clock) -> None:
+    def __init__(self, driver: AnyDriver, board: Board, clock: Clock) -> None:
         self._driver = driver
         self._board = board
         self._clock = clock
@@ -91,7 +92,7 @@ class Pump:
             frames = int(RING_S * info.rate_hz)
             self.ring = Ring(frames, len(info.volts_per_count), info.dtype)
             self.reader = self.ring.reader("analysis")
-        elif self.info is not None and not info.same_stream(self.info):
+        elif self.info is not None and _stream(info) != _stream(self.info):
             self.fatal = DriverError(
                 "The source came back with another rate, scale or number of channels.",
                 "Restart revmark serve so that the set-up is recorded anew.",
@@ -118,7 +119,8 @@ class Pump:
                 self._write(came, stop, beat)
 
     def _write(self, block: Block, stop: threading.Event, beat: Callable[[], None]) -> None:
-        assert self.ring is not None and self.reader is not None
+        assert self.ring is not None, "the ring is made when the source opens"
+        assert self.reader is not None, "the reader is made with the ring"
         frames = len(block.counts)
         while not self._driver.paces_itself and not stop.is_set():
             if self.ring.wait_room(frames, self.reader, ROOM_S):
@@ -166,9 +168,18 @@ class Pump:
                 return
             if future.set_running_or_notify_cancel():
                 future.set_exception(
-                    DriverError("The source is lost.", "It is opened again by itself; see revmark status.", kind="gone")
+                    DriverError(
+                        "The source is lost.",
+                        "It is opened again by itself; see revmark status.",
+                        kind="gone",
+                    )
                 )
 
     def _note(self, kind: str, text: str) -> None:
         position = self.ring.written if self.ring is not None else 0
         self.notices.append(Notice(position, kind, text))
+
+
+def _stream(info: SourceInfo) -> tuple[float, str, tuple[float, ...]]:
+    """What must stay the same when a source comes back, or its counts would mean something else."""
+    return info.rate_hz, info.dtype, info.volts_per_count

@@ -7,13 +7,15 @@ opening is committed, so later records of a run look it up when they are written
 from __future__ import annotations
 
 import logging
+from uuid import UUID
 
 from config.stand import Stand
 from daq.board import Board
 from daq.runs import Ended
+from daq.setup import set_up_draft
 from daq.writer import Writer
 from store.ledger import Ledger
-from store.records import ReadingDraft, Run, RunDraft, RunState
+from store.records import ReadingDraft, Run, RunDraft, RunState, SetUp
 
 log = logging.getLogger("revmark.record")
 
@@ -26,7 +28,19 @@ class Recorder:
         self._board = board
         self._slow_roll_limit_hz = stand.run.slow_roll_limit_hz
         self._total_mib = stand.raw.total_mib
+        self._stand = stand
+        self._set_up: SetUp | None = None
         self._run: Run | None = None
+
+    def set_up(self, rate_hz: float) -> None:
+        """Record the measurement set-up with the source's true rate, before any run."""
+        draft = set_up_draft(self._stand, rate_hz)
+        self._set_up = self._writer.ask(lambda ledger: ledger.set_up(draft))
+
+    @property
+    def set_up_id(self) -> UUID:
+        assert self._set_up is not None, "the set-up is recorded before any run"
+        return self._set_up.id
 
     def began(self, draft: RunDraft) -> None:
         def write(ledger: Ledger) -> None:

@@ -259,6 +259,11 @@ class RingReader:
         self._news = threading.Event()
 
     @property
+    def position(self) -> int:
+        """Ring counter of the next frame this reader takes."""
+        return self._position
+
+    @property
     def backlog(self) -> int:
         """Frames written and not yet taken by this reader (those already overwritten included)."""
         return self._ring.written - self._position

@@ -1,4 +1,4 @@
-"""Working the simulated rotor or the next recording. A real source has no such verbs: no rotor is started here."""
+"""Working the simulated rotor or the next recording. A real source has no such verbs."""
 
 from __future__ import annotations
 

@@ -11,9 +11,8 @@ from typing import Literal
 
 from daq.board import StandState
 
-SHORTEST_QUIET_S, LONGEST_QUIET_S = 1.0, 10.0
-QUIET_PERIODS = 3.0
-"""Pulses have ended after this many of the last period without one, within the two bounds."""
+SHORTEST_QUIET_S = 1.0
+"""Pulses have not ended before this time without one, however fast it turned."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -22,10 +21,12 @@ class Hop:
 
     t_s: float
     sample: int
-    last_edge_s: float | None
-    """Time of the newest pulse edge; None = none since the source opened."""
-    period_s: float | None
-    """The newest time between two edges."""
+    since_edge_s: float
+    """Time since the newest pulse; inf = none yet."""
+    patience_s: float
+    """A longer wait than this means that pulses have stopped, at the speed it had."""
+    speed_hz: float | None
+    """Over the newest good turn; None while pulses do not come."""
     vibrating: bool
     """The probes move much as they did while turning."""
 
@@ -85,16 +86,13 @@ class RunWatch:
         return self._end("interrupted", reason) if self.open else None
 
     def _state(self, hop: Hop) -> StandState:
-        if hop.last_edge_s is not None:
-            quiet_s = QUIET_PERIODS * (hop.period_s or SHORTEST_QUIET_S)
-            quiet_s = min(max(quiet_s, SHORTEST_QUIET_S), LONGEST_QUIET_S)
-            if hop.t_s - hop.last_edge_s <= quiet_s:
-                return StandState.TURNING
+        if hop.since_edge_s <= max(hop.patience_s, SHORTEST_QUIET_S):
+            return StandState.TURNING
         was_turning = self.state in (StandState.TURNING, StandState.PULSES_LOST)
         return StandState.PULSES_LOST if was_turning and hop.vibrating else StandState.NO_PULSES
 
     def _is_fast(self, hop: Hop) -> bool:
-        return hop.period_s is not None and hop.period_s * self._minimum_hz <= 1.0
+        return hop.speed_hz is not None and hop.speed_hz >= self._minimum_hz
 
     def _waits(self, hop: Hop, segment: int, *, fast: bool) -> Began | None:
         if not fast:

@@ -2,9 +2,14 @@
 
 from __future__ import annotations
 
-from config.stand import Stand
-from daq.drivers.base import ChannelPlan, ProbePlan, PulsePlan
+from config.stand import Channel, Stand
+from daq.drivers.base import ChannelPlan, ProbePlan, PulsePlan, SourceInfo
+from daq.signal.shapes import ChannelParams, PulseParams
 from store.records import ChannelSetUp, PulseSetUp, SetUpDraft
+
+
+def _gap_limits(channel: Channel) -> tuple[float | None, float | None]:
+    return channel.gap_limits_v or (None, None)
 
 
 def channel_plan(stand: Stand) -> ChannelPlan:
@@ -18,7 +23,7 @@ def channel_plan(stand: Stand) -> ChannelPlan:
             c.volts_per_unit,
             c.positive_sign,
             c.angle_deg,
-            *(c.gap_limits_v or (None, None)),
+            *_gap_limits(c),
             c.coupling,
         )
         for c in stand.channels
@@ -40,3 +45,29 @@ def set_up_draft(stand: Stand, rate_hz: float) -> SetUpDraft:
         rate_hz=content["rate_hz"],
         driver=content["driver"],
     )
+
+
+def signal_params(stand: Stand, info: SourceInfo) -> tuple[PulseParams, tuple[ChannelParams, ...]]:
+    """What the signal arithmetic is told: the stand file's channels with the source's scales."""
+    pulse = PulseParams(
+        info.volts_per_count[0],
+        info.full_scale_counts,
+        stand.pulse.edge,
+        stand.pulse.level_v,
+        stand.pulse.hysteresis_v,
+        name=stand.pulse.name,
+    )
+    skews = info.skew_s or (0.0,) * len(info.volts_per_count)
+    channels = tuple(
+        ChannelParams(
+            c.name,
+            volts,
+            info.full_scale_counts,
+            c.volts_per_unit,
+            c.positive_sign,
+            *_gap_limits(c),
+            c.skew_s + skew,
+        )
+        for c, volts, skew in zip(stand.channels, info.volts_per_count[1:], skews[1:], strict=True)
+    )
+    return pulse, channels

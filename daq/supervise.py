@@ -16,7 +16,7 @@ log = logging.getLogger("revmark.daemon")
 
 @dataclass(slots=True)
 class Part:
-    """One thread of the daemon: its body gets ``stop`` and ``beat``, and beats more often than ``limit_s``."""
+    """One thread of the daemon: its body gets ``stop`` and ``beat``, to be called within ``limit_s``."""
 
     name: str
     body: Body

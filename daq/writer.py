@@ -40,7 +40,9 @@ class Writer:
         self._ledger = ledger
         self._board = board
         self._clock = clock
-        self._asked: queue.SimpleQueue[tuple[Callable[[Ledger], Any], Future[Any]] | None] = queue.SimpleQueue()
+        self._asked: queue.SimpleQueue[tuple[Callable[[Ledger], Any], Future[Any]] | None] = (
+            queue.SimpleQueue()
+        )
         self._records: deque[Record] = deque()
         self._lock = threading.Lock()
         self._retry_at = 0.0
@@ -58,7 +60,9 @@ class Writer:
             return future.result(ANSWER_WITHIN_S)
         except TimeoutError as error:
             raise StoreError(
-                "The store did not answer in time.", "See revmark status; nothing was acknowledged.", kind="locked"
+                "The store did not answer in time.",
+                "See revmark status; nothing was acknowledged.",
+                kind="locked",
             ) from error
 
     def record(self, act: Record, *, droppable: bool) -> None:

@@ -20,6 +20,7 @@ from store.records import (
     Mount,
     Reading,
     Run,
+    RunLine,
     Vector,
     WeightEvent,
     WeightPlane,
@@ -191,4 +192,23 @@ def coefficient_json(coefficient: Coefficient) -> Json:
         "origin": coefficient.origin,
         "effect_ratio": coefficient.largest_effect_ratio,
         "at_utc": utc(coefficient.at_us),
+    }
+
+
+def run_line_json(line: RunLine) -> Json:
+    return {
+        "run": line.name,
+        "also": line.other_name,
+        "job": line.job_number,
+        "machine": line.machine_serial,
+        "origin": line.origin,
+        "state": line.state,
+        "reason": line.reason,
+        "void": line.void,
+        "operator": line.operator,
+        "started_utc": utc(line.started_us),
+        "ended_utc": utc(line.ended_us),
+        "readings": line.readings,
+        "labels": list(line.labels),
+        "speed_rpm": line.speed_hz * 60 if line.speed_hz is not None else None,
     }

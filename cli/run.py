@@ -1,0 +1,109 @@
+"""``revmark run``: runs and their readings, by job and date."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import click
+
+from cli.client import Client, find, new_key
+from cli.marked import vector_table
+from cli.output import clean, finite, json_option, operator_option, print_json, say, stand_option, table
+
+
+@click.group(help="Runs and their readings.")
+def group() -> None: ...
+
+
+@group.command(name="list", context_settings={"max_content_width": 80})
+@stand_option
+@click.option("--job", metavar="NUMBER", help="Only this job.")
+@click.option("--machine", metavar="SERIAL", help="Only this machine.")
+@click.option("--limit", type=click.IntRange(1, 100_000), default=30, show_default=True)
+@json_option
+def list_(stand: str | None, job: str | None, machine: str | None, limit: int, *, as_json: bool) -> None:
+    """The newest runs."""
+    from cli.place import reading
+    from store import asjson
+
+    with reading(stand) as history:
+        lines = [asjson.run_line_json(r) for r in history.runs(job, machine, limit)]
+    if as_json:
+        print_json(lines)
+        return
+    rows = [
+        (r["run"], r["machine"] or "-", (r["started_utc"] or "")[:16].replace("T", " "),
+         finite(r["speed_rpm"], ".0f"), r["readings"], ", ".join(r["labels"]) or "-",
+         "void" if r["void"] else r["state"])
+        for r in lines
+    ]  # fmt: skip
+    say(table(rows, ["run", "machine", "started UTC", "r/min", "readings", "labels", "state"], "lllrrll"))
+
+
+@group.command(context_settings={"max_content_width": 80})
+@click.argument("run")
+@stand_option
+@json_option
+def show(run: str, stand: str | None, *, as_json: bool) -> None:
+    """One run with its readings and vectors."""
+    from cli.place import reading
+    from daq.signal.health import sentence
+    from store import asjson
+
+    with reading(stand) as history:
+        told = asjson.run_json(history.run(run))
+    if as_json:
+        print_json(told)
+        return
+    say(*_described(told))
+    for one in told["readings"]:
+        label = f" {one['label']}" if one["label"] else ""
+        say(
+            "",
+            f"reading {one['number']}{label}: {one['speed_rpm']:.1f} r/min, {one['revolutions']} revolutions "
+            f"in {one['duration_s']:.1f} s",
+            vector_table(one["vectors"]),
+            *(f"flag: {clean(sentence(f))}" for f in one["flags"]),
+        )
+
+
+def _described(run: dict[str, Any]) -> list[str]:
+    also = f" (also {run['unassigned']})" if run["unassigned"] and run["job"] else ""
+    lines = [
+        f"run {clean(run['run'])}{also}: {run['origin']}, {run['state']}"
+        + (f", {clean(run['reason'])}" if run["reason"] else ""),
+        f"started {run['started_utc']}, ended {run['ended_utc'] or '-'}",
+    ]
+    if run["operator"]:
+        lines.append(f"operator {clean(run['operator'])}")
+    if run["void"]:
+        lines.append(f"VOID: {clean(run['void'])}")
+    return lines
+
+
+@group.command()
+@click.argument("run")
+@click.argument("why")
+@stand_option
+@operator_option
+@json_option
+def void(run: str, why: str, stand: str | None, operator: str, *, as_json: bool) -> None:
+    """Take a run out of all arithmetic, saying WHY. It stays in the store."""
+    answer = Client(find(stand)).post(
+        "/v1/run/void", {"key": new_key(), "who": operator, "run": run, "why": why}
+    )
+    print_json(answer) if as_json else say(f"Run {clean(answer['run'])} no longer counts: {clean(why)}")
+
+
+@group.command()
+@click.argument("run")
+@click.argument("job")
+@stand_option
+@operator_option
+@json_option
+def assign(run: str, job: str, stand: str | None, operator: str, *, as_json: bool) -> None:
+    """Give a run to a job. It answers to its old name too."""
+    answer = Client(find(stand)).post(
+        "/v1/run/assign", {"key": new_key(), "who": operator, "run": run, "job": job}
+    )
+    print_json(answer) if as_json else say(f"{clean(run)} is now run {clean(answer['run'])}.")

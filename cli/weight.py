@@ -1,0 +1,136 @@
+"""``revmark weight``: what is put on and taken off the rotor, and what to try."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import click
+
+from cli.client import Client, find, new_key
+from cli.output import clean, json_option, operator_option, print_json, say, stand_option, table, warn
+from cli.typed import Quantity
+
+Json = Mapping[str, Any]
+
+
+@click.group(help="Weights: advice, fitted, removed, drilled, listed.")
+def group() -> None: ...
+
+
+def _place_options(function: Any) -> Any:
+    for option in (
+        click.option("--locked-out", is_flag=True, help="The drive is locked out and the rotor seen at rest."),
+        click.option("--after", metavar="RUN", help="It was done after this run (a late entry)."),
+        click.option("--radius", type=Quantity("length", 1e-3), help="Default: the plane's radius."),
+        click.option("--at", "angle_deg", type=Quantity("angle"), metavar="ANGLE",
+                     help="Angle from the rotor mark, against rotation."),
+        click.option("--hole", type=click.IntRange(1, 1000)),
+        click.option("--plane", required=True, type=click.IntRange(1, 99)),
+    ):  # fmt: skip
+        function = option(function)
+    return function
+
+
+def _add(mass_g: float, stand: str | None, operator: str, told: dict[str, Any], *, drilled: bool) -> Json:
+    if (told["hole"] is None) == (told["angle_deg"] is None):
+        raise click.UsageError("Say where: --hole or --at.")
+    body = {
+        "key": new_key(),
+        "who": operator,
+        "piece": {
+            "plane": told["plane"],
+            "mass_g": mass_g,
+            "hole": told["hole"],
+            "angle_deg": told["angle_deg"],
+            "radius_mm": told["radius"],
+        },
+        "drilled": drilled,
+        "locked_out": told["locked_out"],
+        "after": told["after"],
+    }
+    answer: Json = Client(find(stand)).post("/v1/weight", body)
+    return answer
+
+
+@group.command(context_settings={"max_content_width": 80})
+@click.argument("mass", type=Quantity("mass", 1e-6))
+@stand_option
+@_place_options
+@operator_option
+@json_option
+def fit(mass: float, stand: str | None, operator: str, *, as_json: bool, **told: Any) -> None:
+    """Record a weight of MASS (3.0g) fitted in a plane, in a hole or at an angle."""
+    _told(_add(mass, stand, operator, told, drilled=False), as_json=as_json)
+
+
+@group.command(context_settings={"max_content_width": 80})
+@click.argument("mass", type=Quantity("mass", 1e-6))
+@stand_option
+@_place_options
+@operator_option
+@json_option
+def drill(mass: float, stand: str | None, operator: str, *, as_json: bool, **told: Any) -> None:
+    """Record that MASS was drilled away at a place."""
+    _told(_add(mass, stand, operator, told, drilled=True), as_json=as_json)
+
+
+@group.command(context_settings={"max_content_width": 80})
+@stand_option
+@click.option("--plane", required=True, type=click.IntRange(1, 99))
+@click.option("--hole", type=click.IntRange(1, 1000), help="Only what is in this hole.")
+@click.option("--all", "every", is_flag=True, help="Everything fitted in the plane.")
+@click.option("--locked-out", is_flag=True, help="The drive is locked out and the rotor seen at rest.")
+@operator_option
+@json_option
+def remove(stand: str | None, operator: str, *, as_json: bool, **told: Any) -> None:
+    """Record weights taken off a plane."""
+    body = {
+        "key": new_key(),
+        "who": operator,
+        "plane": told["plane"],
+        "hole": told["hole"],
+        "all": told["every"],
+        "locked_out": told["locked_out"],
+    }
+    _told(Client(find(stand)).post("/v1/weight/remove", body), as_json=as_json)
+
+
+def _told(answer: Json, *, as_json: bool) -> None:
+    if as_json:
+        print_json(answer)
+    else:
+        say(*(f"{w['act']}: {place(w)}" for w in answer["weights"]), *answer.get("forces", []))
+    for line in answer.get("cautions", []):
+        warn(clean(line))
+
+
+def place(weight: Json) -> str:
+    """``plane 1 hole 16, 3.0 g at 140 mm``."""
+    where = f"hole {weight['hole']}" if weight["hole"] is not None else f"at {weight['angle_deg']:.1f} deg"
+    return f"plane {weight['plane']} {where}, {weight['mass_g']:g} g at {weight['radius_mm']:g} mm"
+
+
+@group.command(name="list")
+@stand_option
+@json_option
+def list_(stand: str | None, *, as_json: bool) -> None:
+    """What is fitted on the mounted rotor now."""
+    from cli.place import reading
+    from config.errors import Refusal
+    from store import asjson
+
+    with reading(stand) as history:
+        mount = history.current_mount()
+        if mount is None:
+            raise Refusal("Nothing is mounted.", "Mount a machine with: revmark mount")
+        weights = [asjson.weight_json(w) for w in history.weights(mount.id)]
+    if as_json:
+        print_json(weights)
+        return
+    rows = [
+        (w["plane"], w["act"], w["hole"] or "-", "-" if w["angle_deg"] is None else f"{w['angle_deg']:.1f}",
+         f"{w['mass_g']:g}", f"{w['radius_mm']:g}", w["who"])
+        for w in weights
+    ]  # fmt: skip
+    say(table(rows, ["plane", "act", "hole", "angle deg", "mass g", "radius mm", "who"], "rlrrrrl"))

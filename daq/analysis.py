@@ -1,0 +1,272 @@
+"""The analysis thread: ring -> turns -> live vectors -> steadiness -> readings, in source time.
+
+Nothing here reads a clock to decide anything: what the samples say is the same at any pace. The vectors
+of a reading are made by ``daq.signal.measure`` from the very counts that are stored with it.
+"""
+
+from __future__ import annotations
+
+import logging
+import threading
+from collections import deque
+from collections.abc import Callable, Sequence
+from dataclasses import replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from config.stand import Stand
+from daq.board import Board, LiveVector, StandState
+from daq.clock import Clock
+from daq.drivers.base import SourceInfo
+from daq.plateau import PlateauWatch, Window
+from daq.pump import Notice, Pump
+from daq.raw_window import RawWindow
+from daq.readings import ReadingMaker
+from daq.recorder import Recorder
+from daq.ring import Chunk, RingReader
+from daq.runs import Began, Ended, Hop, RunWatch
+from daq.setup import signal_params
+from daq.signal.blocks import BlockFitter
+from daq.signal.health import ac_rms, still_vibrating
+from daq.signal.shapes import BlockFit
+from daq.signal.steadiness import CHANGE_SE, Probe, Verdict, block_seconds, judge, needed
+from store.records import Origin, RunDraft
+
+HOP_S = 0.1
+IDLE_HOPS, IDLE_BLOCKS = 100, 3
+"""Samples kept while no block of turns is there yet: so many hops and so many blocks' worth."""
+LONGEST_TURN_S = 2.5
+"""Waited for at most between two pulses, or this many turns at the minimum speed where that is longer."""
+READ_S = 0.1
+QUIET_RMS_S = 1.0
+"""Rms of the probes is taken over this much of the past."""
+
+log = logging.getLogger("revmark.analysis")
+
+
+class Analysis:
+    """One thread's state. ``want_fresh`` alone may be called by another thread."""
+
+    def __init__(self, stand: Stand, pump: Pump, recorder: Recorder, board: Board, clock: Clock) -> None:
+        self._stand = stand
+        self._pump = pump
+        self._recorder = recorder
+        self._board = board
+        self._clock = clock
+        self._limits = stand.steadiness
+        self._plateaus = PlateauWatch(self._limits.speed_band_pct)
+        self._watch = RunWatch(stand.run.minimum_speed_hz, stand.run.minimum_duration_s)
+        self._raw = RawWindow()
+        self._fits: deque[BlockFit] = deque()
+        self._verdict: Verdict | None = None
+        self._origin_sample = 0
+        """Added to the source's sample index, so that indices grow over re-openings of the source."""
+        self._segment = -1
+        self._taken = 0
+
+    def want_fresh(self, from_sample: int) -> None:
+        """Take a reading whose samples all lie at or after ``from_sample``, as soon as it is steady."""
+        self._plateaus.want_fresh(from_sample)
+
+    def run(self, stop: threading.Event, beat: Callable[[], None]) -> None:
+        """The thread's body: until ``stop`` is set and the ring is read empty."""
+        while not self._pump.opened.wait(READ_S):
+            beat()
+            if stop.is_set():
+                return
+        if self._pump.info is None or self._pump.reader is None:
+            return
+        self._begin(self._pump.info)
+        while True:
+            beat()
+            more = self._step(self._pump.reader)
+            if stop.is_set() and not more:
+                break
+        ended = self._watch.source_lost("daemon stopped")
+        self._close(ended)
+
+    # --- one step ------------------------------------------------------------------------------------
+
+    def _begin(self, info: SourceInfo) -> None:
+        pulse, channels = signal_params(self._stand, info)
+        self._fitter = BlockFitter(
+            pulse,
+            channels,
+            info.rate_hz,
+            block_s=block_seconds(self._limits),
+            min_signal_to_noise=self._limits.min_signal_to_noise,
+            longest_turn_s=max(LONGEST_TURN_S, LONGEST_TURN_S / self._stand.run.minimum_speed_hz),
+        )
+        self._maker = ReadingMaker(self._stand, info, pulse, channels, self._clock)
+        self._hop = max(1, int(HOP_S * info.rate_hz))
+        self._units = tuple(c.units_per_count for c in channels)
+        self._probes = tuple(Probe(c.name, c.kind) for c in self._stand.channels)
+        self._floors = np.array([self._limits.change_floor(c.kind) for c in self._stand.channels])
+        self._past: deque[NDArray[np.float64]] = deque(maxlen=max(1, round(QUIET_RMS_S / HOP_S)))
+        self._turning_rms = np.zeros(len(channels))
+        self._recorder.set_up(info.rate_hz)
+        self._origin = Origin(info.origin)
+
+    def _step(self, reader: RingReader) -> bool:
+        """Take one chunk or notice; False when there was neither."""
+        notice = self._due(reader)
+        if notice is not None:
+            self._heed(notice)
+            return True
+        chunk = reader.read(self._room(reader), READ_S)
+        if chunk is None:
+            return bool(self._pump.notices)
+        self._feed(replace(chunk, first_sample=chunk.first_sample + self._origin_sample))
+        return True
+
+    def _room(self, reader: RingReader) -> int:
+        """Frames to read at most: a hop, but not past the next notice."""
+        if not self._pump.notices:
+            return self._hop
+        return max(1, min(self._hop, self._pump.notices[0].position - reader.position))
+
+    def _due(self, reader: RingReader) -> Notice | None:
+        if self._pump.notices and self._pump.notices[0].position <= reader.position:
+            return self._pump.notices.popleft()
+        return None
+
+    def _heed(self, notice: Notice) -> None:
+        if notice.kind == "ended":
+            self._close(self._watch.source_ended(notice.text))
+        elif notice.kind == "lost":
+            self._close(self._watch.source_lost(f"source lost: {notice.text}"))
+            self._recorder.event("source_lost", notice.text)
+        else:
+            self._origin_sample = self._taken
+            self._recorder.event("source_back", notice.text)
+        self._forget()
+        self._board.post(state=self._watch.state, detail="", speed_hz=None, vectors=(), steady=False)
+
+    def _feed(self, chunk: Chunk) -> None:
+        if chunk.lost or chunk.segment != self._segment:
+            self._new_segment(chunk)
+        self._taken = chunk.next_sample
+        self._raw.add(chunk)
+        fits = self._fitter.feed(chunk.counts, chunk.first_sample, chunk.segment)
+        vibrating = self._vibrating(chunk)
+        moved = self._watch.step(self._hop_of(chunk, vibrating=vibrating), chunk.segment)
+        if isinstance(moved, Began):
+            self._open(moved)
+        for fit in fits:
+            self._take_fit(fit)
+        if isinstance(moved, Ended):
+            self._close(moved)
+        self._trim()
+        self._post()
+
+    def _new_segment(self, chunk: Chunk) -> None:
+        if chunk.lost:
+            self._board.post(lost_samples=self._board.read().lost_samples + chunk.lost)
+            self._recorder.event("overrun", f"{chunk.lost} samples were not analysed in time and are lost")
+        self._segment = chunk.segment
+        self._forget()
+
+    def _forget(self) -> None:
+        """Nothing is computed across a gap."""
+        self._raw.clear()
+        self._fits.clear()
+        self._past.clear()
+        self._verdict = None
+
+    def _hop_of(self, chunk: Chunk, *, vibrating: bool) -> Hop:
+        turning = self._fitter.clock
+        return Hop(
+            chunk.next_sample / chunk.rate_hz,
+            chunk.first_sample,
+            turning.since_edge_s,
+            turning.patience_s,
+            turning.speed_hz,
+            vibrating,
+        )
+
+    def _vibrating(self, chunk: Chunk) -> bool:
+        self._past.append(ac_rms(chunk.counts[:, 1:]) * np.abs(self._units))
+        now = np.sqrt(np.mean(np.square(np.stack(self._past)), axis=0))
+        if self._watch.state is StandState.TURNING and self._fits:
+            self._turning_rms = self._fits[-1].ac_rms
+        residual = self._fits[-1].residual_sd if self._fits else np.zeros(len(now))
+        return still_vibrating(now, self._turning_rms, residual)
+
+    # --- runs and readings ---------------------------------------------------------------------------
+
+    def _open(self, began: Began) -> None:
+        self._plateaus.new_run()
+        mono_s = self._raw.mono_of(began.sample)
+        draft = RunDraft(
+            self._recorder.set_up_id,
+            self._origin,
+            "",
+            self._maker.utc_of(mono_s),
+            mono_s,
+            began.sample,
+            began.segment,
+        )
+        self._recorder.began(draft)
+
+    def _close(self, ended: Ended | None) -> None:
+        if ended is not None:
+            self._recorder.ended(ended, self._clock.now_us(), self._why_no_reading())
+
+    def _why_no_reading(self) -> str:
+        if self._plateaus.speeds_hz:
+            speeds = ", ".join(f"{s * 60:.0f}" for s in dict.fromkeys(self._plateaus.speeds_hz))
+            return f"it was steady only at {speeds} r/min."
+        return self._verdict.sentence if self._verdict is not None else "it was too short to be judged."
+
+    def _take_fit(self, fit: BlockFit) -> None:
+        self._fits.append(fit)
+        self._verdict = judge(tuple(self._fits), self._limits, self._probes)
+        if not (self._watch.open and self._verdict.steady):
+            return
+        used = [f for f in self._fits if f.first_sample >= self._verdict.first_sample]
+        if self._plateaus.takes(self._window(used)):
+            self._recorder.reading(self._maker.make(self._raw, used, self._verdict))
+
+    def _window(self, used: Sequence[BlockFit]) -> Window:
+        turns = np.array([f.revolutions for f in used], np.float64)
+        share = turns / turns.sum()
+        vectors = share @ np.stack([f.vectors for f in used])
+        se = np.sqrt(share**2 @ np.stack([f.se for f in used]) ** 2)
+        allowed = np.maximum(self._limits.change_pct / 100 * np.abs(vectors), self._floors)
+        speed_hz = float(share @ np.array([f.speed_hz for f in used]))
+        return Window(
+            used[0].first_sample, used[-1].t_end_s, speed_hz, vectors, np.maximum(allowed, CHANGE_SE * se)
+        )
+
+    def _trim(self) -> None:
+        """Let go of what no window will ask for again; samples before the first block wait for one."""
+        for _ in range(needed(self._fits, self._limits)):
+            self._fits.popleft()
+        if self._fits and self._verdict is not None:
+            self._raw.trim(self._verdict.first_sample - self._maker.margin(self._fits[0]))
+        else:
+            blocks = round(IDLE_BLOCKS * block_seconds(self._limits) / HOP_S)
+            self._raw.trim(self._taken - self._hop * (IDLE_HOPS + blocks))
+
+    def _post(self) -> None:
+        turning = self._watch.state is StandState.TURNING
+        newest = self._fits[-1] if self._fits and turning else None
+        verdict = self._verdict if self._watch.open else None
+        self._board.post(
+            state=self._watch.state,
+            detail="",
+            speed_hz=self._fitter.clock.speed_hz if turning else None,
+            sample=self._taken,
+            segment=self._segment,
+            steady=bool(verdict and verdict.steady),
+            still_out="" if verdict is None or verdict.steady else verdict.sentence,
+            vectors=() if newest is None else self._live(newest),
+            flags=() if newest is None else newest.flags,
+        )
+
+    def _live(self, fit: BlockFit) -> tuple[LiveVector, ...]:
+        return tuple(
+            LiveVector(c.name, c.unit, float(abs(v)), float(np.degrees(np.angle(v)) % 360))
+            for c, v in zip(self._stand.channels, fit.vectors, strict=True)
+        )

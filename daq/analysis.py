@@ -58,7 +58,7 @@ class Analysis:
         self._plateaus = PlateauWatch(self._limits.speed_band_pct)
         self._watch = RunWatch(stand.run.minimum_speed_hz, stand.run.minimum_duration_s)
         self._raw = RawWindow()
-        self._fits: deque[BlockFit] = deque()
+        self._fits: list[BlockFit] = []
         self._verdict: Verdict | None = None
         self._origin_sample = 0
         """Added to the source's sample index, so that indices grow over re-openings of the source."""
@@ -221,7 +221,7 @@ class Analysis:
 
     def _take_fit(self, fit: BlockFit) -> None:
         self._fits.append(fit)
-        self._verdict = judge(tuple(self._fits), self._limits, self._probes)
+        self._verdict = judge(self._fits, self._limits, self._probes)
         if not (self._watch.open and self._verdict.steady):
             return
         used = [f for f in self._fits if f.first_sample >= self._verdict.first_sample]
@@ -241,8 +241,7 @@ class Analysis:
 
     def _trim(self) -> None:
         """Let go of what no window will ask for again; samples before the first block wait for one."""
-        for _ in range(needed(self._fits, self._limits)):
-            self._fits.popleft()
+        del self._fits[: needed(self._fits, self._limits)]
         if self._fits and self._verdict is not None:
             self._raw.trim(self._verdict.first_sample - self._maker.margin(self._fits[0]))
         else:

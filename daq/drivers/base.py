@@ -237,7 +237,7 @@ class Driver(ABC, Generic[OptionsT]):
             self._calls.release()
 
     def act(self, verb: str, **args: Any) -> Mapping[str, Any]:
-        """Do one of ``verbs`` (``start``, ``stop``, ``next``); says what was done.
+        """Do one of ``verbs`` (``start``, ``stop``, ``next``); the answer's ``said`` is a sentence.
 
         Raises Refusal (unknown verb, wrong argument, not now) or DriverError (a bad file); the source
         stays open.

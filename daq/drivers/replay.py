@@ -184,8 +184,11 @@ class ReplayDriver(Driver[ReplayOptions]):
         self._playing, self._at, self._origin_s = recording, 0, self.clock.monotonic()
         if name in self.options.files:
             self._next_file = self.options.files.index(name) + 1
+        left = len(self.options.files) - self._next_file
         seconds = None if recording.frames is None else recording.frames / recording.rate_hz
-        return {"file": name, "seconds": seconds, "files_left": len(self.options.files) - self._next_file}
+        length = "" if seconds is None else f" of {seconds:.1f} s"
+        said = f"Playing {name}{length}; {left} listed files follow."
+        return {"said": said, "file": name, "seconds": seconds, "files_left": left}
 
     def _due_file(self) -> str:
         files = self.options.files

@@ -37,7 +37,7 @@ _NOBODY = FittedRotor(serial="")
 
 
 class StartArgs(DriverOptions):
-    rpm: Annotated[float, Field(gt=0)]
+    rpm: Annotated[float, Field(gt=0)] | None = None
     rotor: FittedRotor | None = None
 
 
@@ -64,8 +64,7 @@ class SimulatedDriver(Driver[SimulatedOptions]):
         self._painter = Painter(options, self.channels, generator(options.seed, "noise"))
         self._frames = round(options.block_s * options.rate_hz)
         self._faults = FaultList()
-        for fault in options.faults:
-            self._faults.add(fault_from(fault, 0, options.rate_hz))
+        self._planned = list(options.faults)
         self._at = 0
         """Next sample, counted since the first open, lost and unplugged time included."""
         self._lost = 0
@@ -78,6 +77,7 @@ class SimulatedDriver(Driver[SimulatedOptions]):
 
     def _open(self) -> SourceInfo:
         self._check_probes()
+        self._plan_faults()
         self._view = ProbeView(self.options, self.channels)
         now_s = self.clock.monotonic()
         if now_s < self._back_s:
@@ -193,8 +193,15 @@ class SimulatedDriver(Driver[SimulatedOptions]):
                 f"probe_z_mm places {places} probes, and the stand file has {probes}.",
                 "Give one z per probe, or none.",
             )
-        if any(fault.probe > probes for fault in self.options.faults):
-            raise _config(f"A fault names a probe beyond the {probes} of the stand file.", "Correct it.")
+
+    def _plan_faults(self) -> None:
+        """Take the faults of the options, at the first open."""
+        while self._planned:
+            try:
+                self._faults.add(fault_from(self._planned[0], 0, self.options.rate_hz, self.channels.names))
+            except Refusal as error:
+                raise _config(error.cause, error.remedy) from error
+            del self._planned[0]
 
     # --- verbs ---------------------------------------------------------------------------------------
 
@@ -203,15 +210,15 @@ class SimulatedDriver(Driver[SimulatedOptions]):
             return self._start(StartArgs.model_validate(dict(args)))
         if verb == "stop":
             StopArgs.model_validate(dict(args))
-            self._motion.go(0.0)
-            return self._report()
+            return self._coast_down()
         return self._inject(FaultOptions.model_validate(dict(args)))
 
     def _start(self, args: StartArgs) -> Mapping[str, Any]:
+        rpm = self.options.start_rpm if args.rpm is None else args.rpm
         most_rpm = 60 * self.options.rate_hz / SAMPLES_PER_TURN
-        if args.rpm > most_rpm:
+        if rpm > most_rpm:
             raise Refusal(
-                f"{args.rpm:g} r/min is too fast for {self.options.rate_hz:g} samples a second.",
+                f"{rpm:g} r/min is too fast for {self.options.rate_hz:g} samples a second.",
                 f"Stay below {most_rpm:g} r/min.",
             )
         fitted = args.rotor or _NOBODY
@@ -220,8 +227,14 @@ class SimulatedDriver(Driver[SimulatedOptions]):
             self._stand_up(fitted)
         elif args.rotor is not None and args.rotor != self._fitted:
             raise Refusal("The simulated rotor is turning.", "Stop it before its machine or weights change.")
-        self._motion.go(args.rpm / 60)
-        return self._report()
+        self._motion.go(rpm / 60)
+        return self._report(f"goes to {rpm:g} r/min; pieces fitted: {len(self._fitted.pieces)}.")
+
+    def _coast_down(self) -> Mapping[str, Any]:
+        if self._motion.phase == "still":
+            return self._report("stands still already.")
+        self._motion.go(0.0)
+        return self._report(f"coasts down from {self._motion.hz * 60:.0f} r/min.")
 
     def _check_planes(self, fitted: FittedRotor) -> None:
         planes = len(self.options.rotor.plane_z_mm)
@@ -233,14 +246,16 @@ class SimulatedDriver(Driver[SimulatedOptions]):
             )
 
     def _inject(self, options: FaultOptions) -> Mapping[str, Any]:
-        if options.probe > len(self.channels.probes):
-            raise Refusal(f"There is no probe {options.probe}.", "Count probes in stand-file order from 1.")
-        fault = fault_from(options, self._at, self.options.rate_hz)
+        fault = fault_from(options, self._at, self.options.rate_hz, self.channels.names)
         self._faults.add(fault)
-        return {"kind": fault.kind, "begin_sample": fault.begin, "end_sample": fault.end}
+        seconds = (fault.end - fault.begin) / self.options.rate_hz
+        said = f"Fault injected into the simulated source: {fault.kind} for {seconds:g} s."
+        return {"said": said, "kind": fault.kind, "begin_sample": fault.begin, "end_sample": fault.end}
 
-    def _report(self) -> Mapping[str, Any]:
-        return {"serial": self._fitted.serial, "phase": self._motion.phase, "rpm": self._motion.hz * 60}
+    def _report(self, what: str) -> Mapping[str, Any]:
+        motion, serial = self._motion, self._fitted.serial
+        said = f"The simulated rotor {what}" if not serial else f"The simulated {serial} {what}"
+        return {"said": said, "serial": serial, "phase": motion.phase, "rpm": motion.hz * 60}
 
 
 def _config(cause: str, remedy: str) -> DriverError:

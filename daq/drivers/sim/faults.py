@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from config.errors import Refusal
 from daq.drivers.sim.options import FaultKind, FaultOptions
 
 
@@ -17,7 +18,8 @@ class Fault:
     kind: FaultKind
     begin: int
     end: int
-    probe: int
+    column: int
+    """Of the channel it clips."""
     every: int
 
     def covers(self, first: int, n: int) -> NDArray[np.bool_]:
@@ -26,11 +28,17 @@ class Fault:
         return (at >= self.begin) & (at < self.end)
 
 
-def fault_from(options: FaultOptions, now: int, rate_hz: float) -> Fault:
-    """``now``: the next sample, where a fault without a time begins."""
+def fault_from(options: FaultOptions, now: int, rate_hz: float, names: tuple[str, ...]) -> Fault:
+    """``now``: the next sample, where a fault without a time begins; ``names`` of the columns.
+
+    Raises Refusal when no probe has the channel's name.
+    """
+    channel = names[1] if options.channel is None else options.channel
+    if channel not in names[1:]:
+        raise Refusal(f"There is no probe {channel!r}.", f"The stand has {', '.join(names[1:])}.")
     begin = now if options.at_s is None else round(options.at_s * rate_hz)
-    length = max(1, round(options.for_s * rate_hz))
-    return Fault(options.kind, begin, begin + length, options.probe, options.every)
+    length = max(1, round(options.seconds * rate_hz))
+    return Fault(options.kind, begin, begin + length, names.index(channel), options.every)
 
 
 class FaultList:

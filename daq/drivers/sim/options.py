@@ -14,17 +14,17 @@ Above0 = Annotated[float, Field(gt=0)]
 From0 = Annotated[float, Field(ge=0)]
 Few = Annotated[tuple[float, ...], Field(min_length=1, max_length=64)]
 
-FaultKind = Literal["dropout", "clip", "missed_pulses", "unplug"]
+FaultKind = Literal["dropout", "clip", "missed", "unplug"]
 
 
 class RotorOptions(DriverOptions):
     """The model's rotor, invented; z along the shaft from the centre of mass."""
 
     mass_kg: Above0 = 60.0
-    transverse_kg_m2: Above0 = 1.6
+    transverse_kg_m2: Above0 = 3.0
     polar_kg_m2: Above0 = 0.7
     bearing_z_mm: tuple[float, float] = (-250.0, 250.0)
-    stiffness_n_per_m: tuple[Above0, Above0] = (2.0e6, 2.2e6)
+    stiffness_n_per_m: tuple[Above0, Above0] = (2.2e6, 2.4e6)
     damping_ns_per_m: tuple[From0, From0] = (900.0, 1000.0)
     plane_z_mm: Few = (-220.0, 220.0)
     """Weight planes, plane 1 first."""
@@ -47,11 +47,11 @@ class FaultOptions(DriverOptions):
     kind: FaultKind
     at_s: From0 | None = None
     """Since the source was first opened; None = at once."""
-    for_s: Above0 = 0.5
-    probe: Annotated[int, Field(ge=1)] = 1
-    """``clip``: which probe, in stand-file order."""
+    seconds: Above0 = 1.0
+    channel: str | None = None
+    """``clip``: the probe's name; None = the first."""
     every: Annotated[int, Field(ge=1)] = 10
-    """``missed_pulses``: one turn in so many has no pulse; 1 = none has."""
+    """``missed``: one turn in so many has no pulse; 1 = none has."""
 
 
 class SimulatedOptions(DriverOptions):
@@ -72,8 +72,8 @@ class SimulatedOptions(DriverOptions):
     marks_deg: dict[str, float] = Field(default_factory=dict)
     """The same for single machines, by serial number."""
 
-    tolerance_gmm: From0 = 1023.0
-    """Permissible residual unbalance of the whole rotor; the default is G 2.5 of 60 kg at 1400 r/min."""
+    tolerance_gmm: From0 = 955.0
+    """Permissible residual unbalance of the whole rotor; the default is G 2.5 of 60 kg at 1500 r/min."""
     initial_times: tuple[From0, From0] = (3.0, 5.0)
     """A machine comes with so many tolerances (least, most), over all its planes."""
     sister_scatter: Annotated[float, Field(ge=0, le=0.3)] = 0.03
@@ -81,6 +81,8 @@ class SimulatedOptions(DriverOptions):
     run_scatter: Annotated[float, Field(ge=0, le=0.3)] = 0.01
     """Relative sd of a probe's response from start to start, real and imaginary part each."""
 
+    start_rpm: Above0 = 1500.0
+    """Where ``start`` runs up to when it names no speed."""
     run_up_rpm_per_s: Above0 = 300.0
     coast_down_rpm_per_s: Above0 = 300.0
     hunting: Annotated[float, Field(ge=0, le=0.05)] = 0.0002

@@ -44,15 +44,15 @@ class Painter:
     ) -> NDArray[np.int16]:
         """Counts of shape (n, 1 + probes) for ``turns`` and ``hz`` of shape (n,)."""
         volts = np.empty((len(turns), 1 + len(self._gap_v)))
-        volts[:, 0] = self._pulse(turns, hz, [(f, m) for f, m in faults if f.kind == "missed_pulses"])
+        volts[:, 0] = self._pulse(turns, hz, [(f, m) for f, m in faults if f.kind == "missed"])
         self._probes(volts, turns, hz, vectors)
         volts += self._noise.standard_normal(volts.shape) * (self._options.noise_mv / 1e3)
         for fault, mask in faults:
             if fault.kind == "clip":
                 # the mean wanders to the end of the range, where half of every swing is cut off
-                gap = self._gap_v[fault.probe - 1]
+                gap = self._gap_v[fault.column - 1]
                 rail = np.copysign(self._options.full_scale_v, gap)
-                volts[mask, fault.probe] += rail - gap
+                volts[mask, fault.column] += rail - gap
         counts = np.rint(volts / self.volts_per_count)
         return np.clip(counts, -FULL_COUNTS, FULL_COUNTS - 1).astype(np.int16)
 

@@ -25,7 +25,7 @@ def _done_before(event: WeightEvent, run: Run, order: dict[object, int]) -> bool
     position = order.get(event.after_run_id)
     if position is None:
         return event.at_us <= run.started_us
-    return position < order[run.id]
+    return position < order.get(run.id, len(order))
 
 
 def pieces_at(story: JobStory, run: Run) -> tuple[WeightEvent, ...]:

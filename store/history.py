@@ -2,10 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from pathlib import Path
 from uuid import UUID
 
+from sqlalchemy import Connection, Engine, func, select
+
+from store import database, recall, recall_lists, recall_runs
 from store.records import (
     Coefficient,
     Job,
@@ -23,18 +27,38 @@ from store.records import (
     StoreInfo,
     WeightEvent,
 )
+from store.tables import event, metadata
+from store.trouble import in_our_words
 
 
 class History:
-    """SKELETON: signatures stand, bodies follow. What is named and not there raises Refusal."""
+    """Reads a store that may be in use, or at rest. What is named and not there raises Refusal.
+
+    Every method is one short read transaction, so the writer's log can always be folded in. Safe to use
+    from several threads. All methods raise StoreError when the store cannot be read.
+    """
+
+    def __init__(self, path: Path, engine: Engine) -> None:
+        """Called by ``open``."""
+        self.path = path
+        self._engine = engine
 
     @classmethod
     def open(cls, path: Path) -> History:
-        """Raises StoreError (missing, newer, older, corrupt, network, ...)."""
-        raise NotImplementedError
+        """Raises StoreError (missing, network, corrupt, newer, older, ...). Makes and changes no store."""
+        database.check_openable(path)
+        history = cls(path, database.reader_engine(path))
+        try:
+            with history._read() as c:
+                database.check_stamp(c, path)
+        except BaseException:
+            history.close()
+            raise
+        return history
 
     def close(self) -> None:
-        raise NotImplementedError
+        """Closing twice is fine."""
+        self._engine.dispose()
 
     def __enter__(self) -> History:
         return self
@@ -42,70 +66,127 @@ class History:
     def __exit__(self, *_: object) -> None:
         self.close()
 
+    @contextmanager
+    def _read(self) -> Iterator[Connection]:
+        with in_our_words(self.path), self._engine.begin() as connection:
+            yield connection
+
+    # --- machines, jobs, mounts, set-ups
+
     def machines(self) -> tuple[Machine, ...]:
-        raise NotImplementedError
+        """All as they are known now, by serial number."""
+        with self._read() as c:
+            return recall.machines(c)
 
     def machine(self, serial: str) -> Machine:
-        raise NotImplementedError
+        with self._read() as c:
+            return recall.newest_machine(c, serial)
 
     def model(self, code: str) -> Model:
-        raise NotImplementedError
+        """The model as it is known now."""
+        with self._read() as c:
+            return recall.model_named(c, code)
 
     def jobs(self, machine: str | None = None) -> tuple[Job, ...]:
-        raise NotImplementedError
+        """In the order in which they were opened."""
+        with self._read() as c:
+            return recall.jobs(c, machine)
 
     def job(self, number: str) -> Job:
-        raise NotImplementedError
+        with self._read() as c:
+            return recall.job_named(c, number)
+
+    def job_of(self, mount_id: UUID) -> Job:
+        """The job a mount belongs to."""
+        with self._read() as c:
+            return recall.job_by_id(c, recall.mount_by_id(c, mount_id).job_id)
+
+    def current_mount(self) -> Mount | None:
+        with self._read() as c:
+            return recall.current_mount(c)
+
+    def mount(self, mount_id: UUID) -> Mount:
+        with self._read() as c:
+            return recall.mount_by_id(c, mount_id)
+
+    def mounts(self, job: str) -> tuple[Mount, ...]:
+        """A job's mounts in order."""
+        with self._read() as c:
+            return recall.mounts_of_job(c, recall.job_named(c, job).id)
+
+    def last_mount(self, serial: str) -> Mount | None:
+        """The machine's newest mount in any job, ended or not."""
+        with self._read() as c:
+            return recall.last_mount_of(c, serial)
+
+    def set_up(self, set_up_id: UUID) -> SetUp:
+        with self._read() as c:
+            return recall.set_up_by_id(c, set_up_id)
+
+    def newest_set_up(self) -> SetUp | None:
+        with self._read() as c:
+            return recall.newest_set_up(c)
+
+    # --- runs, readings, weights
 
     def job_story(self, number: str, before_run: str | None = None, *, with_void: bool = False) -> JobStory:
-        raise NotImplementedError
+        """All of a job, or (``before_run``) as it stood when that run began."""
+        with self._read() as c:
+            return recall_runs.story(c, number, before_run, with_void=with_void)
 
     def runs(
         self, job: str | None = None, machine: str | None = None, limit: int | None = None
     ) -> tuple[RunLine, ...]:
-        """Newest first."""
-        raise NotImplementedError
+        """A list of runs, newest first, by one query."""
+        with self._read() as c:
+            return recall_lists.run_lines(c, job, machine, limit)
 
     def run(self, name: str) -> Run:
-        raise NotImplementedError
+        """The run that answers to ``0142/3`` or ``U/1``, with its readings."""
+        with self._read() as c:
+            return recall_runs.run_named(c, name)
 
     def open_run(self) -> Run | None:
-        raise NotImplementedError
+        """The run that has begun and not ended, with its readings so far."""
+        with self._read() as c:
+            found = recall_runs.open_run(c)
+            return None if found is None else recall_runs.run_by_id(c, found.id)
 
     def reading(self, reading_id: UUID) -> Reading:
-        raise NotImplementedError
+        with self._read() as c:
+            return recall_runs.reading_by_id(c, reading_id)
 
     def reading_raw(self, reading_id: UUID) -> RawSamples:
-        raise NotImplementedError
-
-    def current_mount(self) -> Mount | None:
-        raise NotImplementedError
-
-    def mount(self, mount_id: UUID) -> Mount:
-        raise NotImplementedError
-
-    def set_up(self, set_up_id: UUID) -> SetUp:
-        raise NotImplementedError
-
-    def newest_set_up(self) -> SetUp | None:
-        raise NotImplementedError
+        """The samples of a reading, proven by their checksum. Refusal when they were not kept or let go."""
+        with self._read() as c:
+            return recall_runs.reading_raw(c, reading_id)
 
     def weights(self, mount_id: UUID) -> tuple[WeightEvent, ...]:
         """What is on the rotor now: fitted and not removed, and drilled."""
-        raise NotImplementedError
+        with self._read() as c:
+            return recall.still_there(recall.weight_events(c, [mount_id]))
 
     def weight_events(self, mount_id: UUID) -> tuple[WeightEvent, ...]:
         """Every act of the mount, in the order in which it was done."""
-        raise NotImplementedError
+        with self._read() as c:
+            return recall.weight_events(c, [mount_id])
+
+    # --- marks
 
     def pending_mark(self) -> Mark | None:
-        raise NotImplementedError
+        with self._read() as c:
+            return recall_runs.pending_mark(c)
 
     def mark(self, key: str) -> Mark | None:
-        raise NotImplementedError
+        with self._read() as c:
+            return recall_runs.find_mark(c, key)
 
     def last_mark(self) -> Mark | None:
-        raise NotImplementedError
+        """The mark asked last, whatever became of it."""
+        with self._read() as c:
+            return recall_runs.last_mark(c)
+
+    # --- coefficients
 
     def coefficients(
         self,
@@ -116,13 +197,28 @@ class History:
         within: float = 0.005,
         before_us: int | None = None,
     ) -> tuple[Coefficient, ...]:
-        raise NotImplementedError
+        """Those of a model, plane, channel and speed (``within`` is a fraction of it), oldest job first."""
+        wanted = recall_lists.coefficients_like(model, plane, channel, speed_hz, within, before_us)
+        with self._read() as c:
+            return recall_lists.coefficient_records(c, wanted)
+
+    # --- the store itself
 
     def events(self, limit: int = 50) -> tuple[StoreEvent, ...]:
-        raise NotImplementedError
+        """Newest first."""
+        with self._read() as c:
+            rows = c.execute(select(event).order_by(event.c.seq.desc()).limit(limit))
+            return tuple(StoreEvent(r.at_us, r.kind, r.text) for r in rows)
 
     def counts(self) -> Mapping[str, int]:
-        raise NotImplementedError
+        """Rows by table."""
+        with self._read() as c:
+            return {
+                t.name: c.execute(select(func.count()).select_from(t)).scalar_one()
+                for t in metadata.sorted_tables
+            }
 
     def info(self) -> StoreInfo:
-        raise NotImplementedError
+        """Identity, versions and sizes; cheap enough for ``status``."""
+        with self._read() as c:
+            return recall_lists.info(c, self.path)

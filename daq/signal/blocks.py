@@ -13,13 +13,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.signal.edges import EdgeFinder
-from daq.signal.health import RangeScan, probe_flags, pulse_flags
+from daq.signal.health import RangeScan, full_scales, probe_flags, pulse_flags
 from daq.signal.revolutions import MEDIAN_TURNS, RevolutionClock, Turns, turn_fractions, turns_of
 from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams
 from daq.signal.vectors import Accumulator, Fit, pieces
 
 SPEED_STEP_S = 0.1
 """Shortest time over which a speed is taken: jitter of the edges is not hunting."""
+WORK_S = 0.1
+"""Turns are worked on when so much of them has come, or a block is complete."""
 LEAD_S = 0.1
 """Samples kept while there is no edge: a slow edge is confirmed after it has passed."""
 
@@ -70,6 +72,7 @@ class BlockFitter:
         self._scale = np.array([c.units_per_count for c in self.channels])
         self._volts = np.array([c.volts_per_count for c in self.channels])
         self._skew_s = np.array([c.skew_s for c in self.channels])
+        self._scales = full_scales(self.channels)
         self._segment: int | None = None
         self._next = 0
         self._edges: Floats = np.empty(0)
@@ -104,7 +107,7 @@ class BlockFitter:
 
     def _begin_block(self) -> None:
         self._sums = Accumulator(self._orders)
-        self._scan = RangeScan(self.channels)
+        self._scan = RangeScan(self._scales)
         self._periods: list[Floats] = []
         self._start: float | None = None
 
@@ -125,8 +128,10 @@ class BlockFitter:
 
     def _work(self) -> Iterator[BlockFit]:
         """Work on all turns that are ready: those with an edge known after their end."""
-        turns = turns_of(self._edges)
         ready = len(self._edges) - 2
+        if ready <= self._at or self._edges[ready] < self._worth_it():
+            return
+        turns = turns_of(self._edges)
         held = self._chunks[0][0]
         while self._at < ready and turns.first_samples[self._at] < held:
             self._at += 1
@@ -144,6 +149,12 @@ class BlockFitter:
                 if fit is not None:
                     yield fit
 
+    def _worth_it(self) -> float:
+        """Where the turns that are ready must reach before they are worked on: many small steps cost more."""
+        begun = float(self._edges[self._at])
+        due = (begun if self._start is None else self._start) + self.block_s * self.rate_hz
+        return min(begun + WORK_S * self.rate_hz, due)
+
     def _take(self, turns: Turns) -> None:
         self._missed += turns.missed
         self._doubles += turns.doubles
@@ -156,10 +167,14 @@ class BlockFitter:
                 self._scan.add(counts)
 
     def _samples(self, start: int, stop: int) -> Iterator[tuple[int, NDArray[Any]]]:
-        """Probe counts of samples ``start`` to ``stop`` in pieces, each with its first sample."""
-        for at, counts in self._chunks:
-            for a, b in pieces(max(start, at), min(stop, at + len(counts))):
-                yield a, counts[a - at : b - at, 1:]
+        """Counts of samples ``start`` to ``stop`` in pieces, each with its first sample."""
+        for a, b in pieces(start, stop):
+            parts = [
+                counts[max(a - at, 0) : b - at]
+                for at, counts in self._chunks
+                if at < b and at + len(counts) > a
+            ]
+            yield a, parts[0] if len(parts) == 1 else np.concatenate(parts)
 
     def _finish(self, end: float) -> BlockFit | None:
         periods = np.concatenate(self._periods)
@@ -175,7 +190,8 @@ class BlockFitter:
         if not len(periods):
             return None
         orders = usable_orders(self._orders, float(np.median(periods)))
-        return self._sums.only(orders).solve() if 1 in orders else None
+        fit = self._sums.only(orders).solve() if 1 in orders else None
+        return fit.without_first() if fit is not None else None
 
     def _block(self, fit: Fit, speed_hz: float, start: float, end: float, periods: Floats) -> BlockFit:
         size = np.abs(self._scale)

@@ -26,6 +26,7 @@ BAND_SHARE = 0.1
 NOISE_RATIO = 8.0
 """A pulse lower than this many standard deviations of the noise is no pulse."""
 HISTOGRAM_BINS = 4096
+NOISE_SAMPLES = 4096
 
 
 # --- the level -------------------------------------------------------------------------------------------
@@ -52,8 +53,12 @@ class PulseHistogram:
 
     def count(self, pulse: NDArray[Any]) -> NDArray[np.int64]:
         """The histogram of ``pulse`` (counts, 1-D) alone."""
-        at = (pulse.astype(np.int64) - self._low) >> self._shift
-        return np.bincount(np.clip(at, 0, len(self.bins) - 1), minlength=len(self.bins))
+        at = pulse.astype(np.int64)
+        at -= self._low
+        at >>= self._shift
+        np.maximum(at, 0, out=at)
+        np.minimum(at, len(self.bins) - 1, out=at)
+        return np.bincount(at, minlength=len(self.bins))
 
     def add(self, counted: NDArray[np.int64]) -> None:
         self.bins += counted
@@ -70,11 +75,14 @@ class PulseHistogram:
 
 
 def noise_sd(pulse: NDArray[Any]) -> float:
-    """Noise of a signal that stands still most of the time: from the median step between samples, counts."""
-    if len(pulse) < 2:
+    """Noise of a signal that stands still most of the time, counts: from the median step between the first
+    few thousand samples."""
+    values = pulse[:NOISE_SAMPLES].astype(np.float64)
+    if len(values) < 2:
         return 0.0
-    steps = np.abs(np.diff(pulse.astype(np.float64)))
-    return float(np.median(steps) / (0.6744897501960817 * np.sqrt(2.0)))
+    steps = np.abs(values[1:] - values[:-1])
+    middle = len(steps) // 2
+    return float(np.partition(steps, middle)[middle]) / (0.6744897501960817 * 2.0**0.5)
 
 
 def choose_trigger(params: PulseParams, low: float, high: float, noise: float) -> Trigger | None:
@@ -188,6 +196,7 @@ class EdgeFinder:
         y = piece.astype(np.float64) * self._sign
         if trigger is None:
             self.restart()
+        if trigger is None or self._quiet(y, trigger):
             self._last = float(y[-1])
             return np.empty(0)
         crossings = self._crossings(y, trigger.level * self._sign, first_index)
@@ -196,6 +205,16 @@ class EdgeFinder:
         edges = self._edges(side, where, crossings)
         self._carry(side, where, crossings)
         return edges
+
+    def _quiet(self, y: Floats, trigger: Trigger) -> bool:
+        """True when the whole piece stays on the side where the signal was last seen: nothing to find."""
+        level = trigger.level * self._sign
+        if not self._armed:
+            return bool(y.max() < level - trigger.band) and self._since is not None
+        stays = bool(y.min() > level + trigger.band)
+        if stays:
+            self._first_cross = self._last_cross = np.nan
+        return stays and self._since is not None
 
     def _crossings(self, y: Floats, level: float, first_index: int) -> Floats:
         """Positions where ``y`` falls through ``level``, the step from the previous piece included."""
@@ -253,17 +272,28 @@ class EdgeFinder:
 def _sides(
     y: Floats, level: float, band: float, first_index: int
 ) -> tuple[NDArray[np.bool_], NDArray[np.int64]]:
-    """Samples outside the dead band, thinned to the last above and the first below at each change.
+    """The first and the last sample of each run above and of each run below the dead band, in order.
 
-    Returns (True where above, absolute indices); the ends of the piece are kept."""
-    above = y > level + band
-    outside = np.flatnonzero(above | (y < level - band))
-    side = above[outside]
-    if len(side) > 2:
-        change = side[1:] != side[:-1]
-        keep = np.concatenate(([True], change)) | np.concatenate((change, [True]))
-        outside, side = outside[keep], side[keep]
-    return side, outside + first_index
+    Returns (True where above, absolute indices)."""
+    above, below = _run_ends(y > level + band), _run_ends(y < level - band)
+    where = np.concatenate((above, below))
+    order = np.argsort(where, kind="stable")
+    side: NDArray[np.bool_] = order < len(above)
+    return side, where[order] + first_index
+
+
+def _run_ends(inside: NDArray[np.bool_]) -> NDArray[np.int64]:
+    """First and last index of each run of True; a run of one appears twice."""
+    if not inside.size:
+        return np.zeros(0, np.int64)
+    change = np.flatnonzero(inside[1:] != inside[:-1])
+    first = change[~inside[change]] + 1
+    last = change[inside[change]]
+    if inside[0]:
+        first = np.concatenate(([0], first))
+    if inside[-1]:
+        last = np.concatenate((last, [len(inside) - 1]))
+    return np.concatenate((first, last))
 
 
 def find_edges(pulse: NDArray[Any], params: PulseParams, trigger: Trigger | None = None) -> Floats:

@@ -18,6 +18,10 @@ CLIP_RUN = 3
 CLIP_SHARE = 0.001
 """Closer than this to the end of the scale, as a share of the scale."""
 FEWEST_PULSE_SAMPLES = 3
+NO_END = (-(1 << 40), 1 << 40)
+"""The scale of a channel that may reach its end."""
+TILE = 32
+"""Frames looked at together."""
 FLAT_COUNTS = 2
 """A probe whose samples stay within so many counts is flat."""
 
@@ -65,10 +69,10 @@ def describe(flags: Sequence[str]) -> tuple[str, ...]:
 
 
 class RangeScan:
-    """Extremes of probe counts, and whether they are clipped. Feed it blocks in order."""
+    """Extremes of counts, column by column, and whether they are clipped. Feed it blocks in order."""
 
-    def __init__(self, channels: Sequence[ChannelParams]) -> None:
-        scales = np.array([c.full_scale_counts for c in channels], np.int64).reshape(-1, 2)
+    def __init__(self, full_scales: Sequence[tuple[int, int]]) -> None:
+        scales = np.array(full_scales, np.int64).reshape(-1, 2)
         margin = np.floor(CLIP_SHARE * (scales[:, 1] - scales[:, 0]) / 2)
         self._lowest = scales[:, 0] + margin
         self._highest = scales[:, 1] - margin
@@ -78,10 +82,10 @@ class RangeScan:
         self._tail: NDArray[Any] | None = None
 
     def add(self, counts: NDArray[Any]) -> None:
-        """Take (frames, probes) counts that follow the previous ones."""
+        """Take (frames, columns) counts that follow the previous ones."""
         if not len(counts):
             return
-        low, high = counts.min(axis=0), counts.max(axis=0)
+        low, high = _extremes(counts)
         np.minimum(self.low, low, out=self.low)
         np.maximum(self.high, high, out=self.high)
         if ((low <= self._lowest) | (high >= self._highest)).any():
@@ -99,7 +103,7 @@ class RangeScan:
 
     @property
     def flat(self) -> NDArray[np.bool_]:
-        """Shape (probes,): nothing moves."""
+        """Shape (columns,): nothing moves."""
         spread = self.high - self.low
         return np.asarray((spread >= 0) & (spread <= FLAT_COUNTS))
 
@@ -112,6 +116,23 @@ class RangeScan:
             self.clipped |= run.any(axis=0)
 
 
+def _extremes(counts: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
+    """Lowest and highest of each column; whole rows of memory at a time where the layout allows."""
+    frames, columns = counts.shape
+    whole = frames // TILE * TILE
+    if not whole or not counts.flags.c_contiguous:
+        return counts.min(axis=0), counts.max(axis=0)
+    tiles, rest = counts[:whole].reshape(-1, TILE * columns), counts[whole:]
+    low = tiles.min(axis=0).reshape(TILE, columns)
+    high = tiles.max(axis=0).reshape(TILE, columns)
+    return np.vstack((low, rest)).min(axis=0), np.vstack((high, rest)).max(axis=0)
+
+
+def full_scales(channels: Sequence[ChannelParams]) -> list[tuple[int, int]]:
+    """Scales of all columns for a :class:`RangeScan`; the once-per-rev channel may reach its end."""
+    return [NO_END, *(c.full_scale_counts for c in channels)]
+
+
 def probe_flags(
     channels: Sequence[ChannelParams],
     scan: RangeScan,
@@ -120,14 +141,15 @@ def probe_flags(
     residual_sd: Floats,
     min_signal_to_noise: float,
 ) -> list[str]:
-    """Flags of the probes; ``gap_v``, 1X ``amplitude`` (0-peak) and ``residual_sd`` have shape (probes,)."""
+    """Flags of the probes; ``gap_v``, 1X ``amplitude`` (0-peak) and ``residual_sd`` have shape (probes,).
+    Column 0 of ``scan`` is the once-per-rev channel."""
     found = []
     for i, c in enumerate(channels):
         out = (c.gap_low_v is not None and gap_v[i] < c.gap_low_v) or (
             c.gap_high_v is not None and gap_v[i] > c.gap_high_v
         )
         weak = not amplitude[i] >= min_signal_to_noise * residual_sd[i]
-        tests = ((CLIPPED, scan.clipped[i]), (FLAT, scan.flat[i]), (GAP, out), (WEAK, weak))
+        tests = ((CLIPPED, scan.clipped[1 + i]), (FLAT, scan.flat[1 + i]), (GAP, out), (WEAK, weak))
         found += [flag(code, c.name) for code, bad in tests if bad]
     return found
 

@@ -72,7 +72,7 @@ def measure(
         return _nothing(turns, [*lost, health.NO_PULSES])
     speed_hz = turns.speed(rate_hz)
     usable = usable_orders(orders, rate_hz / speed_hz)
-    sums = _sums(counts[:, 1:], turns, channels, usable) if 1 in usable else None
+    sums = _sums(counts, turns, channels, usable) if 1 in usable else None
     if sums is None:
         return _nothing(turns, [*lost, health.FEW_SAMPLES])
     flags = lost + health.pulse_flags(turns.missed, turns.doubles, finder.pulse_length, rate_hz / speed_hz)
@@ -96,25 +96,26 @@ def _nothing(turns: Turns, flags: Sequence[str]) -> Measurement:
 
 
 def _sums(
-    probes: NDArray[Any], turns: Turns, channels: Sequence[ChannelParams], orders: tuple[int, ...]
+    counts: NDArray[Any], turns: Turns, channels: Sequence[ChannelParams], orders: tuple[int, ...]
 ) -> _Sums | None:
     """Sum up the window part by part; None when it has too few samples to solve."""
-    whole, scan = Accumulator(orders), health.RangeScan(channels)
+    scales = health.full_scales(channels)
+    whole, scan = Accumulator(orders), health.RangeScan(scales)
     parts, spans = [], []
     for part in _parts(turns):
-        sums, seen = Accumulator(orders), health.RangeScan(channels)
+        sums, seen = Accumulator(orders), health.RangeScan(scales)
         for fractions, a, b in turn_pieces(part):
-            sums.add(fractions, probes[a:b])
-            seen.add(probes[a:b])
+            sums.add(fractions, counts[a:b])
+            seen.add(counts[a:b])
         parts.append(sums.solve())
-        spans.append(seen.high - seen.low)
+        spans.append((seen.high - seen.low)[1:])
         whole.combine(sums)
         scan.combine(seen)
     fit = whole.solve()
     if fit is None:
         return None
-    solved = [p for p in parts if p is not None]
-    return _Sums(turns, fit, solved, scan, np.asarray(np.median(spans, axis=0), np.float64))
+    solved = [p.without_first() for p in parts if p is not None]
+    return _Sums(turns, fit.without_first(), solved, scan, np.asarray(np.median(spans, axis=0), np.float64))
 
 
 def _parts(turns: Turns) -> list[Turns]:

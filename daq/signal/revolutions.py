@@ -50,7 +50,8 @@ class Turns:
 
     @property
     def periods(self) -> Floats:
-        return np.diff(self.edges)
+        lengths: Floats = self.edges[1:] - self.edges[:-1]
+        return lengths
 
     @property
     def first_samples(self) -> NDArray[np.int64]:
@@ -89,50 +90,64 @@ def turns_of(edges: Floats, breaks: Sequence[int] = ()) -> Turns:
     if len(edges) < 2:
         none = np.zeros(0, np.int64)
         return Turns(edges, np.zeros(0, bool), np.zeros(0), none, none)
-    ratio = _ratio_to_neighbours(np.diff(edges))
-    long = ratio > MISSED_RATIO
-    short = ratio < DOUBLE_RATIO
-    beside = np.zeros(len(short), bool)
-    beside[1:] |= short[:-1]
-    beside[:-1] |= short[1:]
-    good = ~(long | short | (beside & (ratio < UNEVEN_RATIO)))
-    for sample in breaks:
-        good[max(0, int(np.searchsorted(edges, sample)) - 1) : np.searchsorted(edges, sample)] = False
+    ratio = _ratio_to_neighbours(edges[1:] - edges[:-1])
+    long, short = ratio > MISSED_RATIO, ratio < DOUBLE_RATIO
+    good = ~(long | short)
     missed = np.where(long, np.rint(ratio) - 1, 0).astype(np.int64)
-    return Turns(edges, good, _curvature(edges, good), missed, _count_doubles(ratio, short))
+    doubles = np.zeros(len(ratio), np.int64)
+    if short.any():
+        doubles = _count_doubles(ratio, short)
+        beside = np.zeros(len(short), bool)
+        beside[1:] |= short[:-1]
+        beside[:-1] |= short[1:]
+        good &= ~(beside & (ratio < UNEVEN_RATIO))
+    for sample in breaks:
+        at = int(np.searchsorted(edges, sample))
+        good[max(0, at - 1) : at] = False
+    return Turns(edges, good, _curvature(edges, good), missed, doubles)
 
 
 def _ratio_to_neighbours(periods: Floats) -> Floats:
     """Each period over the median of the (up to) seven around it; at the ends of the first and last seven."""
     width = min(MEDIAN_TURNS, len(periods))
-    medians = np.median(np.lib.stride_tricks.sliding_window_view(periods, width), axis=1)
     lead = (width - 1) // 2
-    at = np.clip(np.arange(len(periods)) - lead, 0, len(medians) - 1)
-    return np.asarray(periods / medians[at], np.float64)
+    last = len(periods) - width
+    windows = periods[np.arange(last + 1)[:, None] + np.arange(width)]
+    medians = np.partition(windows, lead, axis=1)[:, lead]
+    before = np.full(lead, medians[0])
+    after = np.full(width - 1 - lead, medians[-1])
+    return np.asarray(periods / np.concatenate((before, medians, after)), np.float64)
 
 
 def _count_doubles(ratio: Floats, short: NDArray[np.bool_]) -> NDArray[np.int64]:
     """Pulses too many: in each run of short turns, how many more than the turns they add up to."""
     extra = np.zeros(len(ratio), np.int64)
-    marks = np.diff(np.concatenate(([False], short, [False])).astype(np.int8))
-    starts, stops = np.flatnonzero(marks == 1), np.flatnonzero(marks == -1)
-    if len(starts):
-        total = np.concatenate(([0.0], np.cumsum(ratio)))
-        extra[stops - 1] = (stops - starts) - np.rint(total[stops] - total[starts]).astype(np.int64)
+    starts, stops = _runs(short)
+    total = np.concatenate(([0.0], np.cumsum(ratio)))
+    extra[stops - 1] = (stops - starts) - np.rint(total[stops] - total[starts]).astype(np.int64)
     return extra
+
+
+def _runs(marked: NDArray[np.bool_]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """First and stop index of each run of True."""
+    marks = np.concatenate(([False], marked, [False]))
+    change = np.flatnonzero(marks[1:] != marks[:-1])
+    return change[::2], change[1::2]
 
 
 def _curvature(edges: Floats, good: NDArray[np.bool_]) -> Floats:
     """Mean of the parabolas through (previous, own, next) edges; one of them at the ends of a stretch."""
-    curve, weight = np.zeros(len(good)), np.zeros(len(good))
-    if len(good) > 1:
-        periods = np.diff(edges)
-        both = good[:-1] & good[1:]
-        second = np.where(both, (1 / periods[1:] - 1 / periods[:-1]) / (periods[1:] + periods[:-1]), 0.0)
-        for part in (slice(0, -1), slice(1, None)):
-            curve[part] += second
-            weight[part] += both
-    return np.divide(curve, weight, out=curve, where=weight > 0)
+    curve = np.zeros(len(good))
+    if len(good) < 2:
+        return curve
+    periods = edges[1:] - edges[:-1]
+    rate = 1 / periods
+    both = good[:-1] & good[1:]
+    second = (rate[1:] - rate[:-1]) / (periods[1:] + periods[:-1]) * both
+    curve[:-1] += second
+    curve[1:] += second
+    curve[1:-1] /= np.maximum(1, both[1:].astype(np.int64) + both[:-1])
+    return curve
 
 
 def turn_fractions(turns: Turns, start: int, stop: int) -> Floats:
@@ -142,16 +157,22 @@ def turn_fractions(turns: Turns, start: int, stop: int) -> Floats:
     first = turns.first_samples
     k0 = int(np.searchsorted(first, start, side="right")) - 1
     k1 = int(np.searchsorted(first, stop, side="left"))
-    bounds = np.clip(first[k0 : k1 + 1], start, stop)
-    lengths = np.diff(bounds)
-    base = start  # positions relative to it keep their digits
-    u = np.arange(stop - start, dtype=np.float64)
-    u -= np.repeat(turns.edges[k0:k1] - base, lengths)
-    if not turns.curve[k0:k1].any():
-        return u * np.repeat(1 / turns.periods[k0:k1], lengths)
-    curve = turns.curve[k0:k1]
-    slope = 1 / turns.periods[k0:k1] - curve * turns.periods[k0:k1]
-    return u * (np.repeat(slope, lengths) + np.repeat(curve, lengths) * u)
+    edges, curve = turns.edges[k0 : k1 + 1], turns.curve[k0:k1]
+    periods = edges[1:] - edges[:-1]
+    slope = 1 / periods - curve * periods
+    u = np.arange(stop - start, dtype=np.float64)  # relative to start: positions keep their digits
+    if k1 - k0 == 1:
+        u -= edges[0] - start
+        return u * (slope[0] + curve[0] * u)
+    bounds = first[k0 : k1 + 1].copy()
+    bounds[0], bounds[-1] = start, stop
+    lengths = bounds[1:] - bounds[:-1]
+    u -= np.repeat(edges[:-1] - start, lengths)
+    out = np.repeat(curve, lengths)
+    out *= u
+    out += np.repeat(slope, lengths)
+    out *= u
+    return out
 
 
 def angles_at(edges: Floats, positions: Floats) -> Floats:

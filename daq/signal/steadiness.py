@@ -1,4 +1,4 @@
-"""Is the machine steady? Judged on the newest blocks; the answer says which figure is still out, and by how much.
+"""Is the machine steady? Judged on the newest blocks; the answer says what is still out and by how much.
 
 Limits and their sources: ``config.steadiness``. All amplitudes are 0-peak in the probe's base unit.
 """

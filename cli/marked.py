@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from typing import Any
 
-from cli.output import clean, say, shown, table, warn
+from cli.output import angle, clean, say, shown, table, warn
 
 Json = Mapping[str, Any]
 
@@ -44,6 +44,65 @@ def vector_table(vectors: list[Json], show: Mapping[str, str] | None = None) -> 
 
 
 def print_verdict(verdict: Json) -> None:
-    """The verdict of a check or trim run, as store/casework.py words it."""
-    for line in verdict["lines"]:
-        say(clean(line))
+    """Measured beside predicted, residual unbalance beside its tolerance, and the verdict."""
+    say("", _beside(verdict["channels"]), "", _residuals(verdict["planes"]))
+    say(*_verdict_lines(verdict))
+    for text in verdict["warnings"]:
+        warn(f"warning: {clean(text)}")
+
+
+def _beside(channels: list[Json]) -> str:
+    rows = []
+    for channel in channels:
+        name = {"channel": channel["channel"]}
+        size, unit, lag = shown({**name, **channel["measured"]})
+        if channel["predicted"] is None:
+            rows.append((channel["channel"], unit, size, lag, "-", "-", "-"))
+            continue
+        foreseen, _, foreseen_lag = shown({**name, **channel["predicted"]})
+        apart, _, _ = shown({**name, **channel["predicted"], "amplitude_pk": channel["difference_pk"]})
+        rows.append((channel["channel"], unit, size, lag, foreseen, foreseen_lag, apart))
+    headers = ["channel", "unit", "measured", "lag deg", "predicted", "lag deg", "apart"]
+    return table(rows, headers, "llrrrrr")
+
+
+def _residuals(planes: list[Json]) -> str:
+    rows = []
+    for plane in planes:
+        left, share = plane["residual"], plane["permissible_share_gmm"]
+        verdict = {True: "in", False: "OUT", None: "not judged"}[plane["in_tolerance"]]
+        rows.append(
+            (
+                plane["plane"],
+                "-" if left is None else f"{left['gmm']:.1f}",
+                "-" if left is None else f"{plane['residual_sd_per_component_gmm']:.1f}",
+                "-" if left is None else angle(left["against_rotation_deg"]),
+                "-" if share is None else f"{share:.1f}",
+                verdict,
+            )
+        )
+    headers = ["plane", "residual g.mm", "+-", "at deg", "permissible g.mm", "tolerance"]
+    return table(rows, headers, "rrrrrl")
+
+
+def _verdict_lines(verdict: Json) -> Iterator[str]:
+    said = {True: "IN TOLERANCE", False: "OUT OF TOLERANCE", None: "NOT JUDGED"}[verdict["in_tolerance"]]
+    runout = "runout included" if verdict["runout_included"] else f"less slow roll {verdict['slow_roll_run']}"
+    yield f"verdict of {verdict['label']} {clean(verdict['run'])}: {said} ({clean(runout)})"
+    yield f"  {clean(verdict['tolerance'])}"
+    for plane in verdict["planes"]:
+        if plane["why_not_judged"]:
+            yield f"  plane {plane['plane']} is not judged: {clean(plane['why_not_judged'])}"
+        if plane["slow_roll_bound_gmm"] is not None:
+            yield (
+                f"  plane {plane['plane']}: up to {plane['slow_roll_bound_gmm']:.1f} g.mm may be the "
+                "slow roll's own unbalance response"
+            )
+    vibration = verdict["vibration"]
+    if vibration:
+        state = "within" if vibration["within"] else "ABOVE"
+        yield (
+            f"  1X of {clean(vibration['channel'])} {vibration['largest_1x_um_pk']:.2f} um pk is {state} "
+            f"the limit of {vibration['limit_um_pk']:.2f} um pk (judged apart)"
+        )
+    yield from (f"  {clean(note)}" for note in verdict["notes"])

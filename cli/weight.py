@@ -20,7 +20,7 @@ def group() -> None: ...
 
 def _place_options(function: Any) -> Any:
     for option in (
-        click.option("--locked-out", is_flag=True, help="The drive is locked out and the rotor seen at rest."),
+        click.option("--locked-out", is_flag=True, help="The drive is locked out, the rotor seen at rest."),
         click.option("--after", metavar="RUN", help="It was done after this run (a late entry)."),
         click.option("--radius", type=Quantity("length", 1e-3), help="Default: the plane's radius."),
         click.option("--at", "angle_deg", type=Quantity("angle"), metavar="ANGLE",
@@ -100,9 +100,10 @@ def _told(answer: Json, *, as_json: bool) -> None:
     if as_json:
         print_json(answer)
     else:
-        say(*(f"{w['act']}: {place(w)}" for w in answer["weights"]), *answer.get("forces", []))
-    for line in answer.get("cautions", []):
-        warn(clean(line))
+        say(*(f"{w['act']}: {place(w)}" for w in answer["weights"]))
+    force = [answer["force"]["caution"]] if answer.get("force") else []
+    for line in (*force, *answer.get("cautions", [])):
+        warn(f"caution: {clean(line)}")
 
 
 def place(weight: Json) -> str:
@@ -134,3 +135,47 @@ def list_(stand: str | None, *, as_json: bool) -> None:
         for w in weights
     ]  # fmt: skip
     say(table(rows, ["plane", "act", "hole", "angle deg", "mass g", "radius mm", "who"], "rlrrrrl"))
+
+
+@group.command(context_settings={"max_content_width": 80})
+@stand_option
+@click.option("--plane", required=True, type=click.IntRange(1, 99))
+@click.option("--job", metavar="NUMBER", help="Default: the job of the mounted machine.")
+@json_option
+def advise(stand: str | None, plane: int, job: str | None, *, as_json: bool) -> None:
+    """A trial weight for a plane: mass, place if it may be named, force, and why."""
+    from cli.place import newest_job, reading
+    from store import consult
+    from store.balance.cautions import WEIGHT_FIT
+
+    with reading(stand) as history:
+        advice = consult.trial(history, job or newest_job(history), plane).to_dict()
+    if as_json:
+        print_json(advice)
+        return
+    say(*_advised(advice))
+    for line in WEIGHT_FIT:
+        warn(f"caution: {line}")
+
+
+def _advised(advice: Json) -> list[str]:
+    lines = [
+        f"trial weight for plane {advice['plane']}: {advice['mass_g']:.1f} g at {advice['radius_mm']:g} mm"
+    ]
+    if advice["hole"] is not None:
+        lines.append(
+            f"  in hole {advice['hole']} ({advice['hole_against_rotation_deg']:.1f} deg from the mark)"
+        )
+    elif advice["place_against_rotation_deg"] is not None:
+        lines.append(
+            f"  at {advice['place_against_rotation_deg']:.1f} deg from the rotor mark, against rotation"
+        )
+    else:
+        lines.append("  no place can be named: choose one, and note it")
+    load = advice["static_load_kg"] * 9.80665
+    share = 100 * advice["force_n"] / load
+    lines.append(
+        f"  force {advice['force_n']:.1f} N at {advice['speed_hz'] * 60:.0f} r/min, "
+        f"{share:.1f} % of the static load"
+    )
+    return [*lines, *(f"  {clean(text)}" for text in (*advice["why"], *advice["notes"]))]

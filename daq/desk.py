@@ -24,7 +24,8 @@ from daq.requests import (
     WeightAsked,
 )
 from daq.writer import Writer
-from store import asjson
+from store import asjson, consult
+from store.balance import cautions
 from store.history import History
 from store.ledger import Ledger
 from store.records import (
@@ -144,7 +145,9 @@ class Desk:
             do = ledger.drill if asked.drilled else ledger.fit
             return {"weights": [asjson.weight_json(w) for w in do(piece, who, asked.after)]}
 
-        return self._once(asked, "weight", act)
+        told = self._once(asked, "weight", act)
+        pull = None if asked.drilled else consult.force(self._history, piece)
+        return {**told, "force": pull.to_dict() if pull else None, "cautions": list(cautions.WEIGHT_FIT)}
 
     def remove(self, asked: RemovalAsked, peer: str) -> Json:
         require_lock_out(self._board, locked_out=asked.locked_out)

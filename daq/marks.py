@@ -11,7 +11,7 @@ from daq.clock import Clock
 from daq.requests import CancelAsked, MarkAsked
 from daq.signal.health import sentence
 from daq.writer import Writer
-from store import asjson, casework
+from store import asjson, consult
 from store.history import History
 from store.records import Label, Mark, MarkState, Reading
 
@@ -107,7 +107,7 @@ class MarkDesk:
         if mark.label not in JUDGED:
             return {}
         try:
-            return {"verdict": casework.judge_in(self._history, mark.job_number, reading.id).to_dict()}
+            return {"verdict": consult.verdict(self._history, mark.job_number, reading.id).to_dict()}
         except Refusal as refusal:
             return {"warnings": [f"No verdict: {refusal}"]}
 

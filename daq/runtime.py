@@ -16,7 +16,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from config.errors import StandFileError
+from config.errors import DaemonError, StandFileError
 
 LONGEST_SOCKET_PATH = 100
 """Bytes; the system allows 107."""
@@ -81,10 +81,14 @@ class Runtime:
         self.instance = secrets.token_hex(8)
 
     def make_folder(self) -> None:
-        made = not self._folder.exists()
+        """Make the folder, or take the one that is there. Raises DaemonError when it is somebody else's."""
         self._folder.mkdir(parents=True, exist_ok=True)
-        if made or self._folder.stat().st_uid == _uid():
-            give(self._folder, self._access.folder_mode, self._access.gid)
+        if self._folder.stat().st_uid != _uid():
+            raise DaemonError(
+                f"The runtime folder {self._folder} belongs to another user.",
+                "Run the daemon as that user, or name a folder of your own in REVMARK_RUNTIME.",
+            )
+        give(self._folder, self._access.folder_mode, self._access.gid)
 
     def unix_socket(self) -> socket.socket | None:
         """A listening Unix socket; None where the system has none or the path is too long for one."""
@@ -120,4 +124,5 @@ class Runtime:
 
 
 def _uid() -> int:
-    return os.getuid() if hasattr(os, "getuid") else -1
+    """This user's number; 0 where the system has none, as ``stat`` says there."""
+    return os.getuid() if hasattr(os, "getuid") else 0

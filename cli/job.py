@@ -1,0 +1,96 @@
+"""``revmark job``: one visit of one machine to the stand, from its O run to its verdict."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from typing import Any
+
+import click
+
+from cli.marked import print_verdict
+from cli.output import clean, json_option, print_json, say, shown, stand_option, table
+from cli.weight import place
+
+Json = Mapping[str, Any]
+
+
+@click.group(help="Jobs: one visit of one machine to the stand.")
+def group() -> None: ...
+
+
+@group.command(name="list")
+@stand_option
+@click.option("--machine", metavar="SERIAL", help="Only this machine.")
+@json_option
+def list_(stand: str | None, machine: str | None, *, as_json: bool) -> None:
+    """The jobs, newest first."""
+    from cli.place import reading
+    from store import asjson
+
+    with reading(stand) as history:
+        jobs = [asjson.job_json(j) for j in history.jobs(machine)]
+    if as_json:
+        print_json(jobs)
+        return
+    rows = [
+        (j["job"], j["machine"], (j["opened_utc"] or "")[:16].replace("T", " "),
+         ", ".join(f"{s:.0f}" for s in j["speeds_rpm"]))
+        for j in jobs
+    ]  # fmt: skip
+    say(table(rows, ["job", "machine", "opened UTC", "balancing r/min"], "lllr"))
+
+
+@group.command(context_settings={"max_content_width": 80})
+@click.argument("job")
+@stand_option
+@json_option
+def show(job: str, stand: str | None, *, as_json: bool) -> None:
+    """One job: its mounts, runs, weights, and the verdict of its newest check."""
+    from cli.place import reading
+    from store import consult
+
+    with reading(stand) as history:
+        told = consult.job_json(history, job)
+    if as_json:
+        print_json(told)
+        return
+    say(*_lines(told))
+    if told["verdict"]:
+        say("")
+        print_verdict(told["verdict"])
+
+
+def _lines(told: Json) -> Iterator[str]:
+    speeds = ", ".join(f"{s:.0f}" for s in told["speeds_rpm"])
+    yield f"job {clean(told['job'])}: {clean(told['machine'])}, balancing speed {speeds} r/min"
+    for mount in told["mounts"]:
+        marks = ", ".join(f"plane {m['plane']} {m['from_hole1_deg']:g} deg" for m in mount["marks"])
+        yield f"mounted {mount['at_utc'][:16].replace('T', ' ')} UTC, turning {clean(mount['rotation'])}"
+        if marks:
+            yield f"  rotor mark from hole 1: {marks} ({clean(mount['mark_how'] or 'how is not recorded')})"
+    yield ""
+    yield _runs(told["runs"])
+    if told["weights"]:
+        yield ""
+        yield table(
+            [(w["act"], place(w), w["after_run"] or "the mount", w["who"]) for w in told["weights"]],
+            ["weight", "where", "after", "who"],
+        )
+
+
+def _runs(runs: list[Json]) -> str:
+    rows = []
+    for run in runs:
+        for reading in run["readings"]:
+            for vector in reading["vectors"]:
+                if vector["order"] == 1:
+                    size, unit, lag = shown(vector)
+                    what = reading["label"] or "-"
+                    rows.append(
+                        (run["run"], reading["number"], what, f"{reading['speed_rpm']:.1f}",
+                         vector["channel"], size, unit, lag, "yes" if reading["flags"] else "")
+                    )  # fmt: skip
+        if not run["readings"]:
+            rows.append((run["run"], "-", "no reading", "-", "-", "-", "-", "-", ""))
+    headers = ["run", "no", "label", "r/min", "channel", "1X", "unit", "lag deg", "flags"]
+    return table(rows, headers, "lrlrlrlrl")

@@ -1,0 +1,95 @@
+"""Asks the history what a piece of arithmetic needs, and the arithmetic what the operator wants to know.
+
+The daemon (verdict of a mark) and the command line (correction, advice, job) both come here.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from contextlib import suppress
+from typing import Any
+from uuid import UUID
+
+from config.errors import Refusal
+from store import asjson, casework
+from store.balance.reuse import Candidate
+from store.casework_answers import CorrectionAdvice, ForceAdvice, TrialAdvice, Verdict
+from store.history import History
+from store.records import JobStory, Label, PieceDraft, Run
+
+Json = dict[str, Any]
+JUDGED = (Label.CHECK, Label.TRIM)
+
+
+def candidates(history: History, story: JobStory, before_us: int | None = None) -> tuple[Candidate, ...]:
+    """Coefficients of the same model from other jobs, each with its mount and set-up."""
+    model = story.mounts[-1].machine.model.code if story.mounts else None
+    return tuple(
+        (c, history.mount(c.mount_id), history.set_up(c.set_up_id))
+        for c in history.coefficients(model=model, before_us=before_us)
+        if c.job_number != story.job.number
+    )
+
+
+def correction(history: History, job: str, *, reuse: bool, **how: Any) -> CorrectionAdvice:
+    """See ``casework.correction_for``; ``reuse`` takes coefficients of the model's other jobs."""
+    story = history.job_story(job)
+    pool = candidates(history, story) if reuse else None
+    return casework.correction_for(story, reuse=pool, **how)
+
+
+def trial(history: History, job: str, plane: int, **how: Any) -> TrialAdvice:
+    story = history.job_story(job)
+    return casework.trial_advice(story, plane, reuse=candidates(history, story), **how)
+
+
+def force(history: History, piece: PieceDraft) -> ForceAdvice | None:
+    """How hard a piece pulls on the mounted rotor at the highest speed of its job; None = nothing mounted."""
+    mount = history.current_mount()
+    if mount is None:
+        return None
+    job = next(j for j in history.jobs() if j.id == mount.job_id)
+    return casework.fit_force(mount, piece, (*job.speeds_hz, mount.machine.service_hz))
+
+
+def verdict(history: History, job: str, reading_id: UUID) -> Verdict:
+    """How a check or trim reading stands, by what was known before its run."""
+    story = history.job_story(job)
+    run = next((r for r in story.runs if any(x.id == reading_id for x in r.readings)), None)
+    if run is None:
+        raise Refusal(f"That reading is not of job {job}, or its run is void.", "See revmark run list.")
+    pool = candidates(history, story, before_us=run.started_us)
+    return casework.judge(story, reading_id, reuse=pool)
+
+
+def newest_verdict(history: History, story: JobStory) -> Verdict | None:
+    """The verdict of the job's newest check or trim reading; None when there is none to be had."""
+    for run, reading_id in _judged(story):
+        with suppress(Refusal):
+            return casework.judge(story, reading_id, reuse=candidates(history, story, run.started_us))
+    return None
+
+
+def _judged(story: JobStory) -> Iterator[tuple[Run, UUID]]:
+    for run in reversed(story.runs):
+        for reading in reversed(run.readings):
+            if reading.label in JUDGED:
+                yield run, reading.id
+
+
+def job_json(history: History, number: str) -> Json:
+    """A whole job, as ``revmark job show --json`` prints it."""
+    story = history.job_story(number, with_void=True)
+    names = {run.id: run.name for run in story.runs}
+    found = newest_verdict(history, history.job_story(number))
+    weights = [
+        {**asjson.weight_json(w), "after_run": names.get(w.after_run_id) if w.after_run_id else None}
+        for w in story.weights
+    ]
+    return {
+        **asjson.job_json(story.job),
+        "mounts": [asjson.mount_json(m, number) for m in story.mounts],
+        "runs": [asjson.run_json(r) for r in story.runs],
+        "weights": weights,
+        "verdict": found.to_dict() if found else None,
+    }

@@ -158,7 +158,7 @@ class ReplayDriver(Driver[ReplayOptions]):
     def _ended(self, error: DriverError | None) -> EndOfSource:
         self._hold()
         self._count.errors += error is not None
-        return EndOfSource("end of source", error)
+        return EndOfSource() if error is None else EndOfSource(error.cause, error)
 
     def _hold(self) -> None:
         if self._playing is not None:

@@ -62,6 +62,8 @@ def problems_of(path: Path) -> tuple[str, ...]:
 
 
 def _vacuum_into(store: Path, part: Path) -> None:
+    """SQLite fills an empty file and keeps its mode (0660 as far as the umask lets it)."""
+    os.close(os.open(part, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o660))
     connection = sqlite3.connect(f"{store.absolute().as_uri()}?mode=ro", uri=True, isolation_level=None)
     try:
         connection.execute("VACUUM INTO ?", (str(part),))

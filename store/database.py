@@ -49,8 +49,14 @@ def writer_engine(path: Path) -> Engine:
 
     @event.listens_for(engine, "connect")
     def _pragmas(connection: sqlite3.Connection, _: Any) -> None:
+        (mode,) = connection.execute("PRAGMA journal_mode=WAL").fetchone()
+        if mode != "wal":
+            raise StoreError(
+                f"The store {path} cannot keep a write-ahead log (mode {mode}).",
+                "Put it on a local disk that this user may write to.",
+                kind="io",
+            )
         for pragma in (
-            "journal_mode=WAL",
             "synchronous=FULL",
             "foreign_keys=ON",
             "recursive_triggers=ON",

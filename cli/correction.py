@@ -114,9 +114,12 @@ def _outlook(channels: list[Json]) -> str:
         base, unit, base_lag = _shown(channel, channel["base"])
         size, _, lag = _shown(channel, channel["predicted"])
         wide, _, _ = _shown(channel, {**channel["predicted"], "amplitude_pk": channel["predicted_p90_pk"]})
-        rows.append((channel["channel"], unit, base, base_lag, size, lag, wide))
-    headers = ["channel", "unit", "base", "lag deg", "predicted", "lag deg", "9 of 10 below"]
-    return table(rows, headers, "llrrrrr")
+        middle, _, _ = _shown(
+            channel, {**channel["predicted"], "amplitude_pk": channel["predicted_median_pk"]}
+        )
+        rows.append((channel["channel"], unit, base, base_lag, size, lag, middle, wide))
+    headers = ["channel", "unit", "base", "lag", "predicted", "lag", "median", "9 of 10 below"]
+    return table(rows, headers, "llrrrrrr")
 
 
 def _shown(channel: Json, vector: Json) -> tuple[str, str, str]:

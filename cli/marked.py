@@ -24,7 +24,7 @@ def print_marked(answer: Json) -> None:
         f"{reading['speed_rpm']:.1f} r/min, {reading['revolutions']} revolutions "
         f"in {reading['duration_s']:.1f} s"
     )
-    say(vector_table(reading["vectors"], answer.get("show")))
+    say(vector_table([v for v in reading["vectors"] if v["order"] == 1], answer.get("show")))
     for text in answer.get("flag_texts", []):
         warn(f"flag: {clean(text)}")
     for text in answer.get("warnings", []):

@@ -12,6 +12,7 @@ import click
 
 F = TypeVar("F", bound=Callable[..., Any])
 Json = Mapping[str, Any]
+COLUMNS = 80
 
 
 def clean(text: object) -> str:
@@ -59,13 +60,25 @@ def table(rows: Iterable[Sequence[object]], headers: Sequence[str], right: str =
 
 
 def say(*lines: str) -> None:
+    """Print lines; prose beyond 80 columns is wrapped, a table (several lines in one) is left as it is."""
     for line in lines:
-        click.echo(line)
+        click.echo(wrapped(line))
 
 
 def warn(line: str) -> None:
     """A caution or a warning, on stderr, out of the way of data."""
-    click.echo(line, err=True)
+    click.echo(wrapped(line), err=True)
+
+
+def wrapped(line: str) -> str:
+    """One line of prose, folded at 80 columns under its own indentation."""
+    if len(line) <= COLUMNS or "\n" in line:
+        return line
+    import textwrap
+
+    indent = line[: len(line) - len(line.lstrip())]
+    return textwrap.fill(line, COLUMNS, subsequent_indent=indent + "  ", break_long_words=False,
+                         break_on_hyphens=False)  # fmt: skip
 
 
 def is_terminal() -> bool:

@@ -134,6 +134,9 @@ class Analysis:
     def _heed(self, notice: Notice) -> None:
         if notice.kind == "ended":
             self._close(self._watch.source_ended(notice.text))
+        elif notice.kind == "broken":
+            self._close(self._watch.source_ended(notice.text, "interrupted"))
+            self._recorder.event("source_broken", notice.text)
         elif notice.kind == "lost":
             self._close(self._watch.source_lost(f"source lost: {notice.text}"))
             self._recorder.event("source_lost", notice.text)

@@ -37,7 +37,7 @@ class Notice:
 
     position: int
     kind: str
-    """``ended``, ``lost`` or ``back``."""
+    """``ended``, ``broken`` (ended early by a fault), ``lost`` or ``back``."""
     text: str
 
 
@@ -113,7 +113,7 @@ class Pump:
             self._do_acts()
             came = self._driver.read(READ_S)
             if isinstance(came, EndOfSource):
-                self._note("ended", came.reason)
+                self._note("ended" if came.error is None else "broken", came.reason)
             elif came is not None:
                 self._back_off_s = FIRST_BACK_OFF_S
                 self._write(came, stop, beat)

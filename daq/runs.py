@@ -73,11 +73,13 @@ class RunWatch:
             return self._end("complete", "below minimum speed")
         return None
 
-    def source_ended(self, reason: str) -> Ended | None:
-        """The source ends by itself, perhaps while turning."""
+    def source_ended(
+        self, reason: str, state: Literal["complete", "interrupted"] = "complete"
+    ) -> Ended | None:
+        """The source ends by itself, perhaps while turning; ``interrupted`` when a fault ended it."""
         self.state = StandState.NO_PULSES
         self._since = None
-        return self._end("complete", reason) if self.open else None
+        return self._end(state, reason) if self.open else None
 
     def source_lost(self, reason: str) -> Ended | None:
         """The source failed; nothing is known of the rotor until it is back."""

@@ -96,11 +96,14 @@ def pool(
     """Sort the candidates (those of job ``not_job``, the present one, are passed over) and pool what fits."""
     fitting: dict[tuple[int, str], list[Coefficient]] = {}
     refused: list[NotReused] = []
-    for coefficient, mount, set_up in candidates:
+    known = tuple(candidates)
+    strongest = _strongest(c for c, _, _ in known)
+    for coefficient, mount, set_up in known:
         if coefficient.job_number == not_job and coefficient.machine_serial == now.mount.machine.serial:
             continue
         then = Standing(mount, set_up)
-        why = why_not(coefficient, then, now, speed_hz=speed_hz, origins=origins)
+        plane_best = strongest[_weighing(coefficient)]
+        why = why_not(coefficient, then, now, speed_hz=speed_hz, origins=origins, strongest=plane_best)
         if why:
             refused.append(_refused(coefficient, why))
         else:
@@ -112,11 +115,40 @@ def pool(
     return ReusePool(pooled, tuple(refused), _notes(fitting, serial))
 
 
+def _weighing(c: Coefficient) -> tuple[str, str, int, float]:
+    """What one set of weights told of: a plane of a job at a speed, seen by several channels."""
+    return c.machine_serial, c.job_number, c.plane, round(c.speed_hz, 3)
+
+
+def _strongest(coefficients: Iterable[Coefficient]) -> dict[tuple[str, str, int, float], Coefficient]:
+    """By plane and job the coefficient of the channel that saw the weights best.
+
+    A far probe answers weakly to a plane, and its coefficient's error, no larger than its neighbours',
+    looks large beside it; whether the weights were heavy enough is judged where they show most.
+    """
+    best: dict[tuple[str, str, int, float], Coefficient] = {}
+    for c in coefficients:
+        key = _weighing(c)
+        if key not in best or c.largest_effect_ratio > best[key].largest_effect_ratio:
+            best[key] = c
+    return best
+
+
 def why_not(
-    coefficient: Coefficient, then: Standing, now: Standing, *, speed_hz: float, origins: frozenset[Origin]
+    coefficient: Coefficient,
+    then: Standing,
+    now: Standing,
+    *,
+    speed_hz: float,
+    origins: frozenset[Origin],
+    strongest: Coefficient | None = None,
 ) -> str:
-    """Why a coefficient may not be used in the present standing, as a sentence; empty = it may, turned."""
-    reasons = _of_marks(then.mount, now.mount) + _of_record(coefficient, speed_hz, origins)
+    """Why a coefficient may not be used in the present standing, as a sentence; empty = it may, turned.
+
+    ``strongest``: of the same plane and job, the coefficient of the channel that saw the weights best.
+    """
+    reasons = _of_marks(then.mount, now.mount)
+    reasons += _of_record(coefficient, strongest or coefficient, speed_hz, origins)
     reasons += _of_model(coefficient, then.mount, now.mount)
     if not reasons:
         try:
@@ -135,17 +167,20 @@ def _of_marks(then: Mount, now: Mount) -> tuple[str, ...]:
     return ()
 
 
-def _of_record(c: Coefficient, speed_hz: float, origins: frozenset[Origin]) -> tuple[str, ...]:
+def _of_record(
+    c: Coefficient, strongest: Coefficient, speed_hz: float, origins: frozenset[Origin]
+) -> tuple[str, ...]:
     reasons: list[str] = []
     if c.origin not in origins:
         reasons.append(f"its runs are {c.origin.value}, and this job takes {_names(origins)} ones only")
     if not near(c.speed_hz, speed_hz):
         reasons.append(f"its speed is {c.speed_hz * 60:.1f} r/min, more than 0.5 % from {speed_hz * 60:.1f}")
-    if c.largest_effect_ratio < WEAK_RATIO:
+    if strongest.largest_effect_ratio < WEAK_RATIO:
         reasons.append(
-            f"its largest effect is only {c.largest_effect_ratio:.1f} times its scatter (3 needed)"
+            f"the largest effect of its weights is only {strongest.largest_effect_ratio:.1f} times the "
+            "scatter (3 needed)"
         )
-    elif c.se > WEAK_ERROR * abs(c.value):
+    elif strongest.se > WEAK_ERROR * abs(strongest.value):
         reasons.append("its error is above 50 %")
     return tuple(reasons)
 

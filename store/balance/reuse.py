@@ -23,8 +23,8 @@ Candidate = tuple[Coefficient, Mount, SetUp]
 
 WEAK_RATIO = 3.0
 WEAK_ERROR = 0.5
-"""A source coefficient whose effect ratio is below the one or whose relative error is above the other is
-not reused (REUSE (d) 9)."""
+"""A plane's coefficients are not reused when, in the channel that shows it best, the effect ratio is below
+the one or the relative error above the other (REUSE (d) 9)."""
 ENOUGH_MACHINES = 5
 PLANE_MOVED_MM = 1.0
 
@@ -96,14 +96,14 @@ def pool(
     """Sort the candidates (those of job ``not_job``, the present one, are passed over) and pool what fits."""
     fitting: dict[tuple[int, str], list[Coefficient]] = {}
     refused: list[NotReused] = []
-    known = tuple(candidates)
-    strongest = _strongest(c for c, _, _ in known)
+    known = [c for c in candidates if not _is_of(c[0], not_job, now.mount.machine.serial)]
+    weighings: dict[Weighing, list[Coefficient]] = {}
+    for coefficient, _, _ in known:
+        weighings.setdefault(_weighing(coefficient), []).append(coefficient)
     for coefficient, mount, set_up in known:
-        if coefficient.job_number == not_job and coefficient.machine_serial == now.mount.machine.serial:
-            continue
         then = Standing(mount, set_up)
-        plane_best = strongest[_weighing(coefficient)]
-        why = why_not(coefficient, then, now, speed_hz=speed_hz, origins=origins, strongest=plane_best)
+        strongest = _strongest(coefficient, weighings[_weighing(coefficient)])
+        why = why_not(coefficient, then, now, speed_hz=speed_hz, origins=origins, strongest=strongest)
         if why:
             refused.append(_refused(coefficient, why))
         else:
@@ -115,23 +115,26 @@ def pool(
     return ReusePool(pooled, tuple(refused), _notes(fitting, serial))
 
 
-def _weighing(c: Coefficient) -> tuple[str, str, int, float]:
-    """What one set of weights told of: a plane of a job at a speed, seen by several channels."""
-    return c.machine_serial, c.job_number, c.plane, round(c.speed_hz, 3)
+def _is_of(c: Coefficient, job: str | None, serial: str) -> bool:
+    return c.job_number == job and c.machine_serial == serial
 
 
-def _strongest(coefficients: Iterable[Coefficient]) -> dict[tuple[str, str, int, float], Coefficient]:
-    """By plane and job the coefficient of the channel that saw the weights best.
+Weighing = tuple[str, str, int, object, object, object]
+
+
+def _weighing(c: Coefficient) -> Weighing:
+    """What one set of weights told of: a plane in one standing of a job, seen by several channels."""
+    return c.machine_serial, c.job_number, c.plane, c.mount_id, c.set_up_id, c.origin
+
+
+def _strongest(c: Coefficient, others: Iterable[Coefficient]) -> Coefficient:
+    """Of the same weights at the same speed, the coefficient of the channel that saw them best.
 
     A far probe answers weakly to a plane, and its coefficient's error, no larger than its neighbours',
     looks large beside it; whether the weights were heavy enough is judged where they show most.
     """
-    best: dict[tuple[str, str, int, float], Coefficient] = {}
-    for c in coefficients:
-        key = _weighing(c)
-        if key not in best or c.largest_effect_ratio > best[key].largest_effect_ratio:
-            best[key] = c
-    return best
+    same = [o for o in others if near(o.speed_hz, c.speed_hz)]
+    return max(same, key=lambda o: o.largest_effect_ratio, default=c)
 
 
 def why_not(
@@ -181,7 +184,8 @@ def _of_record(
             "scatter (3 needed)"
         )
     elif strongest.se > WEAK_ERROR * abs(strongest.value):
-        reasons.append("its error is above 50 %")
+        error = 100 * strongest.se / abs(strongest.value)
+        reasons.append(f"its error is {error:.0f} % (50 % at most)")
     return tuple(reasons)
 
 

@@ -122,7 +122,8 @@ def _of_channel(then: ChannelSetUp, now: ChannelSetUp) -> tuple[str, ...]:
 
 
 def _sensitivity(channel: ChannelSetUp) -> str:
-    return f"{channel.volts_per_unit * 1e3:.6g} mV/({channel.unit})"
+    per = f"({channel.unit})" if "/" in channel.unit else channel.unit
+    return f"{channel.volts_per_unit * 1e3:.6g} mV/{per}"
 
 
 def _sense(channel: ChannelSetUp) -> str:

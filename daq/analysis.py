@@ -38,7 +38,7 @@ IDLE_HOPS, IDLE_BLOCKS = 100, 3
 """Samples kept while no block of turns is there yet: so many hops and so many blocks' worth."""
 LONGEST_TURN_S = 2.5
 """Waited for at most between two pulses, or this many turns at the minimum speed where that is longer."""
-READ_S = 0.1
+READ_S = 0.25
 QUIET_RMS_S = 1.0
 """Rms of the probes is taken over this much of the past."""
 
@@ -114,7 +114,8 @@ class Analysis:
         if notice is not None:
             self._heed(notice)
             return True
-        chunk = reader.read(self._room(reader), READ_S)
+        room = self._room(reader)
+        chunk = reader.read(room, READ_S, fewest=room)
         if chunk is None:
             return bool(self._pump.notices)
         self._feed(replace(chunk, first_sample=chunk.first_sample + self._origin_sample))

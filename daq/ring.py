@@ -268,19 +268,21 @@ class RingReader:
         """Frames written and not yet taken by this reader (those already overwritten included)."""
         return self._ring.written - self._position
 
-    def read(self, max_frames: int, timeout_s: float) -> Chunk | None:
-        """Up to ``max_frames`` frames of one segment, as soon as there is one.
+    def read(self, max_frames: int, timeout_s: float, *, fewest: int = 1) -> Chunk | None:
+        """Up to ``max_frames`` frames of one segment, as soon as ``fewest`` wait or the time is over.
 
-        None when nothing came within ``timeout_s`` seconds, or when the ring is closed and empty."""
+        Fewer come at a border between segments, and at the end of the time. None when nothing came within
+        ``timeout_s`` seconds, or when the ring is closed and empty."""
         if max_frames < 1:
             raise ValueError(f"max_frames must be at least 1, not {max_frames}")
         clock = self._ring._clock
         deadline = clock.monotonic() + timeout_s
         while True:
             self._news.clear()
-            chunk = self._take(max_frames)
-            if chunk is not None or self._ring.closed:
-                return chunk
+            if self.backlog >= fewest or self._ring.closed:
+                chunk = self._take(max_frames)
+                if chunk is not None or self._ring.closed:
+                    return chunk
             if not clock.wait(self._news, max(0.0, deadline - clock.monotonic())):
                 return self._take(max_frames)
 

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from daq.signal.edges import EdgeFinder
 from daq.signal.health import RangeScan, full_scales, probe_flags, pulse_flags
 from daq.signal.revolutions import MEDIAN_TURNS, RevolutionClock, Turns, turn_fractions, turns_of
-from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams
+from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams, median
 from daq.signal.vectors import Accumulator, Fit, pieces
 
 SPEED_STEP_S = 0.1
@@ -35,7 +35,7 @@ def speed_spread_hz(periods: Floats, rate_hz: float) -> float:
     """Standard deviation of the speed over steps of ``SPEED_STEP_S`` or one turn; ``periods`` in samples."""
     if len(periods) < 2:
         return 0.0
-    step = max(1, int(np.ceil(SPEED_STEP_S * rate_hz / np.median(periods))))
+    step = max(1, int(np.ceil(SPEED_STEP_S * rate_hz / median(periods))))
     steps = len(periods) // step
     if steps < 2:
         return 0.0
@@ -189,7 +189,7 @@ class BlockFitter:
     def _solved(self, periods: Floats) -> Fit | None:
         if not len(periods):
             return None
-        orders = usable_orders(self._orders, float(np.median(periods)))
+        orders = usable_orders(self._orders, median(periods))
         fit = self._sums.only(orders).solve() if 1 in orders else None
         return fit.without_first() if fit is not None else None
 

@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from daq.signal.shapes import Floats, PulseParams
+from daq.signal.shapes import Floats, PulseParams, median
 
 LEVEL_STEP_S = 0.25
 """The automatic level is looked at again after this time."""
@@ -23,10 +23,12 @@ LEVEL_TAIL = 0.004
 """Share of the samples beyond the low and the high level: half of the shortest pulse, 0.8 % of a turn."""
 BAND_SHARE = 0.1
 """Half of the dead band as a share of the pulse: 20 % in all (REUSE.md section 6)."""
-NOISE_RATIO = 8.0
-"""A pulse lower than this many standard deviations of the noise is no pulse."""
+NOISE_RATIO = 12.0
+"""A pulse lower than this many standard deviations of the noise is no pulse; noise alone shows 5.3."""
 HISTOGRAM_BINS = 4096
 NOISE_SAMPLES = 4096
+NOISE_STEP = 0.6744897501960817 * 1.4142135623730951
+"""Median size of the difference of two normal values of sd 1."""
 
 
 # --- the level -------------------------------------------------------------------------------------------
@@ -81,8 +83,7 @@ def noise_sd(pulse: NDArray[Any]) -> float:
     if len(values) < 2:
         return 0.0
     steps = np.abs(values[1:] - values[:-1])
-    middle = len(steps) // 2
-    return float(np.partition(steps, middle)[middle]) / (0.6744897501960817 * 2.0**0.5)
+    return median(steps) / NOISE_STEP
 
 
 def choose_trigger(params: PulseParams, low: float, high: float, noise: float) -> Trigger | None:
@@ -106,7 +107,7 @@ def trigger_of(pulse: NDArray[Any], params: PulseParams) -> Trigger | None:
         noise.append(noise_sd(piece))
     if not noise:
         return None
-    return choose_trigger(params, *histogram.levels(), float(np.median(noise)))
+    return choose_trigger(params, *histogram.levels(), median(noise))
 
 
 class TriggerFollower:
@@ -168,7 +169,7 @@ class EdgeFinder:
     @property
     def pulse_length(self) -> float:
         """Median number of samples that the newest pulses lasted, the shorter side; inf when not known."""
-        sides = [float(np.median(lengths)) for lengths in self._lengths.values() if lengths]
+        sides = [median(lengths) for lengths in self._lengths.values() if lengths]
         return min(sides, default=float("inf"))
 
     def restart(self) -> None:

@@ -13,12 +13,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from daq.signal.shapes import Floats
+from daq.signal.shapes import Floats, median
 
 MISSED_RATIO = 1.6
 DOUBLE_RATIO = 0.6
-UNEVEN_RATIO = 0.85
-"""A turn shorter than this beside a double pulse is the other half of the split turn."""
 MEDIAN_TURNS = 7
 
 
@@ -84,7 +82,8 @@ class Turns:
 def turns_of(edges: Floats, breaks: Sequence[int] = ()) -> Turns:
     """Turns between ``edges`` (ascending sample indices), judged against the median of their neighbours.
 
-    A turn over 1.6 times the median has missed pulses in it; under 0.6 times it is cut by a double pulse.
+    A turn over 1.6 times the median has missed pulses in it; under 0.6 times it is cut by a double pulse, and
+    then its neighbours do not count either: nobody knows which of the two pulses was the mark.
     ``breaks`` are samples before which others were lost: a turn across one is not good either."""
     edges = np.asarray(edges, np.float64)
     if len(edges) < 2:
@@ -97,10 +96,8 @@ def turns_of(edges: Floats, breaks: Sequence[int] = ()) -> Turns:
     doubles = np.zeros(len(ratio), np.int64)
     if short.any():
         doubles = _count_doubles(ratio, short)
-        beside = np.zeros(len(short), bool)
-        beside[1:] |= short[:-1]
-        beside[:-1] |= short[1:]
-        good &= ~(beside & (ratio < UNEVEN_RATIO))
+        good[1:] &= ~short[:-1]
+        good[:-1] &= ~short[1:]
     for sample in breaks:
         at = int(np.searchsorted(edges, sample))
         good[max(0, at - 1) : at] = False
@@ -116,7 +113,8 @@ def _ratio_to_neighbours(periods: Floats) -> Floats:
     medians = np.partition(windows, lead, axis=1)[:, lead]
     before = np.full(lead, medians[0])
     after = np.full(width - 1 - lead, medians[-1])
-    return np.asarray(periods / np.concatenate((before, medians, after)), np.float64)
+    ratio: Floats = periods / np.concatenate((before, medians, after))
+    return ratio
 
 
 def _count_doubles(ratio: Floats, short: NDArray[np.bool_]) -> NDArray[np.int64]:
@@ -163,7 +161,8 @@ def turn_fractions(turns: Turns, start: int, stop: int) -> Floats:
     u = np.arange(stop - start, dtype=np.float64)  # relative to start: positions keep their digits
     if k1 - k0 == 1:
         u -= edges[0] - start
-        return u * (slope[0] + curve[0] * u)
+        single: Floats = u * (slope[0] + curve[0] * u)
+        return single
     bounds = first[k0 : k1 + 1].copy()
     bounds[0], bounds[-1] = start, stop
     lengths = bounds[1:] - bounds[:-1]
@@ -237,5 +236,5 @@ class RevolutionClock:
             return None
         turns = turns_of(np.array(self._edges))
         good = np.flatnonzero(turns.good)
-        period = turns.periods[good[-1]] if len(good) else float(np.median(turns.periods))
+        period = turns.periods[good[-1]] if len(good) else median(turns.periods)
         return float(self.rate_hz / period)

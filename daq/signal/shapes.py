@@ -6,6 +6,7 @@ A vector is ``A e^{+j lag}``, 0-peak, in the probe's base unit (um, mm/s or m/s2
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any, Literal
 
@@ -152,6 +153,12 @@ class Measurement:
 
     def level(self, channel: str) -> ChannelLevel | None:
         return next((v for v in self.levels if v.channel == channel), None)
+
+
+def median(values: Sequence[float] | NDArray[Any]) -> float:
+    """The middle of ``values`` (1-D, not empty), the lower one of two; cheaper than numpy's."""
+    at = (len(values) - 1) // 2
+    return float(np.partition(values, at)[at])
 
 
 def noise_floor(cov: NDArray[Any]) -> float:

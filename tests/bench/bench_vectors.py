@@ -4,8 +4,8 @@
 
 16 channels (once-per-rev and 15 probes) of int16 at 51.2 kS/s in prepared blocks of 10 ms, fed one at a time
 and ten at a time. Estimator: edges, angle of every sample, least squares of offset and 1X to 3X with
-residual, covariance, extremes and flags. Beside it, in the same process on the same samples as float64: numpy's rfft
-down each channel, and a plain copy.
+residual, covariance, extremes and flags. Beside it, in the same process on the same samples as float64:
+numpy's rfft down each channel, and a plain copy.
 """
 
 from __future__ import annotations

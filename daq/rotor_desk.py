@@ -28,7 +28,7 @@ class RotorDesk:
 
     def start(self, asked: SimStartAsked, _peer: str) -> Json:
         told = {} if asked.speed_hz is None else {"rpm": asked.speed_hz * 60}
-        return dict(self._pump.act("start", rotor=self._rotor(), **told))
+        return dict(self._pump.act("start", rotor=fitted_rotor(self._history, self._stand), **told))
 
     def stop(self, _asked: SimStopAsked, _peer: str) -> Json:
         return dict(self._pump.act("stop"))
@@ -42,19 +42,19 @@ class RotorDesk:
             told["channel"] = asked.channel
         return dict(self._pump.act("fault", **told))
 
-    def _rotor(self) -> FittedRotor | None:
-        """The mounted machine with its weights; None = nothing is mounted."""
-        mount = self._history.current_mount()
-        if mount is None:
-            return None
-        pieces = []
-        for weight in self._history.weights(mount.id):
-            sign = -1.0 if weight.act == "drilled" else 1.0
-            angle = from_hole1_deg(weight, mount, self._stand.ends)
-            pieces.append(Piece(weight.plane, sign * weight.mass_g * weight.radius_mm, angle))
-        zero_end = Sense("clockwise", self._stand.identity.angles_seen_from)
-        clockwise = same_sense(mount.rotation, zero_end, self._stand.ends)
-        return FittedRotor(mount.machine.serial, tuple(pieces), clockwise)
+
+def fitted_rotor(history: History, stand: Stand) -> FittedRotor | None:
+    """The mounted machine with its weights; None = nothing is mounted."""
+    mount = history.current_mount()
+    if mount is None:
+        return None
+    pieces = []
+    for weight in history.weights(mount.id):
+        sign = -1.0 if weight.act == "drilled" else 1.0
+        angle = from_hole1_deg(weight, mount, stand.ends)
+        pieces.append(Piece(weight.plane, sign * weight.mass_g * weight.radius_mm, angle))
+    zero_end = Sense("clockwise", stand.identity.angles_seen_from)
+    return FittedRotor(mount.machine.serial, tuple(pieces), same_sense(mount.rotation, zero_end, stand.ends))
 
 
 def from_hole1_deg(weight: WeightEvent, mount: Mount, ends: Ends) -> float:

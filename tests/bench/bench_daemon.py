@@ -155,8 +155,9 @@ def main(seconds: float) -> None:
     print(
         f"exit {code}; {late.frames} frames analysed of {driver.counters.samples}; lost {marks['lost']:.0f}"
     )
+    share = 100 * marks["cpu"]
     print(
-        f"daemon {100 * marks['cpu']:.1f} % of a core, bare estimator {100 * bare:.1f} %, ratio {marks['cpu'] / bare:.2f}"
+        f"daemon {share:.1f} % of a core, bare estimator {100 * bare:.1f} %, ratio {share / bare / 100:.2f}"
     )
     print(
         f"block end to vectors: p50 {np.quantile(ms, 0.5):.1f} ms, p99 {np.quantile(ms, 0.99):.1f} ms, "

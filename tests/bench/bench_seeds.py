@@ -143,9 +143,9 @@ def main(seeds: int) -> None:
         judged = sum(row[at] is True for row in rows)
         true = np.array([row[at + 1] for row in rows])
         print(
-            f"{title}: {judged} of {seeds} seeds judged inside, {np.sum(true <= 1)} truly inside; true residual "
-            f"over its share, worst plane: median {np.median(true):.2f}, p90 {np.quantile(true, 0.9):.2f}, "
-            f"max {true.max():.2f}"
+            f"{title}: {judged} of {seeds} seeds judged inside, {np.sum(true <= 1)} truly inside; true "
+            f"residual over its share, worst plane: median {np.median(true):.2f}, "
+            f"p90 {np.quantile(true, 0.9):.2f}, max {true.max():.2f}"
         )
     both = sum(row[0] is True and row[2] is True for row in rows)
     print(f"both machines inside (the demo's exit 0): {both} of {seeds}")

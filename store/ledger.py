@@ -147,6 +147,13 @@ class Ledger:
                         raise self._doomed
             finally:
                 self._inside = False
+                self._end_transaction()
+
+    def _end_transaction(self) -> None:
+        """A COMMIT that failed leaves SQLite's transaction open, and SQLAlchemy does not end it."""
+        driver = self._driver()
+        if driver.in_transaction:
+            driver.rollback()
 
     def _driver(self) -> sqlite3.Connection:
         assert self._connection is not None

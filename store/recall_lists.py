@@ -6,13 +6,13 @@ import sqlite3
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Row, Select, func, select
+from sqlalchemy import Connection, Row, Select, case, func, select
 
 from store import recall, schema
 from store.database import beside
 from store.recall_runs import runs_of_job_ids
 from store.records import Coefficient, Label, Origin, RunLine, RunState, StoreInfo
-from store.tables import coefficient, job, raw, reading, reading_now, run_now, store_info
+from store.tables import coefficient, job, label, raw, reading, run_now, store_info
 
 # --- runs --------------------------------------------------------------------------------------------
 
@@ -21,60 +21,83 @@ def run_lines(
     c: Connection, number: str | None, serial: str | None, limit: int | None
 ) -> tuple[RunLine, ...]:
     """Newest first. Raises Refusal for a job or machine that is not there."""
-    wanted = _select_lines()
+    wanted = _select_runs()
     if number is not None:
         of = recall.job_named(c, number)
         wanted = wanted.where(run_now.c.id.in_(runs_of_job_ids(of.id)), run_now.c.job_id == of.id)
     if serial is not None:
         recall.newest_machine(c, serial)
         wanted = wanted.where(job.c.machine_serial == serial)
-    rows = c.execute(wanted.order_by(run_now.c.seq.desc()).limit(limit))
-    return tuple(_line(r) for r in rows)
+    listed = _with_readings(wanted.order_by(run_now.c.seq.desc()).limit(limit))
+    return tuple(map(_line, c.execute(listed).all()))
 
 
-def _select_lines() -> Select[Any]:
+def _select_runs() -> Select[Any]:
     first_job = job.alias("first_job")
-    mine = reading_now.c.run_id == run_now.c.id
-    speed = (
-        select(reading_now.c.speed_hz)
-        .where(mine)
-        .order_by(reading_now.c.label.is_(None), reading_now.c.seq.desc())
-        .limit(1)
-    )
     return (
         select(
-            *run_now.c["number", "unassigned_number", "first_number", "origin", "state", "reason", "void"],
-            *run_now.c["operator", "started_us", "ended_us"],
+            *run_now.c["seq", "id", "number", "unassigned_number", "first_number", "origin", "state"],
+            *run_now.c["reason", "void", "operator", "started_us", "ended_us"],
             job.c.number.label("job_number"),
             job.c.machine_serial,
             first_job.c.number.label("first_job_number"),
-            select(func.count()).where(reading.c.run_id == run_now.c.id).scalar_subquery().label("readings"),
-            select(func.group_concat(reading_now.c.label, " ")).where(mine).scalar_subquery().label("labels"),
-            speed.scalar_subquery().label("speed_hz"),
         )
         .join(job, job.c.id == run_now.c.job_id, isouter=True)
         .join(first_job, first_job.c.id == run_now.c.first_job_id, isouter=True)
     )
 
 
+def _with_readings(runs: Select[Any]) -> Select[Any]:
+    """Number of readings, labels and a speed beside each run.
+
+    ``speed_hz`` comes from the row of the maximum: SQLite takes bare columns of a query with one max()
+    from there (sqlite.org/lang_select.html, "Bare columns in an aggregate query").
+    """
+    chosen = runs.subquery("chosen")
+    later = label.alias("later")
+    newest = select(func.max(later.c.seq)).where(later.c.reading_id == reading.c.id).scalar_subquery()
+    labelled_first = case((label.c.seq.is_(None), 0), else_=2**48) + reading.c.seq
+    return (
+        select(
+            *[column for column in chosen.c if column.name not in ("seq", "id")],
+            func.count(reading.c.seq).label("readings"),
+            func.group_concat(label.c.label, " ").label("labels"),
+            reading.c.speed_hz,
+            func.max(labelled_first),
+        )
+        .select_from(chosen)
+        .join(reading, reading.c.run_id == chosen.c.id, isouter=True)
+        .join(label, label.c.seq == newest, isouter=True)
+        .group_by(chosen.c.seq)
+        .order_by(chosen.c.seq.desc())
+    )
+
+
+_ORIGINS = {o.value: o for o in Origin}
+_STATES = {s.value: s for s in RunState}
+_LABELS = {text.value: text for text in Label}
+
+
 def _line(row: Row[Any]) -> RunLine:
-    first = _name(row.first_job_number, row.first_number, row.unassigned_number)
-    name = _name(row.job_number, row.number, row.unassigned_number)
+    number, unassigned, first_number, origin, state, reason, void, operator, started_us, ended_us = row[:10]
+    job_number, machine_serial, first_job_number, readings, labels, speed_hz, _ = row[10:]
+    name = _name(job_number, number, unassigned)
+    first = _name(first_job_number, first_number, unassigned)
     return RunLine(
         name=name,
         other_name=None if first == name else first,
-        job_number=row.job_number,
-        machine_serial=row.machine_serial,
-        origin=Origin(row.origin),
-        state=RunState(row.state),
-        reason=row.reason,
-        void=row.void,
-        operator=row.operator,
-        started_us=row.started_us,
-        ended_us=row.ended_us,
-        readings=row.readings,
-        labels=tuple(Label(text) for text in (row.labels or "").split()),
-        speed_hz=row.speed_hz,
+        job_number=job_number,
+        machine_serial=machine_serial,
+        origin=_ORIGINS[origin],
+        state=_STATES[state],
+        reason=reason,
+        void=void,
+        operator=operator,
+        started_us=started_us,
+        ended_us=ended_us,
+        readings=readings,
+        labels=tuple(_LABELS[text] for text in labels.split()) if labels else (),
+        speed_hz=speed_hz,
     )
 
 

@@ -59,7 +59,9 @@ SET_UP = SetUpDraft(
     angles_seen_from="drive",
     zero="top dead centre",
     channels=(
-        ChannelSetUp("probe 1", "displacement", "um", "1", 7874.0, -1, 45.0, gap_low_v=-16.0, gap_high_v=-4.0),
+        ChannelSetUp(
+            "probe 1", "displacement", "um", "1", 7874.0, -1, 45.0, gap_low_v=-16.0, gap_high_v=-4.0
+        ),
         ChannelSetUp("probe 2", "displacement", "um", "2", 7874.0, -1, 135.0),
     ),
     pulse=PulseSetUp("tacho", "0", "falling", -11.5, 0.0),

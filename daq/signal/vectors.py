@@ -69,9 +69,28 @@ def basis(fractions: Floats, orders: Sequence[int]) -> Floats:
     return out
 
 
+_STEPS = 1024
+_CIRCLE = 2 * np.pi * np.arange(_STEPS) / _STEPS
+_COS, _SIN = np.cos(_CIRCLE), np.sin(_CIRCLE)
+
+
+def cos_sin(turns: Floats) -> tuple[Floats, Floats]:
+    """Cosine and sine of ``turns`` to 1e-15, quicker than the library where that has no vector form.
+
+    The nearest of 1024 tabled angles is turned by what remains, at most 0.0031 rad, by its power series."""
+    at = np.rint(turns * _STEPS)
+    x = turns - at * (1.0 / _STEPS)
+    x *= 2 * np.pi
+    index = at.astype(np.intp) & (_STEPS - 1)
+    x2 = x * x
+    sin_x = x * (1 - x2 * (1 / 6 - x2 * (1 / 120)))
+    cos_x = 1 - x2 * (0.5 - x2 * (1 / 24 - x2 * (1 / 720)))
+    cos_t, sin_t = _COS[index], _SIN[index]
+    return cos_t * cos_x - sin_t * sin_x, sin_t * cos_x + cos_t * sin_x
+
+
 def _fill_basis(out: Floats, fractions: Floats, orders: Sequence[int]) -> None:
-    angle = fractions * (2 * np.pi)
-    cos1, sin1 = np.cos(angle), np.sin(angle)
+    cos1, sin1 = cos_sin(fractions)
     cos_k, sin_k = cos1, sin1
     out[0] = 1.0
     for k in range(1, max(orders) + 1):

@@ -117,6 +117,8 @@ def _check_backup(path: Path, backup: Path) -> None:
     if not path.parent.is_dir():
         raise StoreError(f"There is no folder {path.parent}.", "Make the folder first.", kind="missing")
     database.refuse_network(path)
+    if not backup.is_file():
+        raise StoreError(f"There is no backup {backup}.", "Check the path.", kind="missing")
     if path.exists() and path.samefile(backup):
         raise StoreError(f"{backup} is the store itself.", "Name a backup.", kind="refused")
     version = database.check_ours(backup)

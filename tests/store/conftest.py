@@ -13,7 +13,7 @@ from store.database import create_store
 
 sys.path.insert(0, str(Path(__file__).parent))  # for store_kit, also in subprocesses' code
 
-from store_kit import FakeClock, Stand  # noqa: E402
+from store_kit import FakeClock, Stand
 
 
 @pytest.fixture

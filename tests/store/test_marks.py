@@ -344,9 +344,9 @@ def test_label_changes_the_coefficients(stand: Stand) -> None:
 def test_label_of_a_reading_that_does_not_fit(stand: Stand) -> None:
     stand.mount()
     _, found = stand.run(None, speed_hz=20.0)
-    with pytest.raises(Refusal, match="Reading 1 of run 0142/1 was taken at 1200.0 r/min"):
+    with pytest.raises(Refusal, match=r"Reading 1 of run 0142/1 was taken at 1200\.0 r/min"):
         stand.ledger.label_reading("k", found.id, Label.O, "ana")
-    with pytest.raises(Refusal, match="above the slow-roll limit of 300.0 r/min"):
+    with pytest.raises(Refusal, match=r"above the slow-roll limit of 300\.0 r/min"):
         stand.ledger.label_reading("k", found.id, Label.SLOW_ROLL, "ana", slow_roll_limit_hz=5.0)
     stand.ledger.void_run("0142/1", "no use", "ana")
     with pytest.raises(Refusal, match="is void"):

@@ -1,4 +1,4 @@
-"""Migrations are all or nothing: an exception or kill -9 inside one leaves the old store, and a retry works."""
+"""Migrations are all or nothing: after an exception or kill -9 the old store is whole, and a retry works."""
 
 from __future__ import annotations
 

@@ -46,7 +46,7 @@ def _folder(path: Path) -> dict[str, str]:
 
 @both
 def test_typo_makes_no_file(tmp_path: Path, opens: Opens) -> None:
-    with pytest.raises(StoreError, match="There is no store .*tyop.sqlite") as caught:
+    with pytest.raises(StoreError, match=r"There is no store .*tyop\.sqlite") as caught:
         opens(tmp_path / "tyop.sqlite")
     assert caught.value.kind == "missing"
     with pytest.raises(StoreError, match="There is no folder"):
@@ -141,7 +141,7 @@ def test_create_never_replaces(store_path: Path) -> None:
 
 def test_create_beside_a_left_over_log(tmp_path: Path) -> None:
     (tmp_path / "bay.sqlite-wal").write_bytes(b"x" * 40)
-    with pytest.raises(StoreError, match="bay.sqlite-wal is there already"):
+    with pytest.raises(StoreError, match=r"bay\.sqlite-wal is there already"):
         create_store(tmp_path / "bay.sqlite", clock=FakeClock(), software="x")
 
 

@@ -72,7 +72,7 @@ def test_source_tables_refuse_change(stand: Stand) -> None:
             sql = act.format(table.name)
             if table.name == "vector":  # it has no rowid
                 sql = sql.replace("rowid", "re")
-            with pytest.raises(sqlite3.IntegrityError, match="append-only|raw "):
+            with pytest.raises(sqlite3.IntegrityError, match=r"append-only|raw "):
                 other.execute(sql)
     other.close()
 

@@ -24,7 +24,7 @@ LOST_FOR_S = 30.0
 @click.option("--last", "choose", flag_value="last", help="The newest run's reading is meant.")
 @click.option("--next", "choose", flag_value="next", help="The next run is meant.")
 @click.option("--no-wait", is_flag=True, help="Come back at once; the mark stays pending.")
-@click.option("--wait", is_flag=True, help="Wait for the mark that is pending.")
+@click.option("--wait", is_flag=True, help="Wait for the mark that is pending, or say how the newest ended.")
 @click.option("--cancel", is_flag=True, help="Cancel the mark that is pending.")
 @click.option("--timeout", metavar="SECONDS", type=float, help="Cancel when it takes longer than this.")
 @click.option("--yes", is_flag=True, help="The weights are as they are meant to be.")
@@ -48,7 +48,7 @@ def command(
     if flags["cancel"]:
         return _end(client.post("/v1/mark/cancel", {"key": new_key()}), flags)
     if flags["wait"] and label is None:
-        key = client.get("/v1/mark/pending")["key"]
+        key = client.get("/v1/mark/newest")["key"]
     else:
         body = {"label": label, "choose": choose, "confirmed": flags["yes"], "who": operator}
         key = new_key()

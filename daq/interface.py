@@ -70,7 +70,7 @@ def questions(
     return (
         Question("/v1/hello", NO_PARAMETERS, lambda _given: {"stand": stand.name}),
         Question("/v1/status", NO_PARAMETERS, status),
-        Question("/v1/mark/pending", NO_PARAMETERS, marks.pending),
+        Question("/v1/mark/newest", NO_PARAMETERS, marks.newest),
         Question("/v1/mark/state/{key}", frozenset({"wait_s"}), marks.state),
     )
 

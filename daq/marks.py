@@ -76,8 +76,12 @@ class MarkDesk:
         self._board.stir()
         return self.answer(mark)
 
-    def pending(self, _given: Mapping[str, str]) -> Json:
-        return asjson.mark_json(self._pending())
+    def newest(self, _given: Mapping[str, str]) -> Json:
+        """The mark that is pending, else the one that ended last: what ``mark --wait`` waits for."""
+        mark = self._history.pending_mark() or self._history.last_mark()
+        if mark is None:
+            raise Refusal("No mark was ever asked.", "Mark a run with: revmark mark LABEL")
+        return asjson.mark_json(mark)
 
     def state(self, given: Mapping[str, str]) -> Json:
         """How a mark stands, after at most ``wait_s`` seconds or as soon as it has ended."""

@@ -136,12 +136,23 @@ class TriggerFollower:
             return
         piece = np.concatenate(self._part)
         counted = self._sum.count(piece)
+        noise = noise_sd(piece)
+        if self.trigger is None:
+            self._start_anew(counted, noise)
         self._sum.add(counted)
         self._past.append(counted)
         if len(self._past) > LEVEL_MEMORY_S / LEVEL_STEP_S:
             self._sum.add(-self._past.popleft())
-        self.trigger = choose_trigger(self._params, *self._sum.levels(), noise_sd(piece))
+        self.trigger = choose_trigger(self._params, *self._sum.levels(), noise)
         self._part, self._filled = [], 0
+
+    def _start_anew(self, counted: NDArray[np.int64], noise: float) -> None:
+        """When pulses come after a time without any, forget that time: it would hide how low they go."""
+        alone = PulseHistogram(self._params.full_scale_counts)
+        alone.add(counted)
+        if choose_trigger(self._params, *alone.levels(), noise) is not None:
+            self._past.clear()
+            self._sum.bins[:] = 0
 
 
 # --- edges -----------------------------------------------------------------------------------------------

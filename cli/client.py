@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from config.errors import DaemonError, Refusal, RevmarkError
+from config.errors import DaemonError, NeedsAnswer, Refusal, RevmarkError
 from config.places import runtime_folders
 
 PROTOCOL = 1
@@ -177,7 +177,9 @@ def _unpack(status: int, body: bytes, address: Address) -> Any:
 
 def _error_of(told: dict[str, Any]) -> RevmarkError:
     error = told.get("error") or {}
-    return Refusal(str(error.get("cause", "The daemon refused.")), str(error.get("remedy", "")))
+    cause, remedy = str(error.get("cause", "The daemon refused.")), str(error.get("remedy", ""))
+    options = tuple(str(o) for o in error.get("options") or ())
+    return NeedsAnswer(cause, remedy, options=options) if options else Refusal(cause, remedy)
 
 
 def new_key() -> str:

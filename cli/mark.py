@@ -7,6 +7,7 @@ from typing import Any
 
 import click
 
+from cli.asking import post_or_ask
 from cli.client import Client, find, new_key
 from cli.marked import print_marked
 from cli.output import json_option, operator_option, print_json, stand_option, warn
@@ -52,7 +53,7 @@ def command(
     else:
         body = {"label": label, "choose": choose, "confirmed": flags["yes"], "who": operator}
         key = new_key()
-        answer = _send(client, {"key": key, **body})
+        answer = post_or_ask(lambda b: _send(client, b), {"key": key, **body}, as_json=flags["as_json"])
         if flags["no_wait"] or answer["mark"]["state"] != "pending":
             return _end(answer, flags)
     return _wait(client, key, timeout, flags)

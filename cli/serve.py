@@ -39,5 +39,5 @@ def command(stand: str, *, verbose: bool) -> int:
         warn(f"revmark: {error}")
         return CONFIGURATION
     for line in SERVE:
-        warn(line)
+        warn(f"caution: {line}")
     return serve(checked, ready=lambda line: warn(f"ready {line}"))

@@ -7,6 +7,7 @@ from typing import Any
 
 import click
 
+from cli.asking import post_or_ask
 from cli.client import Client, find, new_key
 from cli.output import clean, json_option, operator_option, print_json, say, stand_option, table, warn
 from cli.typed import Quantity
@@ -32,7 +33,9 @@ def _place_options(function: Any) -> Any:
     return function
 
 
-def _add(mass_g: float, stand: str | None, operator: str, told: dict[str, Any], *, drilled: bool) -> Json:
+def _add(
+    mass_g: float, stand: str | None, operator: str, told: dict[str, Any], *, drilled: bool, as_json: bool
+) -> Json:
     if (told["hole"] is None) == (told["angle_deg"] is None):
         raise click.UsageError("Say where: --hole or --at.")
     body = {
@@ -49,7 +52,8 @@ def _add(mass_g: float, stand: str | None, operator: str, told: dict[str, Any], 
         "locked_out": told["locked_out"],
         "after": told["after"],
     }
-    answer: Json = Client(find(stand)).post("/v1/weight", body)
+    client = Client(find(stand))
+    answer: Json = post_or_ask(lambda b: client.post("/v1/weight", b), body, as_json=as_json)
     return answer
 
 
@@ -61,7 +65,7 @@ def _add(mass_g: float, stand: str | None, operator: str, told: dict[str, Any], 
 @json_option
 def fit(mass: float, stand: str | None, operator: str, *, as_json: bool, **told: Any) -> None:
     """Record a weight of MASS (3.0g) fitted in a plane, in a hole or at an angle."""
-    _told(_add(mass, stand, operator, told, drilled=False), as_json=as_json)
+    _told(_add(mass, stand, operator, told, drilled=False, as_json=as_json), as_json=as_json)
 
 
 @group.command(context_settings={"max_content_width": 80})
@@ -72,7 +76,7 @@ def fit(mass: float, stand: str | None, operator: str, *, as_json: bool, **told:
 @json_option
 def drill(mass: float, stand: str | None, operator: str, *, as_json: bool, **told: Any) -> None:
     """Record that MASS was drilled away at a place."""
-    _told(_add(mass, stand, operator, told, drilled=True), as_json=as_json)
+    _told(_add(mass, stand, operator, told, drilled=True, as_json=as_json), as_json=as_json)
 
 
 @group.command(context_settings={"max_content_width": 80})
@@ -80,6 +84,7 @@ def drill(mass: float, stand: str | None, operator: str, *, as_json: bool, **tol
 @click.option("--plane", required=True, type=click.IntRange(1, 99))
 @click.option("--hole", type=click.IntRange(1, 1000), help="Only what is in this hole.")
 @click.option("--all", "every", is_flag=True, help="Everything fitted in the plane.")
+@click.option("--after", metavar="RUN", help="It was done after this run (a late entry).")
 @click.option("--locked-out", is_flag=True, help="The drive is locked out and the rotor seen at rest.")
 @operator_option
 @json_option
@@ -91,9 +96,12 @@ def remove(stand: str | None, operator: str, *, as_json: bool, **told: Any) -> N
         "plane": told["plane"],
         "hole": told["hole"],
         "all": told["every"],
+        "after": told["after"],
         "locked_out": told["locked_out"],
     }
-    _told(Client(find(stand)).post("/v1/weight/remove", body), as_json=as_json)
+    client = Client(find(stand))
+    answer = post_or_ask(lambda b: client.post("/v1/weight/remove", b), body, as_json=as_json)
+    _told(answer, as_json=as_json)
 
 
 def _told(answer: Json, *, as_json: bool) -> None:

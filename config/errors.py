@@ -35,6 +35,20 @@ class Refusal(RevmarkError):
     """What was asked cannot be done as things stand (a weight while turning, no O run, no such hole)."""
 
 
+class NeedsAnswer(Refusal):
+    """A refusal that one of ``options`` answers (``--locked-out``; ``--last`` or ``--next``).
+
+    On a terminal the command asks it; anywhere else it stays a refusal that names the options.
+    """
+
+    def __init__(self, cause: str, remedy: str = "", *, options: tuple[str, ...]) -> None:
+        super().__init__(cause, remedy)
+        self.options = options
+
+    def as_dict(self) -> dict[str, Any]:
+        return {**super().as_dict(), "options": list(self.options)}
+
+
 class BadQuantity(RevmarkError):
     """A number without its unit, with the wrong unit, or out of range (``3.0`` where ``3.0g`` is meant)."""
 

@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Any
 
-from config.errors import Refusal
+from config.errors import NeedsAnswer, Refusal
 from daq.board import Board, StandState
 from daq.requests import (
     AssignAsked,
@@ -56,13 +56,14 @@ def refuse_if_turning(board: Board, what: str) -> None:
 
 
 def require_lock_out(board: Board, *, locked_out: bool) -> None:
-    """Raises Refusal unless the operator says that the drive is locked out; no pulses is not standstill."""
+    """Raises NeedsAnswer unless the operator says that the drive is locked out; no pulses is not standstill."""
     refuse_if_turning(board, "work on its weights")
     if not locked_out:
         state = board.read().state
-        raise Refusal(
+        raise NeedsAnswer(
             f"The state is {state!s}, which does not prove that the rotor stands still.",
             "Stop and lock out the drive, see it at rest, then say so with --locked-out.",
+            options=("--locked-out",),
         )
 
 
@@ -155,7 +156,9 @@ class Desk:
             raise Refusal("Which weights came off is not said.", "Name one hole, or all with --all.")
 
         def act(ledger: Ledger) -> Json:
-            gone = ledger.remove(asked.plane, asked.who or peer, hole=asked.hole, every=asked.all)
+            gone = ledger.remove(
+                asked.plane, asked.who or peer, hole=asked.hole, every=asked.all, after_run=asked.after
+            )
             return {"weights": [asjson.weight_json(w) for w in gone]}
 
         return self._once(asked, "remove", act)

@@ -111,6 +111,7 @@ class RemovalAsked(Request):
     hole: Annotated[int, Field(ge=1, le=1000)] | None = None
     all: bool = False
     locked_out: bool = False
+    after: Name | None = None
 
 
 class SimStartAsked(Request):

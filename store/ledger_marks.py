@@ -9,7 +9,7 @@ from uuid import UUID
 
 from sqlalchemy import Row, func, select
 
-from config.errors import Refusal
+from config.errors import NeedsAnswer, Refusal
 from store import ledger_coefficients, recall, recall_runs
 from store.balance.weights import pieces_at, pieces_listed, pieces_now
 from store.ledger_weights import same_weights
@@ -135,15 +135,17 @@ def _question_weights(w: Writer, q: Question, of: Job, at: Mount, run: Run | Non
     story = recall_runs.story(w.c, of.number, labelled_only=True)
     here = pieces_now(story, at) if run is None else pieces_at(story, run)
     if q.label is Label.O and not same_weights(here, pieces_listed(story, at)):
-        raise Refusal(
+        raise NeedsAnswer(
             "The weights on the rotor differ from those listed when it was mounted, "
             "so this would be no O run.",
             "If it is to be O all the same, say --yes.",
+            options=("--yes",),
         )
     if q.label is Label.O_T and _same_as_at_o(story, here):
-        raise Refusal(
+        raise NeedsAnswer(
             "The weights on the rotor are those of the O run, so there is no trial weight.",
             "Enter it with `revmark weight fit`, or say --yes.",
+            options=("--yes",),
         )
 
 
@@ -160,9 +162,10 @@ def _refuse_to_choose(w: Writer, q: Question, of: Job, at: Mount) -> None:
         return
     if any(r.label is not None for r in run.readings) or _weight_later(w, at, run):
         return
-    raise Refusal(
+    raise NeedsAnswer(
         f"Run {run.name} has readings and none is marked: {q.label} may mean that run or the next.",
         f"Say --last for run {run.name}, or --next to wait for the next run.",
+        options=("--last", "--next"),
     )
 
 

@@ -2,19 +2,17 @@
 
 from __future__ import annotations
 
-WEIGHT_FIT = (
-    "Stop and lock out the drive before you reach in; no pulses is not standstill.",
-    "Secure every weight against flying off, and check its clearance by turning the rotor by hand.",
-    "Keep everybody out of the plane of rotation at run-up.",
-)
-CORRECTION = (
-    "Check that each piece can be held at full speed, and stand clear of the plane of rotation at run-up.",
-    "Local codes and licensed practice come before any figure printed here.",
-)
-SERVE = (
-    "revmark logs and computes; it is no machine protection system and trips nothing.",
-    "Local codes and licensed practice apply to every run on this stand.",
-)
+LOCK_OUT = "Stop and lock out the drive before you reach in; no pulses is not standstill."
+RETENTION = "Secure every weight against flying off; turn the rotor by hand to check clearance."
+STAND_CLEAR = "Keep everybody out of the plane of rotation at run-up."
+LOCAL_CODES = "Local codes and licensed practice come before any figure printed here."
+NO_PROTECTION = "revmark logs and computes; it is no machine protection system and trips nothing."
+
+WEIGHT_FIT = (LOCK_OUT, RETENTION, STAND_CLEAR, LOCAL_CODES)
+"""The force of the weight at speed is said beside them (``force_caution``)."""
+CORRECTION = (LOCK_OUT, RETENTION, STAND_CLEAR, LOCAL_CODES)
+"""The force of each plane's pieces stands in the advice itself."""
+SERVE = (NO_PROTECTION, LOCK_OUT, STAND_CLEAR, LOCAL_CODES)
 
 
 def force_caution(force_n: float, share_of_load: float, speed_rpm: float) -> str:

@@ -79,8 +79,11 @@ _LABELS = {text.value: text for text in Label}
 
 
 def _line(row: Row[Any]) -> RunLine:
-    number, unassigned, first_number, origin, state, reason, void, operator, started_us, ended_us = row[:10]
-    job_number, machine_serial, first_job_number, readings, labels, speed_hz, _ = row[10:]
+    values: tuple[Any, ...] = tuple(row)
+    number, unassigned, first_number, origin, state, reason, void, operator, started_us, ended_us = values[
+        :10
+    ]
+    job_number, machine_serial, first_job_number, readings, labels, speed_hz, _ = values[10:]
     name = _name(job_number, number, unassigned)
     first = _name(first_job_number, first_number, unassigned)
     return RunLine(

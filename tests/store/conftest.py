@@ -40,3 +40,28 @@ def stand(store_path: Path, clock: FakeClock) -> Iterator[Stand]:
     stand = Stand(store_path, clock)
     yield stand
     stand.close()
+
+
+def _unchanged(path: Path, *, mounted: bool) -> Iterator[Stand]:
+    stand = Stand(path, FakeClock())
+    if mounted:
+        stand.mount()
+    before = dict(stand.history.counts())
+    yield stand
+    after = dict(stand.history.counts())
+    stand.close()
+    assert after == before  # a refusal that wrote something
+
+
+@pytest.fixture(scope="module")
+def refusing(empty_store: Path, tmp_path_factory: pytest.TempPathFactory) -> Iterator[Stand]:
+    """One stand with nothing mounted, shared by tests of refusals; at the end no row was added."""
+    folder = tmp_path_factory.mktemp("refusing")
+    yield from _unchanged(Path(shutil.copy(empty_store, folder / "bay.sqlite")), mounted=False)
+
+
+@pytest.fixture(scope="module")
+def refusing_mounted(empty_store: Path, tmp_path_factory: pytest.TempPathFactory) -> Iterator[Stand]:
+    """The same with F-204 mounted for job 0142."""
+    folder = tmp_path_factory.mktemp("refusing")
+    yield from _unchanged(Path(shutil.copy(empty_store, folder / "bay.sqlite")), mounted=True)

@@ -82,10 +82,9 @@ def test_mount_keeps_the_machine_as_it_stood(stand: Stand) -> None:
 
 @pytest.mark.parametrize("name", BAD_NAMES)
 @pytest.mark.parametrize("field", ["serial", "model_code"])
-def test_bad_machine_names(stand: Stand, field: str, name: str) -> None:
+def test_bad_machine_names(refusing: Stand, field: str, name: str) -> None:
     with pytest.raises(Refusal, match="cannot be used"):
-        stand.ledger.add_machine(replace(MACHINE, **{field: name}), "ana")
-    assert stand.history.counts()["machine"] == 1
+        refusing.ledger.add_machine(replace(MACHINE, **{field: name}), "ana")
 
 
 @pytest.mark.parametrize(
@@ -109,10 +108,9 @@ def test_bad_machine_names(stand: Stand, field: str, name: str) -> None:
         ({"model_code": "new", "planes": ()}, "not known yet"),
     ],
 )
-def test_bad_machines(stand: Stand, change: dict[str, Any], says: str) -> None:
+def test_bad_machines(refusing: Stand, change: dict[str, Any], says: str) -> None:
     with pytest.raises(Refusal, match=says):
-        stand.ledger.add_machine(replace(MACHINE, **change), "ana")
-    assert stand.history.counts()["model"] == 1
+        refusing.ledger.add_machine(replace(MACHINE, **change), "ana")
 
 
 # --- mounts ------------------------------------------------------------------------------------------
@@ -165,10 +163,9 @@ def test_mark_position_not_typed_comes_from_the_mount_before(stand: Stand) -> No
 
 
 @pytest.mark.parametrize("name", [*BAD_NAMES, "U"])
-def test_bad_job_names(stand: Stand, name: str) -> None:
+def test_bad_job_names(refusing: Stand, name: str) -> None:
     with pytest.raises(Refusal):
-        stand.mount(job_number=name)
-    assert stand.history.counts()["job"] == 0
+        refusing.mount(job_number=name)
 
 
 @pytest.mark.parametrize(
@@ -188,11 +185,9 @@ def test_bad_job_names(stand: Stand, name: str) -> None:
         ({"carry_over": True}, "not mounted before in this job"),
     ],
 )
-def test_bad_mounts_change_nothing(stand: Stand, change: dict[str, Any], says: str) -> None:
+def test_bad_mounts_change_nothing(refusing: Stand, change: dict[str, Any], says: str) -> None:
     with pytest.raises(Refusal, match=says):
-        stand.mount(**change)
-    counts = stand.history.counts()
-    assert (counts["mount"], counts["job"], counts["weight"]) == (0, 0, 0)
+        refusing.mount(**change)
 
 
 def test_mount_before_any_set_up(store_path: Any, clock: Any) -> None:

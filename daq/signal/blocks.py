@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from daq.signal.edges import EdgeFinder
 from daq.signal.health import RangeScan, full_scales, probe_flags, pulse_flags
 from daq.signal.revolutions import MEDIAN_TURNS, RevolutionClock, Turns, turn_fractions, turns_of
-from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams, median
+from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams, check_columns, median
 from daq.signal.vectors import Accumulator, Fit, pieces
 
 SPEED_STEP_S = 0.1
@@ -79,7 +79,10 @@ class BlockFitter:
         self._forget()
 
     def feed(self, counts: NDArray[Any], first_sample: int, segment: int = 0) -> list[BlockFit]:
-        """Take (frames, 1 + probes) counts; the blocks completed by them, oldest first."""
+        """Take (frames, 1 + probes) counts; the blocks completed by them, oldest first.
+
+        ``counts`` is kept for a while and must not be written to afterwards."""
+        check_columns(counts, self.channels)
         if segment != self._segment or first_sample != self._next:
             self.finder.restart()
             self.clock.restart()

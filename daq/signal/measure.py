@@ -25,6 +25,7 @@ from daq.signal.shapes import (
     Measurement,
     OrderVector,
     PulseParams,
+    check_columns,
     noise_floor,
 )
 from daq.signal.vectors import Accumulator, Fit, stated_covariance, turn_pieces
@@ -65,6 +66,7 @@ def measure(
     ``counts`` is (frames, 1 + probes) int16 or int32, column 0 the once-per-rev channel. ``breaks`` are
     frames before which samples were lost (a window across a gap). Memory beside ``counts`` does not grow with
     the window but for some bytes a turn. Nothing is raised for a bad signal: see ``flags``."""
+    check_columns(counts, channels)
     stop = len(counts) if stop is None else stop
     finder, turns = _turns(counts, pulse, start, stop, breaks)
     lost = [health.SAMPLES_LOST] if any(start < b < stop for b in breaks) else []

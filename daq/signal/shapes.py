@@ -155,6 +155,12 @@ class Measurement:
         return next((v for v in self.levels if v.channel == channel), None)
 
 
+def check_columns(counts: NDArray[Any], channels: Sequence[ChannelParams]) -> None:
+    """ValueError unless ``counts`` has the once-per-rev channel and one column for each of ``channels``."""
+    if counts.ndim != 2 or counts.shape[1] != 1 + len(channels):
+        raise ValueError(f"counts of shape {counts.shape} are not once-per-rev and {len(channels)} probes")
+
+
 def median(values: Sequence[float] | NDArray[Any]) -> float:
     """The middle of ``values`` (1-D, not empty), the lower one of two; cheaper than numpy's."""
     at = (len(values) - 1) // 2

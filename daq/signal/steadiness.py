@@ -20,7 +20,7 @@ CHANGE_SE = 3.0
 """A change within so many of its own standard errors is none."""
 SWING_SE = 6.0
 """The same for the largest of all distances between two of some eight blocks, in standard errors of one:
-0.2 % of pure noise goes beyond (Monte Carlo in tests/signal/test_steadiness.py)."""
+0.3 % of pure noise goes beyond (Monte Carlo in tests/signal/test_steadiness.py)."""
 
 UNITS: Mapping[str, str] = {"displacement": "um", "velocity": "mm/s", "acceleration": "m/s2"}
 

@@ -326,6 +326,12 @@ def test_an_empty_window_and_one_of_a_turn(signal: Callable[..., Any]) -> None:
     assert only(one).value == pytest.approx(s.probes[0][1], abs=2e-3)
 
 
+def test_columns_that_are_not_those_of_the_channels_are_refused(signal: Callable[..., Any]) -> None:
+    s = signal()
+    with pytest.raises(ValueError, match="once-per-rev and 2 probes"):
+        measure(s.counts(), s.pulse, s.channels * 2, s.rate_hz)
+
+
 # --- recordings ------------------------------------------------------------------------------------------
 
 

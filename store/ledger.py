@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import logging
 import sqlite3
 import threading
 from collections.abc import Callable, Iterator, Mapping
@@ -44,6 +45,8 @@ from store.trouble import in_our_words
 from store.writer import Writer
 
 LedgerClock = StoreClock
+
+log = logging.getLogger(__name__)
 
 
 class Ledger:
@@ -104,13 +107,18 @@ class Ledger:
             )
 
     def close(self) -> None:
-        """Fold the log into the store and let the lock go. Closing twice is fine."""
+        """Fold the log into the store and let the lock go. Closing twice is fine.
+
+        A log that cannot be folded in (full disk) stays beside the store and loses nothing.
+        """
         with self._mutex:
             if self._connection is None:
                 return
             try:
                 with in_our_words(self.path):
                     database.checkpoint(self._driver())
+            except StoreError as e:
+                log.warning("log not folded in at closing: %s", e)
             finally:
                 self._connection.close()
                 self._connection = None

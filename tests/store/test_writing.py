@@ -10,6 +10,8 @@ from sqlalchemy import event as sa_event
 from store_kit import Stand, reading, samples
 
 from config.errors import Refusal, StoreError
+from store import database
+from store.ledger import Ledger
 from store.records import Label, PieceDraft, RunState
 
 # --- once --------------------------------------------------------------------------------------------
@@ -146,6 +148,20 @@ def test_commit_that_fails(stand: Stand) -> None:
     assert stand.history.counts()["weight"] == 0
     stand.fit()
     assert stand.history.counts()["weight"] == 1
+
+
+def test_close_on_a_full_disk(stand: Stand, monkeypatch: pytest.MonkeyPatch) -> None:
+    """What is committed stays in the log; the lock is let go all the same."""
+
+    def full(connection: object) -> bool:
+        raise StoreError("No room.", "", kind="full")
+
+    stand.ledger.note_event("test", "kept")
+    monkeypatch.setattr(database, "checkpoint", full)
+    stand.ledger.close()
+    monkeypatch.undo()
+    assert [e.text for e in stand.history.events()] == ["kept"]
+    Ledger.open(stand.path, clock=stand.clock, software="x").close()
 
 
 # --- several threads ---------------------------------------------------------------------------------

@@ -7,7 +7,6 @@ invented.
 
 from __future__ import annotations
 
-import json
 import os
 import shlex
 import shutil
@@ -19,13 +18,16 @@ import time
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
+from cli.client import Client, find
 from config.errors import RevmarkError
 
-Json = dict[str, Any]
+if TYPE_CHECKING:
+    from store.casework import Verdict
+    from store.history import History
 
 STAND = "bay.toml"
 MODEL = "KR-22"
@@ -45,8 +47,9 @@ class Shell:
     def __init__(self, folder: Path) -> None:
         self.folder = folder
         self._revmark = [sys.executable, "-P", "-m", "cli.main"]
-        self._env = {**os.environ, "REVMARK_RUNTIME": str(folder / "run"), "PYTHONUNBUFFERED": "1"}
-        self._env.pop("REVMARK_STAND", None)
+        os.environ["REVMARK_RUNTIME"] = str(folder / "run")
+        os.environ.pop("REVMARK_STAND", None)
+        self._env = {**os.environ, "PYTHONUNBUFFERED": "1"}
 
     def run(self, *words: str) -> None:
         """Print and run a command; its output goes to the terminal as it comes. Raises DemoFailed."""
@@ -57,20 +60,14 @@ class Shell:
         if done.returncode:
             raise DemoFailed(f"revmark {words[0]} ended with {done.returncode}.", "Its message is above.")
 
-    def ask(self, *words: str) -> Any:
-        """The JSON of a reading command, for the demo's own decisions; nothing is printed."""
-        done = subprocess.run(
-            [*self._revmark, *words, "--json"],
-            cwd=self.folder,
-            env=self._env,
-            timeout=COMMAND_S,
-            check=False,
-            capture_output=True,
-            text=True,
-        )
-        if done.returncode:
-            raise DemoFailed(f"revmark {words[0]} failed: {done.stderr.strip()}", "Run it by hand.")
-        return json.loads(done.stdout)
+    @contextmanager
+    def reading(self) -> Iterator[History]:
+        """The demo's store, for its own decisions: what the command just printed, as numbers."""
+        from config.stand import load_stand
+        from store.history import History
+
+        with History.open(load_stand(self.folder / STAND).store_path) as history:
+            yield history
 
     @contextmanager
     def serving(self) -> Iterator[None]:
@@ -99,8 +96,11 @@ class Shell:
 
     def until_no_pulses(self) -> None:
         """Wait for the rotor to coast down, as one would at the stand."""
+        client = Client(find(None))
         self._until(
-            lambda: self.ask("status")["live"]["state"] == "no pulses", COAST_S, "the rotor to coast down"
+            lambda: client.get("/v1/status")["live"]["state"] == "no pulses",
+            COAST_S,
+            "the rotor to coast down",
         )
 
     @staticmethod
@@ -182,7 +182,9 @@ def _set(stand: Path, seed: int, pace: float) -> None:
     click.echo(f"(set in {STAND}: pace = {pace:g}, seed = {seed})")
 
 
-def _by_trial_weight(shell: Shell) -> Json:
+def _by_trial_weight(shell: Shell) -> Verdict:
+    from store import consult
+
     machine, job = FIRST
     click.echo(f"\n# Machine {machine} by trial weights, job {job}")
     shell.run(
@@ -195,14 +197,15 @@ def _by_trial_weight(shell: Shell) -> Json:
     _run(shell, "O")
     for plane in ("1", "2"):
         shell.run("weight", "advise", "--plane", plane)
-        advice = shell.ask("weight", "advise", "--plane", plane)
-        _fit(shell, {**advice, "hole": advice["hole"] or 1})
+        with shell.reading() as history:
+            advice = consult.trial(history, job, int(plane))
+        _fit(shell, advice.plane, advice.hole or 1, advice.mass_g)
         _run(shell, "O+T")
         shell.run("weight", "remove", "--plane", plane, "--all", "--locked-out")
-    return _correct(shell, job)
+    return _correct(shell, job, reuse=False)
 
 
-def _by_reuse(shell: Shell) -> Json:
+def _by_reuse(shell: Shell) -> Verdict:
     machine, job = SECOND
     click.echo(f"\n# Machine {machine} of the same model, job {job}: from history, no trial run")
     shell.run(
@@ -211,7 +214,7 @@ def _by_reuse(shell: Shell) -> Json:
     )  # fmt: skip
     _mount(shell, machine, job)
     _run(shell, "O")
-    return _correct(shell, job, "--reuse")
+    return _correct(shell, job, reuse=True)
 
 
 def _mount(shell: Shell, machine: str, job: str) -> None:
@@ -230,31 +233,34 @@ def _run(shell: Shell, label: str) -> None:
     shell.until_no_pulses()
 
 
-def _fit(shell: Shell, piece: Json) -> None:
-    shell.run(
-        "weight", "fit", f"{piece['mass_g']:.1f}g", "--plane", str(piece["plane"]),
-        "--hole", str(piece["hole"]), "--locked-out",
-    )  # fmt: skip
+def _fit(shell: Shell, plane: int, hole: int, mass_g: float) -> None:
+    shell.run("weight", "fit", f"{mass_g:.1f}g", "--plane", str(plane), "--hole", str(hole), "--locked-out")
 
 
-def _correct(shell: Shell, job: str, *how: str) -> Json:
-    shell.run("correction", *how)
-    for plane in shell.ask("correction", *how)["planes"]:
-        for piece in plane["pieces"]:
-            _fit(shell, piece)
+def _correct(shell: Shell, job: str, *, reuse: bool) -> Verdict:
+    from store import consult
+
+    shell.run("correction", *(["--reuse"] if reuse else []))
+    with shell.reading() as history:
+        advice = consult.correction(history, job, reuse=reuse)
+    for plane in advice.planes:
+        for piece in plane.pieces:
+            _fit(shell, piece.plane, piece.hole or 1, piece.mass_g)
     _run(shell, "check")
-    verdict: Json = shell.ask("job", "show", job)["verdict"]
+    with shell.reading() as history:
+        verdict = consult.newest_verdict(history, history.job_story(job))
+    if verdict is None:
+        raise DemoFailed(f"Job {job} has no verdict.", "Its runs are above.")
     return verdict
 
 
-def _summary(verdicts: Sequence[Json]) -> int:
+def _summary(verdicts: Sequence[Verdict]) -> int:
     click.echo("\n# Verdicts")
     for verdict in verdicts:
-        for plane in verdict["planes"]:
-            left, share = plane["residual"], plane["permissible_share_gmm"]
+        for plane in verdict.planes:
             click.echo(
-                f"{verdict['machine']} job {verdict['job']} plane {plane['plane']}: residual "
-                f"{left['gmm']:.0f} g.mm, permissible {share:.0f} g.mm: "
-                f"{'in' if plane['in_tolerance'] else 'OUT OF'} tolerance"
+                f"{verdict.machine_serial} job {verdict.job_number} plane {plane.plane}: residual "
+                f"{abs(plane.residual or 0):.0f} g.mm, permissible {plane.share_gmm or 0:.0f} g.mm: "
+                f"{'in' if plane.in_tolerance else 'OUT OF'} tolerance"
             )
-    return 0 if all(v["in_tolerance"] for v in verdicts) else 1
+    return 0 if all(v.in_tolerance for v in verdicts) else 1

@@ -56,7 +56,7 @@ def refuse_if_turning(board: Board, what: str) -> None:
 
 
 def require_lock_out(board: Board, *, locked_out: bool) -> None:
-    """Raises NeedsAnswer unless the operator says that the drive is locked out; no pulses is not standstill."""
+    """Raises NeedsAnswer unless the drive is said to be locked out; no pulses is not standstill."""
     refuse_if_turning(board, "work on its weights")
     if not locked_out:
         state = board.read().state

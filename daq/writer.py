@@ -86,7 +86,7 @@ class Writer:
             beat()
             self._serve_one(IDLE_S)
             self._write_records()
-        self._ledger.checkpoint()
+        self._fold()
 
     def _drained(self) -> bool:
         with self._lock:
@@ -111,7 +111,7 @@ class Writer:
             future.set_exception(error)
         else:
             future.set_result(answer)
-            self._ledger.checkpoint()
+            self._fold()
 
     def _write_records(self) -> None:
         while not self._blocked():
@@ -129,7 +129,14 @@ class Writer:
             with self._lock:
                 self._records.popleft()
             self._freed()
+            self._fold()
+
+    def _fold(self) -> None:
+        """Fold the write-ahead log into the store, after the acknowledgement; if not now, later."""
+        try:
             self._ledger.checkpoint()
+        except StoreError as error:
+            log.warning("the write-ahead log was not folded in: %s", error)
 
     def _hold(self, error: StoreError) -> None:
         self._retry_at = self._clock.monotonic() + self._retry_s

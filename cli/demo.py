@@ -23,6 +23,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from cli.client import Client, find
+from cli.output import COLUMNS
 from config.errors import RevmarkError
 
 if TYPE_CHECKING:
@@ -53,7 +54,7 @@ class Shell:
 
     def run(self, *words: str) -> None:
         """Print and run a command; its output goes to the terminal as it comes. Raises DemoFailed."""
-        click.echo("\n$ " + _folded(shlex.join(["revmark", *words])))
+        click.echo("\n$ " + _folded(["revmark", *words]))
         done = subprocess.run(
             [*self._revmark, *words], cwd=self.folder, env=self._env, timeout=COMMAND_S, check=False
         )
@@ -112,13 +113,14 @@ class Shell:
             time.sleep(0.05)
 
 
-def _folded(line: str) -> str:
-    """A command line in 80 columns, continued as a shell would take it."""
-    import textwrap
-
-    return " \\\n".join(
-        textwrap.wrap(line, 76, subsequent_indent="      ", break_long_words=False, break_on_hyphens=False)
-    )
+def _folded(words: Sequence[str]) -> str:
+    """A command in 80 columns, continued between its words as a shell would take it."""
+    lines = [""]
+    for word in map(shlex.quote, words):
+        if lines[-1] and len(lines[-1]) + 1 + len(word) > COLUMNS - 6:
+            lines.append("   ")
+        lines[-1] += f" {word}" if lines[-1] else word
+    return " \\\n".join(lines)
 
 
 @click.command(context_settings={"max_content_width": 80})

@@ -55,7 +55,7 @@ def begin(w: Writer, draft: RunDraft) -> Run:
         mount_seq=w.c.execute(select(func.max(mount.c.seq))).scalar() or 0,
         set_up_id=draft.set_up_id,
         origin=draft.origin.value,
-        operator=check_text("The operator", draft.operator),
+        operator=check_text("The operator", draft.operator or (current.who if current else "")),
         condition=dict(draft.condition),
         software=w.software,
         session_id=w.session,

@@ -1,0 +1,162 @@
+"""``revmark plot``: pictures of a job, for the file and for the wall."""
+
+from __future__ import annotations
+
+from datetime import UTC, tzinfo
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from cli.output import DEFAULT_SHOW, clean, json_option, print_json, say, stand_option, warn
+from cli.typed import Speed
+
+if TYPE_CHECKING:
+    from config.stand import Stand
+    from config.units import Display
+    from store.casework_polar import PolarPicture
+    from store.history import History
+
+SUFFIXES = (".png", ".svg", ".pdf")
+MOST_DOTS = 2**15
+"""Longest side of a PNG in dots; beyond it memory runs short long before the page is of use."""
+
+
+class PictureFile(click.ParamType[Any]):
+    """A file whose ending says how it is drawn."""
+
+    name = "file"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Path:
+        path = Path(value)
+        if path.suffix.lower() not in SUFFIXES:
+            known = f"{', '.join(SUFFIXES[:-1])} or {SUFFIXES[-1]}"
+            self.fail(f"{clean(path.name)!r} is no picture that can be drawn: end it in {known}.", param, ctx)
+        return path
+
+
+@click.group(help="Pictures of a job.")
+def group() -> None: ...
+
+
+@group.command(context_settings={"max_content_width": 80})
+@click.argument("job")
+@click.option("-o", "--output", "file", required=True, type=PictureFile(), metavar="FILE",
+              help="Where to: a name ending in .png, .svg or .pdf.")  # fmt: skip
+@stand_option
+@click.option("--channel", "channels", multiple=True, metavar="NAME", help="Only this channel.")
+@click.option("--rpm", "speed_hz", type=Speed(), metavar="SPEED", help="Balancing speed, if several.")
+@click.option(
+    "--dpi", type=click.IntRange(50, 600), default=150, show_default=True, help="Dots per inch of a PNG."
+)
+@click.option("--force", is_flag=True, help="Replace FILE if it exists.")
+@json_option
+def polar(job: str, file: Path, stand: str | None, *, as_json: bool, **told: Any) -> None:
+    """Draw a job's vectors: O, O+T and its effect, check, predicted check, trim, slow roll."""
+    _may_write(file, force=told["force"])
+    from cli.place import reading
+
+    with reading(stand) as history:
+        picture = _picture(history, job, told["channels"], told["speed_hz"])
+    _draw(picture, file, told["dpi"], _stand_file(stand))
+    if as_json:
+        print_json({"file": str(file), **picture.to_dict()})
+        return
+    names = ", ".join(clean(c.channel) for c in picture.channels)
+    say(
+        f"{clean(file)}: job {clean(picture.job_number)}, {names} at {picture.speed_hz * 60:.0f} r/min",
+        f"rotation {picture.turns} seen from {clean(picture.seen_from)}; angles grow {picture.angles_grow}",
+    )
+
+
+def _picture(history: History, job: str, channels: tuple[str, ...], speed_hz: float | None) -> PolarPicture:
+    from contextlib import suppress
+
+    from config.errors import Refusal
+    from store import consult
+    from store.casework_polar import polar_picture
+
+    story = history.job_story(job)
+    verdicts = []
+    for reading in (x for run in story.runs for x in run.readings if x.label in consult.JUDGED):
+        with suppress(Refusal):
+            verdicts.append(consult.verdict(history, job, reading.id))
+    return polar_picture(
+        story, verdicts, reuse=consult.candidates(history, story), channels=channels, speed_hz=speed_hz
+    )
+
+
+def _draw(picture: PolarPicture, file: Path, dpi: int, stand: Stand | None) -> None:
+    """Everything is drawn before the file is touched."""
+    import warnings
+
+    from cli.plots import polar as plots
+    from config.errors import Refusal
+
+    zone: tzinfo = stand.zone if stand else UTC
+    form = file.suffix.lower().removeprefix(".")
+    with warnings.catch_warnings(record=True) as missing:
+        warnings.simplefilter("always")
+        drawing = plots.draw(picture, _shows(picture, stand), zone)
+        longest = max(drawing.page.width, drawing.page.height) * dpi
+        if form == "png" and longest > MOST_DOTS:
+            raise Refusal(
+                f"The picture of {len(picture.channels)} channels would be {longest:.0f} dots long.",
+                "Take fewer dots per inch (--dpi) or name channels (--channel).",
+            )
+        data = plots.encode(drawing, form, dpi)
+    if any("missing from font" in str(w.message) for w in missing):
+        warn("note: some characters of the names are not in the font and are drawn as boxes")
+    _write(file, data)
+
+
+def _stand_file(stand: str | None) -> Stand | None:
+    """The stand file meant, for its time zone and units; None when it cannot be read any more."""
+    from cli.client import find
+    from config.errors import RevmarkError
+    from config.stand import load_stand
+
+    try:
+        return load_stand(Path(stand if stand is not None else find(None).stand_file))
+    except RevmarkError:
+        return None
+
+
+def _shows(picture: PolarPicture, stand: Stand | None) -> dict[str, Display]:
+    """How each channel is shown: as the stand file says, else by its unit."""
+    from config.units import BASE_UNIT, parse_display
+
+    kinds = {unit: kind for kind, unit in BASE_UNIT.items()}
+    found = {c.channel: parse_display(DEFAULT_SHOW[c.unit], kinds[c.unit]) for c in picture.channels}
+    for channel in picture.channels:
+        told = stand.channel(channel.channel) if stand else None
+        if told is not None and told.unit == channel.unit:
+            found[channel.channel] = told.display
+    return found
+
+
+# --- the file ------------------------------------------------------------------------------------------
+
+
+def _may_write(file: Path, *, force: bool) -> None:
+    from config.errors import Refusal
+
+    if file.is_dir() or (file.exists() and not force):
+        raise Refusal(f"{clean(file)} exists already.", "Name another file, or replace it with --force.")
+    if not file.absolute().parent.is_dir():
+        raise Refusal(f"There is no folder {clean(file.parent)}.", "Make it first, or name another one.")
+
+
+def _write(file: Path, data: bytes) -> None:
+    """Whole or not at all: an older picture stays until the new one is complete."""
+    from config.errors import Refusal
+
+    part = file.with_name(f".{file.name}.part")
+    try:
+        part.write_bytes(data)
+        part.replace(file)
+    except OSError as error:
+        part.unlink(missing_ok=True)
+        raise Refusal(
+            f"{clean(file)} cannot be written: {error.strerror}.", "Check the folder's space and permissions."
+        ) from error

@@ -1,0 +1,1 @@
+"""Pictures. matplotlib is imported when one is drawn, never before."""

@@ -331,7 +331,8 @@ def _labels(
     others = [v for v, _ in tips]
     texts = [words.role_label(v, others) if short else shorten(words.short_label(v), 1.25) for v, _ in tips]
     wanted = [Wanted(tip, text_width(t) + 0.05, 0.15) for (_, tip), t in zip(tips, texts, strict=True)]
-    boxes = place_labels(wanted, centre=dial.centre, radius=dial.radius, taken=taken, busy=busy)
+    kept = [*taken, *(Box.around(tip, 0.15, 0.15) for _, tip in tips)]
+    boxes = place_labels(wanted, centre=dial.centre, radius=dial.radius, taken=kept, busy=busy)
     for (vector, tip), text, box in zip(tips, texts, boxes, strict=True):
         near = box.nearest(tip)
         if (near[0] - tip[0]) ** 2 + (near[1] - tip[1]) ** 2 > 0.16**2:

@@ -53,11 +53,13 @@ PLANES = tuple(WeightPlane(n, 140.0, 24, NUMBERED, z) for n, z in ((1, -220.0), 
 class Bay:
     """The demo's bay for one seed, without samples."""
 
-    def __init__(self, folder: Path, seed: int) -> None:
+    def __init__(
+        self, folder: Path, seed: int, text: str | None = None, options: SimulatedOptions | None = None
+    ) -> None:
         file = folder / f"bay-{seed}.toml"
-        file.write_text(template_text("simulated"))
+        file.write_text(text or template_text("simulated"))
         self.stand = check_stand(file, options_problems)
-        self.options = SimulatedOptions(seed=seed)
+        self.options = options or SimulatedOptions(seed=seed)
         self.view = ProbeView(self.options, channel_plan(self.stand))
         create_store(self.stand.store_path, clock=SystemClock(), software=__version__)
         self.ledger = Ledger.open(self.stand.store_path, clock=SystemClock(), software=__version__)

@@ -158,8 +158,9 @@ def _own_folder(folder: Path | None) -> Path:
 
 def _play(shell: Shell, seed: int, pace: float, *, kept: bool) -> int:
     click.echo(
-        f"A simulated stand, {pace:g} times as fast as a real rotor, seed {seed}. Readings by the preset\n"
-        "'small': a window of 3 s and at least 10 turns, no lookback, no hold."
+        f"A simulated stand, {pace:g} times as fast as a real rotor, seed {seed}.\n"
+        "Readings by the preset 'small': a window of 3 s and at least 10 turns, no\n"
+        "lookback, no hold."
     )
     shell.run("stand", "new", STAND, "--like", "simulated")
     _set(shell.folder / STAND, seed, pace)
@@ -192,8 +193,8 @@ def _by_trial_weight(shell: Shell) -> Verdict:
     shell.run(
         "machine", "add", machine, "--model", MODEL, "--mass", "60kg", "--speed", f"{SPEED_RPM}rpm",
         "--grade", "2.5", "--first-critical", "2600rpm",
-        "--plane", "1: radius 140mm, holes 24, at -220mm, numbered counterclockwise from drive",
-        "--plane", "2: radius 140mm, holes 24, at 220mm, numbered counterclockwise from drive",
+        "--plane", "1: radius 140mm, holes 24, at -220mm, numbered ccw from drive",
+        "--plane", "2: radius 140mm, holes 24, at 220mm, numbered ccw from drive",
     )  # fmt: skip
     _mount(shell, machine, job)
     _run(shell, "O")

@@ -33,7 +33,7 @@ def port():
     number = tcp.getsockname()[1]
     hosts = frozenset({f"127.0.0.1:{number}", f"localhost:{number}"})
     acts = (Act("/v1/act", UnmountAsked, do),)
-    questions = (Question("/v1/ask", frozenset({"n"}), lambda given: dict(given)),)
+    questions = (Question("/v1/ask", frozenset({"n"}), dict),)
     app = application(Identity("9.9", "0001", "abc"), TOKEN, lambda: hosts, acts, questions)
     stop = threading.Event()
     thread = threading.Thread(target=serve_control, args=(app, [tcp], stop, lambda: None))

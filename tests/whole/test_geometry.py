@@ -1,8 +1,8 @@
 """Any way a stand may be built and seen from leads to the same thing: the unbalance is taken out.
 
 The simulated machine is a closed form of its own (METHODS 7.2, geometry 6.1) and knows its true rotor mark
-and direction; ledger, history and casework get only what an operator types, holes and ends included. With the run
-scatter off, what is left in each plane must be no more than the rounding of masses to 0.1 g in the two
+and direction; ledger, history and casework get only what an operator types, holes and ends included. With the
+run scatter off, what is left in each plane must be no more than the rounding of masses to 0.1 g in the two
 neighbouring holes leaves (the check is the sim's own unbalance, not a number of the code under test).
 """
 

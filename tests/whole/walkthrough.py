@@ -17,7 +17,7 @@ from pathlib import Path
 README = Path(__file__).parents[2] / "README.md"
 MARKER = re.compile(r"<!-- demo: (.+?)(?: #(\d+))? -->\n(?:\n```console\n.*?\n```\n)?", re.S)
 NUMBER = re.compile(r"-?\d+(?:\.\d+)?")
-FOLDERS = re.compile(r"^(Store: ).*$", re.M)
+FOLDERS = re.compile(r"^Store:\s+\S+$", re.M)
 
 
 def blocks(printed: str) -> list[str]:
@@ -30,7 +30,7 @@ def block_of(found: list[str], command: str, nth: int) -> str:
     """The n-th block (from 1) whose command begins with the words of ``command``."""
     joined = [(re.sub(r" \\\n\s+", " ", b), b) for b in found]
     fitting = [b for flat, b in joined if flat.startswith(f"$ revmark {command}")]
-    return FOLDERS.sub(r"\1FOLDER/bay-simulated.sqlite", fitting[nth - 1])
+    return FOLDERS.sub("Store: FOLDER/bay-simulated.sqlite", fitting[nth - 1])
 
 
 def filled(text: str, printed: str) -> str:

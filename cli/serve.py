@@ -33,6 +33,8 @@ def command(stand: str, *, verbose: bool) -> int:
         level=logging.DEBUG if verbose else logging.INFO,
         format="%(asctime)s %(levelname)-7s %(name)s: %(message)s",
     )
+    for library in () if verbose else ("alembic", "uvicorn"):
+        logging.getLogger(library).setLevel(logging.WARNING)
     try:
         checked = check_stand(stand, options_problems)
     except StandFileError as error:

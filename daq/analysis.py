@@ -84,7 +84,7 @@ class Analysis:
             if stop.is_set() and not more:
                 break
         ended = self._watch.source_lost("daemon stopped")
-        self._close(ended)
+        self._close(ended, uses_up_mark=False)
 
     # --- one step ------------------------------------------------------------------------------------
 
@@ -213,9 +213,10 @@ class Analysis:
         )
         self._recorder.began(draft)
 
-    def _close(self, ended: Ended | None) -> None:
+    def _close(self, ended: Ended | None, *, uses_up_mark: bool = True) -> None:
         if ended is not None:
-            self._recorder.ended(ended, self._clock.now_us(), self._why_no_reading())
+            now_us, why = self._clock.now_us(), self._why_no_reading()
+            self._recorder.ended(ended, now_us, why, uses_up_mark=uses_up_mark)
 
     def _why_no_reading(self) -> str:
         if self._plateaus.speeds_hz:

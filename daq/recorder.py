@@ -64,12 +64,19 @@ class Recorder:
 
         self._writer.record(write, droppable=True)
 
-    def ended(self, ended: Ended, ended_us: int, still_out: str) -> None:
+    def ended(self, ended: Ended, ended_us: int, still_out: str, *, uses_up_mark: bool = True) -> None:
+        """A run ended; a mark it gave no fitting reading is missed, unless we ended it by stopping."""
+
         def write(ledger: Ledger) -> None:
             if self._run is None:
                 return
             run, mark = ledger.close_run(
-                self._run.id, RunState(ended.state), ended.reason, ended_us, still_out, fast_enough=True
+                self._run.id,
+                RunState(ended.state),
+                ended.reason,
+                ended_us,
+                still_out,
+                fast_enough=uses_up_mark,
             )
             log.info("run %s ended: %s (%s)", run.name, run.state, run.reason)
             if mark is not None:

@@ -19,7 +19,7 @@ from typing import Any
 PRELOAD = (
     "cli.serve", "cli.mark", "cli.run", "cli.sim", "cli.status", "cli.weight", "cli.mount", "cli.machine",
     "cli.correction", "cli.job", "daq.daemon", "daq.drivers.simulated", "daq.drivers.replay", "store.history",
-    "store.consult", "tabulate",
+    "store.consult", "store.schema", "alembic.command", "alembic.runtime.migration", "tabulate",
 )  # fmt: skip
 
 

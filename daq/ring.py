@@ -130,7 +130,8 @@ class Ring:
             self._written = position + frames
             readers = tuple(self._readers)
         for reader in readers:
-            reader.wake()
+            if reader.backlog >= reader.fewest:
+                reader.wake()
 
     def reader(self, name: str, *, from_oldest: bool = False) -> RingReader:
         """A new reader that starts with the next frame written, or with the oldest one held."""
@@ -254,6 +255,8 @@ class RingReader:
         self.name = name
         self.lost_total = 0
         """Frames lost to this reader so far, reported in chunks."""
+        self.fewest = 1
+        """Frames that must wait before the writer wakes this reader; set by each read."""
         self._ring = ring
         self._position = position
         self._news = threading.Event()
@@ -275,7 +278,7 @@ class RingReader:
         ``timeout_s`` seconds, or when the ring is closed and empty."""
         if max_frames < 1:
             raise ValueError(f"max_frames must be at least 1, not {max_frames}")
-        clock = self._ring._clock
+        clock, self.fewest = self._ring._clock, fewest
         deadline = clock.monotonic() + timeout_s
         while True:
             self._news.clear()

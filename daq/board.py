@@ -69,6 +69,8 @@ class Board:
         self._clock = clock
         self._changed = threading.Condition()
         self._live = Live()
+        self.closed = False
+        """The daemon stops: nobody shall wait any longer."""
 
     def read(self) -> Live:
         with self._changed:
@@ -88,5 +90,12 @@ class Board:
     def wait(self, seconds: float) -> Live:
         """The live state after the next change, or as it is once ``seconds`` have passed."""
         with self._changed:
-            self._changed.wait(seconds)
+            if not self.closed:
+                self._changed.wait(seconds)
             return self._live
+
+    def close(self) -> None:
+        """Wake the waiting, and let nobody wait again."""
+        with self._changed:
+            self.closed = True
+            self._changed.notify_all()

@@ -28,18 +28,21 @@ from daq.drivers.registry import AnyDriver, make_driver
 from daq.interface import acts, questions
 from daq.pump import Pump
 from daq.recorder import Recorder
-from daq.runtime import Access, Runtime, access_of, give
+from daq.runtime import Access, Runtime, access_of, closed_to_group, give
 from daq.setup import channel_plan
 from daq.supervise import Part, Supervisor
 from daq.writer import Writer
 from store.database import create_store
 from store.history import History
 from store.ledger import Ledger
+from store.trouble import in_our_words
 
 OK, REFUSED, TRY_AGAIN, CONFIGURATION = 0, 1, 75, 78
 WATCH_EVERY_S = 0.5
 SWITCH_INTERVAL_S = 0.0005
 """Cuts what a Python loop elsewhere in the process costs the reader (STORE.md section 5)."""
+ENDS_WITHIN_S = {"control": 10.0, "driver": 10.0, "analysis": 20.0, "writer": 30.0}
+"""How long a part may take to stop, in the order in which they are stopped."""
 CONFIGURATION_TROUBLE = ("newer", "older", "network", "corrupt", "missing", "read_only")
 
 log = logging.getLogger("revmark.daemon")
@@ -77,7 +80,9 @@ def _code_of(error: StoreError) -> int:
 @contextmanager
 def _ledger(stand: Stand, clock: Clock, access: Access) -> Iterator[Ledger]:
     path = stand.store_path
-    if not path.exists():
+    with in_our_words(path):
+        is_there = path.exists()
+    if not is_there:
         create_store(path, clock=clock, software=__version__)
         log.info("new, empty store %s", path)
     ledger = Ledger.open(path, clock=clock, software=__version__)
@@ -95,6 +100,9 @@ def _give_store(path: Path, access: Access) -> None:
     for file in (path, *(path.with_name(path.name + end) for end in ("-wal", "-shm", ".lock"))):
         if file.exists() and (not hasattr(os, "getuid") or file.stat().st_uid == os.getuid()):
             give(file, access.store_mode, access.gid)
+    closed = closed_to_group(path.parent, access)
+    if closed is not None:
+        log.warning("%s", closed)
 
 
 class Daemon:
@@ -127,8 +135,8 @@ class Daemon:
                 code = self._watch(parts)
             finally:
                 runtime.withdraw()
-                self._take_down(parts)
-            return code
+                hung = self._take_down(parts)
+            return TRY_AGAIN if hung and code == OK else code
 
     def _parts(self, runtime: Runtime, history: History) -> list[Part]:
         """In the order of starting; they are stopped in the reverse of the order of the samples' way."""
@@ -152,9 +160,9 @@ class Daemon:
             has_socket=unix is not None,
         )
         return [
-            Part("writer", self._writer.run, 60.0, 30.0),
+            Part("writer", self._writer.run, 60.0),
             Part("driver", self._pump.run, 30.0),
-            Part("analysis", self._analysis.run, 60.0, 20.0),
+            Part("analysis", self._analysis.run, 60.0),
             Part("control", lambda stop, beat: serve_control(app, sockets, stop, beat), 30.0),
         ]
 
@@ -172,11 +180,16 @@ class Daemon:
         log.info("asked to stop")
         return OK
 
-    def _take_down(self, parts: list[Part]) -> None:
+    def _take_down(self, parts: list[Part]) -> bool:
+        """Stop the parts in order; True when one hangs. One that holds the store ends us at once."""
+        self._board.close()
         by_name = {part.name: part for part in parts}
-        for name in ("control", "driver", "analysis", "writer"):
-            self._supervisor.stop(by_name[name])
+        hung = [n for n, limit_s in ENDS_WITHIN_S.items() if not self._supervisor.stop(by_name[n], limit_s)]
+        if "writer" in hung:
+            logging.shutdown()
+            os._exit(TRY_AGAIN)
         log.info("stopped")
+        return bool(hung)
 
     @contextmanager
     def _signals(self) -> Iterator[None]:

@@ -84,14 +84,14 @@ class MarkDesk:
         return asjson.mark_json(mark)
 
     def state(self, given: Mapping[str, str]) -> Json:
-        """How a mark stands, after at most ``wait_s`` seconds or as soon as it has ended."""
+        """How a mark stands, after at most ``wait_s`` seconds or as soon as it, or the daemon, has ended."""
         until = self._clock.monotonic() + _seconds(given.get("wait_s", "0"))
         while True:
             mark = self._history.mark(given["key"])
             if mark is None:
                 raise Refusal("There is no such mark.", "Mark again.")
             left = until - self._clock.monotonic()
-            if mark.state is not MarkState.PENDING or left <= 0:
+            if mark.state is not MarkState.PENDING or left <= 0 or self._board.closed:
                 return self.answer(mark)
             self._board.wait(min(left, 1.0))
 

@@ -1,4 +1,7 @@
-"""Threads that never die quietly: each has a heartbeat, and one that ends or hangs ends the daemon aloud."""
+"""Threads that never die quietly: each has a heartbeat, and one that ends or hangs ends the daemon aloud.
+
+They are daemon threads, so that one that hangs in a driver's library cannot keep the process from ending.
+"""
 
 from __future__ import annotations
 
@@ -22,7 +25,6 @@ class Part:
     body: Body
     limit_s: float
     """A heartbeat older than this means that the part hangs."""
-    join_s: float = 10.0
     stop: threading.Event = field(default_factory=threading.Event)
     error: BaseException | None = None
     thread: threading.Thread | None = None
@@ -39,7 +41,8 @@ class Supervisor:
 
     def start(self, part: Part) -> None:
         part.beat_s = self._clock.monotonic()
-        part.thread = threading.Thread(target=self._run, args=(part,), name=f"revmark-{part.name}")
+        name = f"revmark-{part.name}"
+        part.thread = threading.Thread(target=self._run, args=(part,), name=name, daemon=True)
         part.thread.start()
 
     def _run(self, part: Part) -> None:
@@ -66,13 +69,13 @@ class Supervisor:
                 return f"The {part.name} thread has not moved for {now - part.beat_s:.0f} s."
         return None
 
-    def stop(self, part: Part) -> bool:
-        """Ask a part to end and wait for it; False when it did not within its time."""
+    def stop(self, part: Part, limit_s: float) -> bool:
+        """Ask a part to end and wait for it; False when it did not within ``limit_s`` seconds."""
         part.stop.set()
         if part.thread is None:
             return True
-        part.thread.join(part.join_s)
+        part.thread.join(limit_s)
         if part.thread.is_alive():
-            log.error("the %s thread did not end within %.0f s", part.name, part.join_s)
+            log.error("the %s thread did not end within %.3g s", part.name, limit_s)
             return False
         return True

@@ -14,6 +14,7 @@ import threading
 from collections import deque
 from collections.abc import Callable
 from concurrent.futures import Future
+from contextlib import suppress
 from typing import Any, TypeVar
 
 from config.errors import RevmarkError, StoreError
@@ -47,6 +48,7 @@ class Writer:
         self._lock = threading.Lock()
         self._retry_at = 0.0
         self._retry_s = FIRST_RETRY_S
+        self._ended = False
         self.dropped = 0
 
     def ask(self, act: Callable[[Ledger], T]) -> T:
@@ -56,6 +58,8 @@ class Writer:
         """
         future: Future[T] = Future()
         self._asked.put((act, future))
+        if self._ended:
+            self._refuse_rest()
         try:
             return future.result(ANSWER_WITHIN_S)
         except TimeoutError as error:
@@ -82,11 +86,31 @@ class Writer:
 
     def run(self, stop: threading.Event, beat: Callable[[], None]) -> None:
         """The thread's body: until ``stop`` is set and the records are written (or blocked)."""
-        while not (stop.is_set() and self._drained()):
-            beat()
-            self._serve_one(IDLE_S)
-            self._write_records()
-        self._fold()
+        try:
+            while not (stop.is_set() and self._drained()):
+                beat()
+                self._serve_one(IDLE_S)
+                self._write_records()
+            self._try_once_more()
+            self._fold()
+        finally:
+            self._ended = True
+            self._refuse_rest()
+
+    def _try_once_more(self) -> None:
+        """At the end, whatever the back-off says: what is still held then is lost, and that is said."""
+        self._retry_at = 0.0
+        self._write_records()
+        if self._records:
+            log.error("%d records could not be stored and are lost", len(self._records))
+
+    def _refuse_rest(self) -> None:
+        """Nobody shall wait for a writer that has ended."""
+        with suppress(queue.Empty):
+            while True:
+                item = self._asked.get_nowait()
+                if item is not None and item[1].set_running_or_notify_cancel():
+                    item[1].set_exception(_stopping())
 
     def _drained(self) -> bool:
         with self._lock:
@@ -121,10 +145,10 @@ class Writer:
                 return
             try:
                 head(self._ledger)
-            except StoreError as error:
-                self._hold(error)
-                return
             except RevmarkError as error:
+                if isinstance(error, StoreError) and error.kind != "refused":
+                    self._hold(error)
+                    return
                 self._drop(f"a record was refused: {error}")
             with self._lock:
                 self._records.popleft()
@@ -149,3 +173,9 @@ class Writer:
             log.warning("store writes again")
             self._retry_s, self._retry_at = FIRST_RETRY_S, 0.0
             self._board.post(store="ok")
+
+
+def _stopping() -> StoreError:
+    return StoreError(
+        "The daemon is stopping; nothing was done.", "Ask again when it runs again.", kind="locked"
+    )

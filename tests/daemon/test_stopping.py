@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import signal
 import sqlite3
+import threading
+import time
 from collections.abc import Callable
 
 import pytest
@@ -83,3 +85,35 @@ def test_a_stop_while_nothing_turns_leaves_no_run(bay: Bay) -> None:
     assert bay.stop() == 0
     with bay.history() as history:
         assert history.runs() == ()
+
+
+def test_a_client_that_waits_does_not_hold_the_stop(mounted: Bay) -> None:
+    key = mounted.mark("O", choose="next")["mark"]["key"]
+    client = mounted.client()
+    told: list[str] = []
+
+    def wait() -> None:
+        told.append(client.get(f"/v1/mark/state/{key}?wait_s=30", 30)["mark"]["state"])
+
+    thread = threading.Thread(target=wait)
+    thread.start()
+    time.sleep(0.3)  # so that it waits inside the daemon
+    begin = time.monotonic()
+    assert mounted.stop() == 0
+    assert time.monotonic() - begin < 5.0
+    thread.join(5.0)
+    assert told == ["pending"]
+    assert "Traceback" not in mounted.log
+
+
+def test_a_driver_that_hangs_does_not_hold_the_stop(mounted: Bay) -> None:
+    """It is left behind; the store is clean all the same, and the exit code says that something failed."""
+    assert mounted.stop() == 0
+    mounted.start(patch="import daq.daemon\ndaq.daemon.ENDS_WITHIN_S['driver'] = 0.5\n" + STUBBORN)
+    mounted.mark("O", choose="next")
+    assert mounted.stop() == 75
+    assert "the driver thread did not end" in mounted.log
+    log = mounted.store.with_name("bay.sqlite-wal")
+    assert not log.exists() or log.stat().st_size == 0
+    mounted.start()
+    assert mounted.status()["pending"]["label"] == "O"

@@ -9,6 +9,7 @@ from __future__ import annotations
 import json
 import os
 import socket
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -19,7 +20,6 @@ from config.places import runtime_folders
 PROTOCOL = 1
 CONNECT_S = 2.0
 ANSWER_S = 40.0
-START_IT = "Start it with: revmark serve --stand FILE"
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,17 +86,33 @@ def find(stand_file: str | None) -> Address:
     if stand_file:
         wanted = os.path.realpath(stand_file)
         known = tuple(a for a in known if a.stand_file == wanted)
-        if not known:
-            raise DaemonError(
-                f"No daemon runs for the stand file {stand_file}.",
-                f"Start it with: revmark serve --stand {stand_file}",
-            )
     if not known:
-        raise DaemonError("No daemon is running on this PC that you may talk to.", START_IT)
+        what = f"runs for the stand file {stand_file}" if stand_file else "is running on this PC"
+        raise _none_found(f"No daemon {what}", f"revmark serve --stand {stand_file or 'FILE'}")
     if len(known) > 1:
         names = ", ".join(f"{a.stand} ({a.stand_file})" for a in known)
         raise Refusal(f"Several daemons run: {names}.", "Name one with --stand FILE.")
     return known[0]
+
+
+def _none_found(what: str, start: str) -> DaemonError:
+    """There may be one all the same, behind a folder that is closed to this user."""
+    there = (f for f in runtime_folders() if os.path.isdir(f))  # noqa: PTH112 - Path.is_dir may raise
+    closed = next((f for f in there if not os.access(f, os.R_OK | os.X_OK)), None)
+    if closed is None:
+        return DaemonError(f"{what}.", f"Start it with: {start}")
+    return DaemonError(f"{what} that you may talk to: {closed} is closed to you.", _way_in(closed))
+
+
+def _way_in(folder: Path) -> str:
+    with suppress(ImportError, OSError, KeyError):
+        import grp
+
+        found = folder.stat()
+        if found.st_mode & 0o050 == 0o050:
+            group = grp.getgrgid(found.st_gid).gr_name
+            return f"Have yourself made a member of the group {group!r}, and log in anew."
+    return "Its owner can name a group of operators in the stand file (access.group)."
 
 
 class Client:

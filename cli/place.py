@@ -7,7 +7,7 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from cli.client import START_IT, find
+from cli.client import find
 from config.errors import DaemonError
 
 if TYPE_CHECKING:
@@ -24,7 +24,7 @@ def store_path(stand: str | None) -> Path:
         return Path(find(None).store)
     except DaemonError as error:
         raise DaemonError(
-            error.cause, f"Name the stand whose store to read: --stand FILE. {START_IT}"
+            error.cause, f"Name the stand whose store to read: --stand FILE. {error.remedy}"
         ) from error
 
 

@@ -20,6 +20,8 @@ from config.places import runtime_folders
 PROTOCOL = 1
 CONNECT_S = 2.0
 ANSWER_S = 40.0
+STRANGER = (401, 421)
+"""What a daemon answers to the token and the port of the one before it."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -179,6 +181,8 @@ def _unpack(status: int, body: bytes, address: Address) -> Any:
         raise DaemonError(
             f"The daemon of {address.stand} answered {status} without JSON.", "Restart it: revmark serve."
         ) from error
+    if status in STRANGER:
+        raise DaemonError(f"The daemon of {address.stand} was started anew meanwhile.", "Ask again.")
     low, high = told.get("protocol", [0, 0])
     if not low <= PROTOCOL <= high:
         raise DaemonError(

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Callable
+from contextlib import suppress
 from typing import Any
 
 import click
@@ -15,8 +17,9 @@ from config.errors import DaemonError, Refusal
 
 LABELS = ["O", "O+T", "check", "trim", "slow-roll"]
 ASK_EVERY_S = 2.0
-SLOW_RETRY_S = 1.0
-LOST_FOR_S = 30.0
+RETRY_S = 0.5
+SEND_FOR_S, LOST_FOR_S = 3.0, 30.0
+"""How long a daemon may be away, at the question and while it is waited for."""
 
 
 @click.command(context_settings={"max_content_width": 80})
@@ -45,18 +48,54 @@ def command(
     next run's. Prints the vectors and the run's number.
     """
     _check_usage(label, flags)
-    client = Client(find(stand))
+    link = Link(stand)
     if flags["cancel"]:
-        return _end(client.post("/v1/mark/cancel", {"key": new_key()}), flags)
+        return _end(link.client.post("/v1/mark/cancel", {"key": new_key()}), flags)
     if flags["wait"] and label is None:
-        key = client.get("/v1/mark/newest")["key"]
-    else:
-        body = {"label": label, "choose": choose, "confirmed": flags["yes"], "who": operator}
-        key = new_key()
-        answer = post_or_ask(lambda b: _send(client, b), {"key": key, **body}, as_json=flags["as_json"])
-        if flags["no_wait"] or answer["mark"]["state"] != "pending":
-            return _end(answer, flags)
-    return _wait(client, key, timeout, flags)
+        return _wait(link, link.client.get("/v1/mark/newest")["key"], timeout, flags)
+    key = new_key()
+    body = {"key": key, "label": label, "choose": choose, "confirmed": flags["yes"], "who": operator}
+    try:
+        answer = post_or_ask(link.mark, body, as_json=flags["as_json"])
+    except KeyboardInterrupt:
+        return _cancel(link, key, flags)
+    if flags["no_wait"] or answer["mark"]["state"] != "pending":
+        return _end(answer, flags)
+    return _wait(link, key, timeout, flags)
+
+
+class Link:
+    """The daemon of the stand; found again when it does not answer, because it may have been restarted."""
+
+    def __init__(self, stand: str | None) -> None:
+        self.client = Client(find(stand))
+
+    def mark(self, body: dict[str, Any]) -> Any:
+        """Ask for a mark; asked again under the same key, so that it is never a second mark."""
+        return self._again(lambda client: client.post("/v1/mark", body), SEND_FOR_S)
+
+    def state(self, key: str, wait_s: float) -> Any:
+        path = f"/v1/mark/state/{key}?wait_s={wait_s:.3f}"
+        return self._again(lambda client: client.get(path, wait_s), LOST_FOR_S)
+
+    def _again(self, ask: Callable[[Client], Any], for_s: float) -> Any:
+        until = time.monotonic() + for_s
+        while True:
+            try:
+                return ask(self.client)
+            except DaemonError as error:
+                if time.monotonic() > until:
+                    raise _stays(error) from error
+            time.sleep(RETRY_S)
+            with suppress(DaemonError):
+                self.client = Client(find(self.client.address.stand_file))
+
+
+def _stays(error: DaemonError) -> DaemonError:
+    return DaemonError(
+        f"{error.cause} A mark that it took stays pending.",
+        "When the daemon runs again: revmark mark --wait, or --cancel.",
+    )
 
 
 def _check_usage(label: str | None, flags: dict[str, bool]) -> None:
@@ -68,49 +107,36 @@ def _check_usage(label: str | None, flags: dict[str, bool]) -> None:
         raise click.UsageError("--wait and --no-wait exclude each other.")
 
 
-def _send(client: Client, body: dict[str, Any]) -> Any:
-    """Ask; a broken connection is tried once more under the same key, so it is never a second mark."""
-    try:
-        return client.post("/v1/mark", body)
-    except DaemonError:
-        time.sleep(SLOW_RETRY_S)
-        return client.post("/v1/mark", body)
-
-
-def _wait(client: Client, key: str, timeout: float | None, flags: dict[str, bool]) -> int:
+def _wait(link: Link, key: str, timeout: float | None, flags: dict[str, bool]) -> int:
     until = None if timeout is None else time.monotonic() + timeout
     told = ""
     try:
         while True:
-            answer = _state(client, key, until)
+            left = ASK_EVERY_S if until is None else max(0.0, until - time.monotonic())
+            answer = link.state(key, min(ASK_EVERY_S, left))
             if answer["mark"]["state"] != "pending":
                 return _end(answer, flags)
             if until is not None and time.monotonic() >= until:
-                return _cancel(client, key, flags)
+                return _cancel(link, key, flags)
             if answer["waits_for"] != told and not flags["as_json"]:
                 told = answer["waits_for"]
                 warn(f"waiting: {told}")
     except KeyboardInterrupt:
-        return _cancel(client, key, flags)
+        return _cancel(link, key, flags)
 
 
-def _state(client: Client, key: str, until: float | None) -> Any:
-    wait_s = ASK_EVERY_S if until is None else max(0.0, min(ASK_EVERY_S, until - time.monotonic()))
-    lost_at = time.monotonic()
-    while True:
+def _cancel(link: Link, key: str, flags: dict[str, bool]) -> int:
+    """Cancel; a question interrupted on its way may reach the daemon after the first try."""
+    body = {"key": new_key(), "mark": key}
+    try:
         try:
-            return client.get(f"/v1/mark/state/{key}?wait_s={wait_s:.3f}", wait_s)
-        except DaemonError as error:
-            if time.monotonic() - lost_at > LOST_FOR_S:
-                raise DaemonError(
-                    f"{error.cause} The mark stays pending.",
-                    "When the daemon runs again: revmark mark --wait, or --cancel.",
-                ) from error
-            time.sleep(SLOW_RETRY_S)
-
-
-def _cancel(client: Client, key: str, flags: dict[str, bool]) -> int:
-    return _end(client.post("/v1/mark/cancel", {"key": new_key(), "mark": key}), flags)
+            answer = link.client.post("/v1/mark/cancel", body)
+        except Refusal:
+            time.sleep(RETRY_S)
+            answer = link.client.post("/v1/mark/cancel", body)
+    except DaemonError as error:
+        raise _stays(error) from error
+    return _end(answer, flags)
 
 
 def _end(answer: Any, flags: dict[str, bool]) -> int:
@@ -121,7 +147,7 @@ def _end(answer: Any, flags: dict[str, bool]) -> int:
         print_marked(answer)
     if state == "missed":
         raise Refusal(
-            f"The run ended without a reading that fits: {answer['mark']['detail']}",
+            f"The run ended without a reading that fits: {answer['mark']['detail'].rstrip('.')}.",
             "Run again longer at the balancing speed, and mark again.",
         )
     if state == "cancelled" and not flags["cancel"]:

@@ -156,11 +156,14 @@ def _same_as_at_o(story: JobStory, here: Sequence[WeightEvent]) -> bool:
 
 
 def _refuse_to_choose(w: Writer, q: Question, of: Job, at: Mount) -> None:
-    """With no pulses, a newest run that nobody marked and nothing was changed after could be meant."""
+    """With no pulses, a newest run that nobody marked and nothing was changed after could be meant, when one
+    of its readings can take the label."""
     run = recall_runs.newest_run_of_job(w.c, of.id)
     if run is None or run.state == "open" or run.mount_id != at.id or not run.readings:
         return
     if any(r.label is not None for r in run.readings) or _weight_later(w, at, run):
+        return
+    if all(unfit(q.label, r.speed_hz, of, q.slow_roll_limit_hz) for r in run.readings):
         return
     raise NeedsAnswer(
         f"Run {run.name} has readings and none is marked: {q.label} may mean that run or the next.",

@@ -13,8 +13,10 @@ import json
 import os
 import signal
 import sys
+import threading
 import time
-from typing import Any
+import traceback
+from typing import Any, NoReturn
 
 PRELOAD = (
     "cli.serve", "cli.mark", "cli.run", "cli.sim", "cli.status", "cli.weight", "cli.mount", "cli.machine",
@@ -74,8 +76,24 @@ def main() -> list[str]:
     sys.exit(0)
 
 
+def leave(code: int) -> NoReturn:
+    """As the interpreter leaves, without taking some hundred modules apart (0.3 s)."""
+    for thread in threading.enumerate():
+        if thread is not threading.main_thread() and not thread.daemon:
+            thread.join()
+    sys.stdout.flush()
+    sys.stderr.flush()
+    os._exit(code)
+
+
 if __name__ == "__main__":
     words = main()
     from cli.main import main as revmark
 
-    revmark(words)
+    try:
+        revmark(words)
+    except SystemExit as end:
+        leave(end.code if isinstance(end.code, int) else int(end.code is not None))
+    except BaseException:
+        traceback.print_exc()
+        leave(1)

@@ -35,6 +35,8 @@ def _lines(answer: Json) -> list[str]:
         lines.append(f"         {clean(live['detail'])}")
     lines.append(f"source   {clean(live['source'])}")
     lines.append(f"store    {clean(answer['store'])}: {clean(live['store'])}")
+    if live["held_records"]:
+        lines.append(f"         held in memory until it writes again: {live['held_records']} records")
     if mount:
         lines.append(
             f"mounted  {clean(mount['machine'])} (model {clean(mount['model'])}), job {clean(mount['job'])}"

@@ -49,6 +49,8 @@ class Live:
     segment: int = 0
     source: str = "not opened"
     store: str = "ok"
+    held_records: int = 0
+    """Run borders, readings and events that wait in memory while the store is blocked."""
     lost_samples: int = 0
     dropped_readings: int = 0
     notes: tuple[str, ...] = field(default=())

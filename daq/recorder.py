@@ -9,6 +9,7 @@ from __future__ import annotations
 import logging
 from uuid import UUID
 
+from config.errors import StoreError
 from config.stand import Stand
 from daq.board import Board
 from daq.runs import Ended
@@ -59,10 +60,17 @@ class Recorder:
             )
             taken = f", labelled {mark.label}" if mark else ""
             log.info("run %s reading %d stored%s", self._run.name, reading.number, taken)
-            ledger.age_raw(self._total_mib)
+            self._age_raw(ledger)
             self._board.stir()
 
         self._writer.record(write, droppable=True)
+
+    def _age_raw(self, ledger: Ledger) -> None:
+        """Keep to the raw budget. The reading is stored by now: a failure here must not store it again."""
+        try:
+            ledger.age_raw(self._total_mib)
+        except StoreError as error:
+            log.warning("raw samples were not aged out: %s", error)
 
     def ended(self, ended: Ended, ended_us: int, still_out: str, *, uses_up_mark: bool = True) -> None:
         """A run ended; a mark it gave no fitting reading is missed, unless we ended it by stopping."""

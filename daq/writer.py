@@ -2,8 +2,9 @@
 
 Two queues. What operators ask is done at once and its failure goes back to who asked. What the analysis
 records (runs, readings) is done in order and never lost to a full disk: it waits in memory and is tried
-again with back-off, and the board says that the store is blocked. The record queue is bounded; beyond
-its bound readings are counted as dropped, never silently.
+again with back-off, and the board says that the store is blocked. What waits goes first: a weight fitted
+after a run is never stored before it. The record queue is bounded; beyond its bound readings are counted
+as dropped, never silently.
 """
 
 from __future__ import annotations
@@ -17,7 +18,7 @@ from concurrent.futures import Future
 from contextlib import suppress
 from typing import Any, TypeVar
 
-from config.errors import RevmarkError, StoreError
+from config.errors import RevmarkError, StoreError, StoreTrouble
 from daq.board import Board
 from daq.clock import Clock
 from store.ledger import Ledger
@@ -28,6 +29,8 @@ Record = Callable[[Ledger], None]
 RECORDS_HELD = 64
 """Finished readings and run borders that may wait for a blocked store."""
 FIRST_RETRY_S, LONGEST_RETRY_S = 0.2, 10.0
+LASTING: tuple[StoreTrouble, ...] = ("full", "io", "read_only", "corrupt")
+"""Trouble of the store itself, which the next act would meet too."""
 ANSWER_WITHIN_S = 30.0
 IDLE_S = 0.2
 
@@ -49,6 +52,8 @@ class Writer:
         self._retry_at = 0.0
         self._retry_s = FIRST_RETRY_S
         self._ended = False
+        self._trouble: StoreError | None = None
+        """Why the store is blocked, until everything held is written."""
         self.dropped = 0
 
     def ask(self, act: Callable[[Ledger], T]) -> T:
@@ -77,6 +82,8 @@ class Writer:
                 self._records.append(act)
         if full:
             self._drop(f"store blocked and {RECORDS_HELD} records held")
+        if self._trouble is not None:
+            self._post_held()
         self._asked.put(None)
 
     def _drop(self, why: str) -> None:
@@ -130,12 +137,30 @@ class Writer:
         if not future.set_running_or_notify_cancel():
             return
         try:
+            self._records_first()
             answer = act(self._ledger)
         except BaseException as error:
+            self._note_trouble(error)
             future.set_exception(error)
         else:
             future.set_result(answer)
             self._fold()
+
+    def _records_first(self) -> None:
+        """Try what is held, whatever the back-off says. Raises StoreError while the store is blocked."""
+        if self._trouble is not None:
+            self._retry_at = 0.0
+        self._write_records()
+        if self._trouble is not None:
+            raise StoreError(self._trouble.cause, self._trouble.remedy, kind=self._trouble.kind)
+
+    def _note_trouble(self, error: BaseException) -> None:
+        """When an act finds the store in lasting trouble, an event is held: it says so and tries again."""
+        if self._trouble is None and isinstance(error, StoreError) and error.kind in LASTING:
+            cause = error.cause
+            with self._lock:
+                self._records.append(lambda ledger: ledger.note_event("store_blocked", cause))
+            self._hold(error)
 
     def _write_records(self) -> None:
         while not self._blocked():
@@ -152,7 +177,8 @@ class Writer:
                 self._drop(f"a record was refused: {error}")
             with self._lock:
                 self._records.popleft()
-            self._freed()
+                left = len(self._records)
+            self._freed(left)
             self._fold()
 
     def _fold(self) -> None:
@@ -163,16 +189,26 @@ class Writer:
             log.warning("the write-ahead log was not folded in: %s", error)
 
     def _hold(self, error: StoreError) -> None:
+        self._trouble = error
         self._retry_at = self._clock.monotonic() + self._retry_s
         self._retry_s = min(2 * self._retry_s, LONGEST_RETRY_S)
-        self._board.post(store=f"blocked: {error.cause}")
-        log.error("store blocked, %d records held: %s", len(self._records), error)
+        held = self._post_held()
+        log.error("store blocked, %d records held: %s", held, error)
 
-    def _freed(self) -> None:
-        if self._retry_s != FIRST_RETRY_S:
+    def _post_held(self) -> int:
+        with self._lock:
+            held, trouble = len(self._records), self._trouble
+        if trouble is not None:
+            self._board.post(store=f"blocked: {trouble.cause}", held_records=held)
+        return held
+
+    def _freed(self, left: int) -> None:
+        """A record was written; the store is ok again once none is held."""
+        self._retry_s, self._retry_at = FIRST_RETRY_S, 0.0
+        if self._trouble is not None and not left:
             log.warning("store writes again")
-            self._retry_s, self._retry_at = FIRST_RETRY_S, 0.0
-            self._board.post(store="ok")
+            self._trouble = None
+            self._board.post(store="ok", held_records=0)
 
 
 def _stopping() -> StoreError:

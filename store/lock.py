@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import os
 import sys
+from contextlib import suppress
 from pathlib import Path
 
 from config.errors import StoreError
@@ -39,8 +40,9 @@ class StoreLock:
                 "Stop that process first; one store has one writer.",
                 kind="locked",
             )
-        os.ftruncate(descriptor, 0)
-        os.write(descriptor, f"{os.getpid()}\n".encode())
+        with suppress(OSError):  # a full disk has no room for the pid, and needs none
+            os.ftruncate(descriptor, 0)
+            os.write(descriptor, f"{os.getpid()}\n".encode())
         return cls(descriptor, path)
 
     def release(self) -> None:

@@ -50,12 +50,16 @@ _KINDS: dict[str, tuple[StoreTrouble, str, str]] = {
     ),
 }
 
+_ALSO_FULL = {"IOERR_SHMSIZE"}
+"""No room for the -shm file. SQLite's "Result and Error Codes": "may indicate that the underlying filesystem
+volume is out of space"."""
+
 
 def store_error(error: sqlite3.Error, path: Path) -> StoreError:
     """SQLite's error as one of ours; kind ``io`` for what is not in the table above."""
-    name = getattr(error, "sqlite_errorname", None) or ""
+    name = (getattr(error, "sqlite_errorname", None) or "").removeprefix("SQLITE_")
     kind, cause, remedy = _KINDS.get(
-        name.removeprefix("SQLITE_").split("_")[0],
+        "FULL" if name in _ALSO_FULL else name.split("_")[0],
         ("io", f"cannot be used ({error}).", "Run `revmark store check`."),
     )
     detail = f" ({error})" if kind == "refused" else ""

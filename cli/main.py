@@ -33,7 +33,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
 }
 
 HELP_COLUMNS = 78
-"""Said, because Click would import shutil to ask the terminal: a tenth of the time that --help takes."""
+"""Said, because Click would import shutil to ask the terminal for it, and --help shall come at once."""
 EPILOG = (
     "Exit codes: 0 done, 1 refused or failed, 2 typed wrong; serve also 75 (try again), 78 (configuration). "
     "revmark logs and computes; it is no machine protection system."

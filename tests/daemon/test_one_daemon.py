@@ -43,7 +43,7 @@ def test_what_a_killed_daemon_left_behind_does_no_harm(mounted: Bay) -> None:
     assert left == [".json", ".sock"]
     done = mounted.run("status")
     assert done.code == 1
-    assert "No daemon is running on this PC that you may talk to." in done.err
+    assert "No daemon is running on this PC. Start it with: revmark serve" in done.err
     assert "revmark serve --stand FILE" in done.err
     mounted.start()
     assert mounted.run("status").code == 0

@@ -55,8 +55,16 @@ def next_(stand: str | None, file: str | None, *, as_json: bool) -> None:
 @click.argument("kind")
 @click.option("--for", "seconds", metavar="TIME", default="1 s", show_default=True)
 @click.option("--channel", metavar="NAME", help="The probe to clip.")
+@click.option("--every", type=click.IntRange(1, 1000), help="Miss one pulse in so many; 1 = all.")
 @json_option
-def fault(stand: str | None, kind: str, seconds: str, channel: str | None, *, as_json: bool) -> None:
+def fault(
+    stand: str | None, kind: str, seconds: str, channel: str | None, every: int | None, *, as_json: bool
+) -> None:
     """Inject a fault into the simulated source: dropout, clip, missed or unplug."""
-    body = {"kind": kind, "seconds": parse_quantity(seconds, "time", minimum=0.0), "channel": channel}
-    _act(stand, "fault", body, as_json=as_json)
+    limit_s = parse_quantity(seconds, "time", minimum=0.0)
+    _act(
+        stand,
+        "fault",
+        {"kind": kind, "seconds": limit_s, "channel": channel, "every": every},
+        as_json=as_json,
+    )

@@ -110,14 +110,13 @@ class Analysis:
 
     def _step(self, reader: RingReader) -> bool:
         """Take one chunk or notice; False when there was neither."""
-        notice = self._due(reader)
-        if notice is not None:
-            self._heed(notice)
+        if self._heed_until(reader.position):
             return True
         room = self._room(reader)
         chunk = reader.read(room, READ_S, fewest=room)
         if chunk is None:
             return bool(self._pump.notices)
+        self._heed_until(reader.position - len(chunk.counts))  # what came while we waited for the chunk
         self._feed(replace(chunk, first_sample=chunk.first_sample + self._origin_sample))
         return True
 
@@ -127,10 +126,13 @@ class Analysis:
             return self._hop
         return max(1, min(self._hop, self._pump.notices[0].position - reader.position))
 
-    def _due(self, reader: RingReader) -> Notice | None:
-        if self._pump.notices and self._pump.notices[0].position <= reader.position:
-            return self._pump.notices.popleft()
-        return None
+    def _heed_until(self, position: int) -> bool:
+        """Heed the notices due at a ring counter; False when there was none."""
+        heeded = False
+        while self._pump.notices and self._pump.notices[0].position <= position:
+            self._heed(self._pump.notices.popleft())
+            heeded = True
+        return heeded
 
     def _heed(self, notice: Notice) -> None:
         if notice.kind == "ended":
@@ -165,9 +167,13 @@ class Analysis:
         self._post()
 
     def _new_segment(self, chunk: Chunk) -> None:
+        dropped = max(0, chunk.first_sample - self._taken - chunk.lost)
         if chunk.lost:
-            self._board.post(lost_samples=self._board.read().lost_samples + chunk.lost)
             self._recorder.event("overrun", f"{chunk.lost} samples were not analysed in time and are lost")
+        if dropped:
+            self._recorder.event("dropout", f"the source lost {dropped} samples")
+        if chunk.lost or dropped:
+            self._board.post(lost_samples=self._board.read().lost_samples + chunk.lost + dropped)
         self._segment = chunk.segment
         self._forget()
 

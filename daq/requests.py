@@ -130,6 +130,7 @@ class SimFaultAsked(Request):
     kind: Name
     seconds: Positive = 1.0
     channel: Name | None = None
+    every: Annotated[int, Field(ge=1, le=1000)] | None = None
 
 
 class VoidAsked(Request):

@@ -37,9 +37,7 @@ class RotorDesk:
         return dict(self._pump.act("next", file=asked.file))
 
     def fault(self, asked: SimFaultAsked, _peer: str) -> Json:
-        told = {"kind": asked.kind, "seconds": asked.seconds}
-        if asked.channel is not None:
-            told["channel"] = asked.channel
+        told = asked.model_dump(include={"kind", "seconds", "channel", "every"}, exclude_none=True)
         return dict(self._pump.act("fault", **told))
 
 

@@ -67,6 +67,8 @@ class RunWatch:
         if fast or self.state is StandState.PULSES_LOST:
             self._slow_since_s = None
             return None
+        if hop.speed_hz is None:  # a pulse is overdue, which is not slowness: the next steps tell
+            return None
         if self._slow_since_s is None:
             self._slow_since_s = hop.t_s
         if hop.t_s - self._slow_since_s >= self._minimum_s:

@@ -76,6 +76,16 @@ def test_a_run_ends_below_minimum_speed():
     ]
 
 
+def test_waiting_for_an_overdue_pulse_is_not_slowness():
+    """At 80 r/min the next pulse is waited for 2.5 s, longer than the shortest run: no end before that."""
+    watch = RunWatch(1.0, 2.0)
+    fed(watch, [hop(t / 10, 80 / 60) for t in range(30)])
+    waits = [Hop(3.0 + t / 10, 3000 + 100 * t, t / 10, 2.5, None, True) for t in range(60)]
+    assert fed(watch, waits) == []
+    assert watch.state is StandState.PULSES_LOST
+    assert watch.open
+
+
 def test_the_end_of_the_source_completes_the_run_and_its_loss_interrupts_it():
     for act, ended in (
         ("source_ended", Ended("complete", "end of source")),

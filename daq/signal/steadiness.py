@@ -43,6 +43,11 @@ AT_LEAST = frozenset({"window", "revolutions", "blocks", "hold", "lookback"})
 """Figures that must reach their limit; the others must stay within it."""
 
 
+def _plain(value: float) -> str:
+    """Three digits for people, never with an exponent above one."""
+    return f"{value:.3g}" if abs(value) < 1000 else f"{value:.0f}"
+
+
 @dataclass(frozen=True, slots=True)
 class Figure:
     """One number of the judgement beside its limit."""
@@ -65,7 +70,7 @@ class Figure:
     @property
     def sentence(self) -> str:
         return SENTENCES[self.name].format(
-            value=f"{self.value:.3g}", limit=f"{self.limit:.3g}", unit=self.unit, channel=self.channel
+            value=_plain(self.value), limit=_plain(self.limit), unit=self.unit, channel=self.channel
         )
 
 

@@ -78,13 +78,16 @@ class Analysis:
         if self._pump.info is None or self._pump.reader is None:
             return
         self._begin(self._pump.info)
-        while True:
-            beat()
-            more = self._step(self._pump.reader)
-            if stop.is_set() and not more:
-                break
-        ended = self._watch.source_lost("daemon stopped")
-        self._close(ended, uses_up_mark=False)
+        reason = "the analysis failed"
+        try:
+            while True:
+                beat()
+                more = self._step(self._pump.reader)
+                if stop.is_set() and not more:
+                    break
+            reason = "daemon stopped"
+        finally:
+            self._close(self._watch.source_lost(reason), uses_up_mark=False)
 
     # --- one step ------------------------------------------------------------------------------------
 

@@ -23,6 +23,7 @@ from config.version import __version__
 from daq.analysis import Analysis
 from daq.board import Board
 from daq.clock import Clock, SystemClock
+from daq.clockwatch import ClockWatch, step_text
 from daq.control import Identity, application, loopback_socket, serve_control
 from daq.drivers.registry import AnyDriver, make_driver
 from daq.interface import acts, questions
@@ -30,7 +31,7 @@ from daq.pump import Pump
 from daq.recorder import Recorder
 from daq.runtime import Access, Runtime, access_of, closed_to_group, give
 from daq.setup import channel_plan
-from daq.supervise import Part, Supervisor
+from daq.supervise import Body, Part, Supervisor
 from daq.writer import Writer
 from store.database import create_store
 from store.history import History
@@ -43,6 +44,8 @@ SWITCH_INTERVAL_S = 0.0005
 """Cuts what a Python loop elsewhere in the process costs the reader (STORE.md section 5)."""
 ENDS_WITHIN_S = {"control": 10.0, "driver": 10.0, "analysis": 20.0, "writer": 30.0}
 """How long a part may take to stop, in the order in which they are stopped."""
+HANGS_AFTER_S = {"writer": 60.0, "driver": 30.0, "analysis": 60.0, "control": 30.0}
+"""A part whose heartbeat is older than this hangs."""
 CONFIGURATION_TROUBLE = ("newer", "older", "network", "corrupt", "missing", "read_only")
 
 log = logging.getLogger("revmark.daemon")
@@ -159,14 +162,16 @@ class Daemon:
             },
             has_socket=unix is not None,
         )
-        return [
-            Part("writer", self._writer.run, 60.0),
-            Part("driver", self._pump.run, 30.0),
-            Part("analysis", self._analysis.run, 60.0),
-            Part("control", lambda stop, beat: serve_control(app, sockets, stop, beat), 30.0),
-        ]
+        bodies: dict[str, Body] = {
+            "writer": self._writer.run,
+            "driver": self._pump.run,
+            "analysis": self._analysis.run,
+            "control": lambda stop, beat: serve_control(app, sockets, stop, beat),
+        }
+        return [Part(name, body, HANGS_AFTER_S[name]) for name, body in bodies.items()]
 
     def _watch(self, parts: list[Part]) -> int:
+        wall = ClockWatch(self._clock)
         while not self._asked_to_stop.is_set():
             if self._pump.fatal is not None:
                 log.error("%s", self._pump.fatal)
@@ -175,6 +180,8 @@ class Daemon:
             if trouble is not None:
                 log.error("%s The daemon ends; start it again.", trouble)
                 return TRY_AGAIN
+            if (step_s := wall.look()) is not None:
+                self._recorder.event("clock_step", step_text(step_s))
             self._clock.wait(self._supervisor.ended, WATCH_EVERY_S)
             self._clock.wait(self._asked_to_stop, WATCH_EVERY_S)
         log.info("asked to stop")

@@ -110,6 +110,7 @@ class Analysis:
         self._turning_rms = np.zeros(len(channels))
         self._recorder.set_up(info.rate_hz)
         self._origin = Origin(info.origin)
+        self._board.post(state=self._watch.state)
 
     def _step(self, reader: RingReader) -> bool:
         """Take one chunk or notice; False when there was neither."""

@@ -46,7 +46,7 @@ ENDS_WITHIN_S = {"control": 10.0, "driver": 10.0, "analysis": 20.0, "writer": 30
 """How long a part may take to stop, in the order in which they are stopped."""
 HANGS_AFTER_S = {"writer": 60.0, "driver": 30.0, "analysis": 60.0, "control": 30.0}
 """A part whose heartbeat is older than this hangs."""
-CONFIGURATION_TROUBLE = ("newer", "older", "network", "corrupt", "missing", "read_only")
+CONFIGURATION_TROUBLE = ("newer", "older", "network", "corrupt", "missing", "read_only", "refused")
 
 log = logging.getLogger("revmark.daemon")
 

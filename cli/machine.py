@@ -8,7 +8,7 @@ import click
 
 from cli.client import Client, find, new_key
 from cli.output import clean, finite, json_option, operator_option, print_json, say, stand_option, table
-from cli.typed import PlaneType, Quantity, Speed
+from cli.typed import Number, PlaneType, Quantity, Speed
 
 
 @click.group(help="Machines and their models.")
@@ -19,13 +19,16 @@ def group() -> None: ...
 @click.argument("serial")
 @stand_option
 @click.option("--model", required=True, metavar="CODE", help="The maker's code of the model.")
-@click.option("--mass", required=True, type=Quantity("rotor mass"), metavar="MASS", help="Rotor mass: 40kg.")
+@click.option("--mass", required=True, type=Quantity("rotor mass", 1e-6), metavar="MASS",
+              help="Rotor mass: 40kg.")  # fmt: skip
 @click.option("--speed", required=True, type=Speed(), metavar="SPEED", help="Service speed: 1500rpm.")
-@click.option("--grade", type=float, metavar="G", help="Balance grade of ISO 21940-11, such as 2.5.")
-@click.option("--permissible", type=Quantity("unbalance"), help="Tolerance of the whole rotor: 300g.mm.")
-@click.option("--bearing-load", "loads", multiple=True, type=Quantity("rotor mass"), metavar="MASS",
+@click.option("--grade", type=Number(), metavar="G", help="Balance grade of ISO 21940-11, such as 2.5.")
+@click.option("--permissible", type=Quantity("unbalance", 1e-6), metavar="UNBALANCE",
+              help="Tolerance of the whole rotor: 300g.mm.")  # fmt: skip
+@click.option("--bearing-load", "loads", multiple=True, type=Quantity("rotor mass", 1e-6), metavar="MASS",
               help="Static load of a bearing; once for each, in the order of the planes.")  # fmt: skip
-@click.option("--limit", type=Quantity("length"), help="Vibration limit 0-peak, such as 0.02mm.")
+@click.option("--limit", type=Quantity("length", 1e-9), metavar="LENGTH",
+              help="Vibration limit 0-peak, such as 0.02mm.")  # fmt: skip
 @click.option("--plane", "planes", multiple=True, type=PlaneType(), metavar="PLANE",
               help='Weight plane of a new model: "1: radius 140mm, holes 24, at -220mm, '
                    'numbered clockwise from drive".')  # fmt: skip
@@ -108,6 +111,9 @@ def _described(machine: dict[str, Any]) -> list[str]:
         lines.append(f"  permissible residual unbalance {machine['permissible_gmm']:g} g.mm")
     if machine["first_critical_rpm"] is not None:
         lines.append(f"  first critical speed {machine['first_critical_rpm']:.0f} r/min")
+    if machine["bearing_loads_kg"]:
+        loads = ", ".join(f"{load:g}" for load in machine["bearing_loads_kg"])
+        lines.append(f"  static load of the bearings beside the planes: {loads} kg")
     for plane in machine["planes"]:
         holes = (
             f"{plane['holes']} holes numbered {clean(plane['numbered'])}" if plane["holes"] else "any angle"

@@ -8,6 +8,7 @@ from __future__ import annotations
 import importlib
 import os
 import sys
+from typing import NoReturn
 
 import click
 
@@ -89,9 +90,18 @@ def main(arguments: list[str] | None = None) -> None:
         click.echo(f"revmark: {error}", err=True)
         sys.exit(1)
     except BrokenPipeError:
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        sys.exit(1)
+        _give_up_output()
+    except OSError as error:
+        _give_up_output(f"revmark: the output cannot be written: {error.strerror or error}")
     sys.exit(code if isinstance(code, int) else 0)
+
+
+def _give_up_output(why: str = "") -> NoReturn:
+    """End with 1; what Python would still flush goes nowhere."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    if why:
+        click.echo(why, err=True)
+    sys.exit(1)
 
 
 if __name__ == "__main__":

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from typing import Any
 
@@ -29,6 +30,21 @@ class Quantity(click.ParamType[Any]):
             return parse_quantity(value, self._measure, minimum=self._minimum)
         except BadQuantity as error:
             self.fail(str(error), param, ctx)
+
+
+class Number(click.ParamType[Any]):
+    """A number above zero, without a unit."""
+
+    name = "number"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> float:
+        try:
+            number = float(value)
+        except ValueError:
+            self.fail(f"{value!r} is not a number.", param, ctx)
+        if not 0 < number < math.inf:
+            self.fail(f"{value!r} is not above zero.", param, ctx)
+        return number
 
 
 class Speed(Quantity):
@@ -66,6 +82,12 @@ def parse_sense(text: str) -> dict[str, str]:
     return {"turn": turn, "seen_from": found.group(2)}
 
 
+def _count(text: str, what: str) -> int:
+    if not re.fullmatch(r"\s*\d{1,5}\s*", text, re.ASCII):
+        raise BadQuantity(f"{text.strip()!r} is not {what}.")
+    return int(text)
+
+
 class PlaneType(click.ParamType[Any]):
     """``"1: radius 140mm, holes 24, at -220mm, numbered clockwise from drive"`` as the daemon takes it."""
 
@@ -92,9 +114,9 @@ class PlaneType(click.ParamType[Any]):
         if missing:
             raise ValueError(f"Plane {number}: {' and '.join(missing)} missing.")
         return {
-            "number": int(number),
+            "number": _count(number, "the number of a plane"),
             "radius_mm": parse_quantity(told["radius"], "length", minimum=1e-3),
-            "holes": int(told["holes"]),
+            "holes": _count(told["holes"], "a number of holes"),
             "numbering": parse_sense(told["numbered"]),
             "position_mm": parse_quantity(told["at"], "length") if "at" in told else None,
         }
@@ -133,6 +155,6 @@ class RotorMarkType(click.ParamType[Any]):
         plane, equals, text = value.rpartition("=")
         try:
             degrees = parse_quantity(text, "angle")
-            return (int(plane) if equals else None), degrees
+            return (_count(plane, "the number of a plane") if equals else None), degrees
         except (BadQuantity, ValueError) as error:
             self.fail(f'{error} Write for example "7.5deg", or "1=7.5deg" for plane 1.', param, ctx)

@@ -22,12 +22,13 @@ def group() -> None: ...
 def _place_options(function: Any) -> Any:
     for option in (
         click.option("--locked-out", is_flag=True, help="The drive is locked out, the rotor seen at rest."),
+        click.option("--yes", "confirmed", is_flag=True, help="A taken hole, or so heavy a weight, is meant."),
         click.option("--after", metavar="RUN", help="It was done after this run (a late entry)."),
         click.option("--radius", type=Quantity("length", 1e-3), help="Default: the plane's radius."),
         click.option("--at", "angle_deg", type=Quantity("angle"), metavar="ANGLE",
                      help="Angle from the rotor mark, against rotation."),
-        click.option("--hole", type=click.IntRange(1, 1000)),
-        click.option("--plane", required=True, type=click.IntRange(1, 99)),
+        click.option("--hole", type=click.IntRange(1, 1000), help="Hole, as numbered on the plane."),
+        click.option("--plane", required=True, type=click.IntRange(1, 99), help="Weight plane."),
     ):  # fmt: skip
         function = option(function)
     return function
@@ -50,6 +51,7 @@ def _add(
         },
         "drilled": drilled,
         "locked_out": told["locked_out"],
+        "confirmed": told["confirmed"],
         "after": told["after"],
     }
     client = Client(find(stand))
@@ -81,8 +83,9 @@ def drill(mass: float, stand: str | None, operator: str, *, as_json: bool, **tol
 
 @group.command(context_settings={"max_content_width": 80})
 @stand_option
-@click.option("--plane", required=True, type=click.IntRange(1, 99))
+@click.option("--plane", required=True, type=click.IntRange(1, 99), help="Weight plane.")
 @click.option("--hole", type=click.IntRange(1, 1000), help="Only what is in this hole.")
+@click.option("--at", "angle_deg", type=Quantity("angle"), help="Only what was fitted at this angle.")
 @click.option("--all", "every", is_flag=True, help="Everything fitted in the plane.")
 @click.option("--after", metavar="RUN", help="It was done after this run (a late entry).")
 @click.option("--locked-out", is_flag=True, help="The drive is locked out and the rotor seen at rest.")
@@ -90,11 +93,14 @@ def drill(mass: float, stand: str | None, operator: str, *, as_json: bool, **tol
 @json_option
 def remove(stand: str | None, operator: str, *, as_json: bool, **told: Any) -> None:
     """Record weights taken off a plane."""
+    if told["every"] == (told["hole"] is not None):
+        raise click.UsageError("Say what came off: --hole or --all.")
     body = {
         "key": new_key(),
         "who": operator,
         "plane": told["plane"],
         "hole": told["hole"],
+        "angle_deg": told["angle_deg"],
         "all": told["every"],
         "after": told["after"],
         "locked_out": told["locked_out"],
@@ -147,7 +153,7 @@ def list_(stand: str | None, *, as_json: bool) -> None:
 
 @group.command(context_settings={"max_content_width": 80})
 @stand_option
-@click.option("--plane", required=True, type=click.IntRange(1, 99))
+@click.option("--plane", required=True, type=click.IntRange(1, 99), help="Weight plane.")
 @click.option("--job", metavar="NUMBER", help="Default: the job of the mounted machine.")
 @json_option
 def advise(stand: str | None, plane: int, job: str | None, *, as_json: bool) -> None:

@@ -26,6 +26,7 @@ from daq.requests import (
 from daq.writer import Writer
 from store import asjson, consult
 from store.balance import cautions
+from store.casework import ForceAdvice
 from store.history import History
 from store.ledger import Ledger
 from store.records import (
@@ -38,6 +39,9 @@ from store.records import (
 )
 
 Json = dict[str, Any]
+
+LOADS_APART = 0.1
+"""The bearings' static loads may differ from the rotor's mass by this share (a belt's pull, rounding)."""
 
 
 def refuse_if_turning(board: Board, what: str) -> None:
@@ -89,6 +93,7 @@ class Desk:
         return self._writer.ask(lambda ledger: ledger.once(asked.key, verb, body, lambda: act(ledger)))
 
     def add_machine(self, asked: MachineAsked, peer: str) -> Json:
+        self._check_loads(asked)
         planes = tuple(
             WeightPlane(p.number, p.radius_mm, p.holes, _sense(p.numbering), p.position_mm)
             for p in asked.planes
@@ -141,23 +146,32 @@ class Desk:
     def weight(self, asked: WeightAsked, peer: str) -> Json:
         require_lock_out(self._board, locked_out=asked.locked_out)
         piece, who = _piece(asked.piece), asked.who or peer
+        pull = None if asked.drilled else consult.force(self._history, piece)
+        if not asked.confirmed and not asked.drilled:
+            self._question(piece, pull)
 
         def act(ledger: Ledger) -> Json:
             do = ledger.drill if asked.drilled else ledger.fit
             return {"weights": [asjson.weight_json(w) for w in do(piece, who, asked.after)]}
 
         told = self._once(asked, "weight", act)
-        pull = None if asked.drilled else consult.force(self._history, piece)
         return {**told, "force": pull.to_dict() if pull else None, "cautions": list(cautions.WEIGHT_FIT)}
 
     def remove(self, asked: RemovalAsked, peer: str) -> Json:
         require_lock_out(self._board, locked_out=asked.locked_out)
-        if asked.all == (asked.hole is not None):
-            raise Refusal("Which weights came off is not said.", "Name one hole, or all with --all.")
+        if sum([asked.all, asked.hole is not None, asked.angle_deg is not None]) != 1:
+            raise Refusal(
+                "Which weights came off is not said.", "Name one of --hole, --at and --all; see weight list."
+            )
 
         def act(ledger: Ledger) -> Json:
             gone = ledger.remove(
-                asked.plane, asked.who or peer, hole=asked.hole, every=asked.all, after_run=asked.after
+                asked.plane,
+                asked.who or peer,
+                hole=asked.hole,
+                angle_deg=asked.angle_deg,
+                every=asked.all,
+                after_run=asked.after,
             )
             return {"weights": [asjson.weight_json(w) for w in gone]}
 
@@ -181,6 +195,48 @@ class Desk:
         for_all = {p.number: m.from_hole1_deg for m in asked.marks if m.plane is None for p in planes}
         by_plane = for_all | {m.plane: m.from_hole1_deg for m in asked.marks if m.plane is not None}
         return tuple(MarkPosition(plane, degrees) for plane, degrees in sorted(by_plane.items()))
+
+    def _question(self, piece: PieceDraft, pull: ForceAdvice | None) -> None:
+        """Raises NeedsAnswer for a hole that is taken, and for a weight nobody fits on purpose."""
+        mount = self._history.current_mount()
+        here = self._history.weights(mount.id) if mount else ()
+        there = [w for w in here if w.plane == piece.plane and w.hole == piece.hole and w.act == "fitted"]
+        if piece.hole is not None and there:
+            held = sum(w.mass_g for w in there)
+            raise NeedsAnswer(
+                f"Hole {piece.hole} of plane {piece.plane} carries {held:g} g already; "
+                f"with this it would carry {held + piece.mass_g:g} g.",
+                "If it is a second piece, say --yes; else nothing was entered.",
+                options=("--yes",),
+            )
+        if pull is not None and pull.share_of_load > 1.0:
+            raise NeedsAnswer(
+                f"{piece.mass_g:g} g at {pull.radius_mm:g} mm pulls with {pull.force_n:.4g} N at "
+                f"{pull.speed_hz * 60:.0f} r/min, more than the static load on its bearing.",
+                "If it is meant, say --yes; else nothing was entered.",
+                options=("--yes",),
+            )
+
+    def _check_loads(self, asked: MachineAsked) -> None:
+        """Static loads of the bearings must be one for each plane and add up to the rotor's mass."""
+        loads = asked.bearing_loads_kg
+        planes = len(asked.planes) or self._planes_of(asked.model)
+        if loads and planes and len(loads) != planes:
+            raise Refusal(
+                f"{len(loads)} bearing load(s) for {planes} weight plane(s) of model {asked.model}.",
+                "Give --bearing-load once for each plane, in their order, or not at all.",
+            )
+        if loads and abs(sum(loads) - asked.rotor_mass_kg) > LOADS_APART * asked.rotor_mass_kg:
+            raise Refusal(
+                f"The bearing loads add up to {sum(loads):g} kg, the rotor weighs {asked.rotor_mass_kg:g} kg.",
+                "Correct one of them: the trial weight's size hangs on the loads.",
+            )
+
+    def _planes_of(self, code: str) -> int:
+        try:
+            return len(self._history.model(code).planes)
+        except Refusal:
+            return 0
 
     def _check_end(self, end: str, what: str) -> None:
         if end not in self._ends:

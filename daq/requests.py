@@ -9,8 +9,10 @@ from pydantic import BaseModel, ConfigDict, Field
 Key = Annotated[str, Field(min_length=8, max_length=64, pattern=r"^[0-9A-Za-z_-]+$")]
 Name = Annotated[str, Field(min_length=1, max_length=64)]
 Text = Annotated[str, Field(max_length=500)]
-Finite = Annotated[float, Field(allow_inf_nan=False)]
-Positive = Annotated[float, Field(gt=0, allow_inf_nan=False, le=1e9)]
+Finite = Annotated[float, Field(allow_inf_nan=False, strict=True, ge=-1e9, le=1e9)]
+Positive = Annotated[float, Field(gt=0, allow_inf_nan=False, strict=True, le=1e9)]
+Grams = Annotated[float, Field(ge=1e-6, allow_inf_nan=False, strict=True, le=1e5)]
+Millimetres = Annotated[float, Field(ge=1e-3, allow_inf_nan=False, strict=True, le=1e5)]
 PlaneNumber = Annotated[int, Field(ge=1, le=99)]
 
 
@@ -54,10 +56,10 @@ class MachineAsked(Request):
 class PieceBody(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
     plane: PlaneNumber
-    mass_g: Positive
+    mass_g: Grams
     hole: Annotated[int, Field(ge=1, le=1000)] | None = None
     angle_deg: Finite | None = None
-    radius_mm: Positive | None = None
+    radius_mm: Millimetres | None = None
 
 
 class MarkPositionBody(BaseModel):
@@ -102,6 +104,8 @@ class WeightAsked(Request):
     piece: PieceBody
     drilled: bool = False
     locked_out: bool = False
+    confirmed: bool = False
+    """The hole that holds a piece already, or a force above the static load, is meant."""
     after: Name | None = None
     """Name of the run after which it was really done (a late entry); None = now."""
 
@@ -109,6 +113,7 @@ class WeightAsked(Request):
 class RemovalAsked(Request):
     plane: PlaneNumber
     hole: Annotated[int, Field(ge=1, le=1000)] | None = None
+    angle_deg: Finite | None = None
     all: bool = False
     locked_out: bool = False
     after: Name | None = None

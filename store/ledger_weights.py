@@ -187,7 +187,7 @@ def _choose(
                 f"Plane {plane} carries {len(found)} pieces.", "Name the hole or the angle, or take all."
             )
     if not found:
-        raise Refusal(f"No piece is fitted {where}.", "`revmark status` shows what is fitted.")
+        raise Refusal(f"No piece is fitted {where}.", "`revmark weight list` shows what is fitted.")
     return found
 
 

@@ -29,7 +29,7 @@ Record = Callable[[Ledger], None]
 RECORDS_HELD = 64
 """Finished readings and run borders that may wait for a blocked store."""
 FIRST_RETRY_S, LONGEST_RETRY_S = 0.2, 10.0
-LASTING: tuple[StoreTrouble, ...] = ("full", "io", "read_only", "corrupt")
+LASTING: tuple[StoreTrouble, ...] = ("full", "io", "read_only", "corrupt", "missing")
 """Trouble of the store itself, which the next act would meet too."""
 ANSWER_WITHIN_S = 30.0
 IDLE_S = 0.2

@@ -61,6 +61,7 @@ class Ledger:
         self.path = path
         self._lock = lock
         self._engine = engine
+        self._opened = self._identity()
         self._connection: Connection | None = engine.connect()
         ids = Identities(clock.now_us)
         self.session = ids.new()
@@ -147,6 +148,7 @@ class Ledger:
                 return
             if self._connection is None:
                 raise StoreError(f"The store {self.path} is closed.", "Open it again.", kind="io")
+            self._check_present()
             self._inside, self._doomed = True, None
             try:
                 with self._connection.begin():
@@ -156,6 +158,23 @@ class Ledger:
             finally:
                 self._inside = False
                 self._end_transaction()
+
+    def _check_present(self) -> None:
+        """A store deleted or replaced under us would take every commit and keep none."""
+        try:
+            found = self._identity()
+        except OSError:
+            found = None
+        if found != self._opened:
+            raise StoreError(
+                f"The store {self.path} was deleted or replaced while it is served; nothing more is kept.",
+                "Put it back (or restore a backup) and start revmark serve again.",
+                kind="missing",
+            )
+
+    def _identity(self) -> tuple[int, int]:
+        told = self.path.stat()
+        return told.st_dev, told.st_ino
 
     def _end_transaction(self) -> None:
         """A COMMIT that failed leaves SQLite's transaction open, and SQLAlchemy does not end it."""

@@ -22,7 +22,7 @@ def group() -> None: ...
 def _place_options(function: Any) -> Any:
     for option in (
         click.option("--locked-out", is_flag=True, help="The drive is locked out, the rotor seen at rest."),
-        click.option("--yes", "confirmed", is_flag=True, help="A taken hole, or so heavy a weight, is meant."),
+        click.option("--yes", "confirmed", is_flag=True, help="A taken hole, or so heavy a piece, is meant."),
         click.option("--after", metavar="RUN", help="It was done after this run (a late entry)."),
         click.option("--radius", type=Quantity("length", 1e-3), help="Default: the plane's radius."),
         click.option("--at", "angle_deg", type=Quantity("angle"), metavar="ANGLE",

@@ -228,7 +228,7 @@ class Desk:
             )
         if loads and abs(sum(loads) - asked.rotor_mass_kg) > LOADS_APART * asked.rotor_mass_kg:
             raise Refusal(
-                f"The bearing loads add up to {sum(loads):g} kg, the rotor weighs {asked.rotor_mass_kg:g} kg.",
+                f"The bearing loads add up to {sum(loads):g} kg, the rotor has {asked.rotor_mass_kg:g} kg.",
                 "Correct one of them: the trial weight's size hangs on the loads.",
             )
 

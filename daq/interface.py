@@ -64,8 +64,11 @@ def questions(
 ) -> tuple[Question, ...]:
     marks = mark_desk(stand, writer, history, board, analysis, clock)
 
+    served = stand_file_stamp(stand)
+
     def status(_given: Mapping[str, str]) -> Json:
-        return status_json(stand, history, board)
+        told = status_json(stand, history, board)
+        return {**told, "stand_file_changed": stand_file_stamp(stand) != served}
 
     return (
         Question("/v1/hello", NO_PARAMETERS, lambda _given: {"stand": stand.name}),
@@ -73,6 +76,15 @@ def questions(
         Question("/v1/mark/newest", NO_PARAMETERS, marks.newest),
         Question("/v1/mark/state/{key}", frozenset({"wait_s"}), marks.state),
     )
+
+
+def stand_file_stamp(stand: Stand) -> tuple[int, int] | None:
+    """Size and time of change of the stand file; None = it is gone."""
+    try:
+        told = stand.file.stat()
+    except OSError:
+        return None
+    return told.st_size, told.st_mtime_ns
 
 
 def mark_desk(

@@ -89,12 +89,22 @@ def find(stand_file: str | None) -> Address:
         wanted = os.path.realpath(stand_file)
         known = tuple(a for a in known if a.stand_file == wanted)
     if not known:
+        _check_there(stand_file)
         what = f"runs for the stand file {stand_file}" if stand_file else "is running on this PC"
         raise _none_found(f"No daemon {what}", f"revmark serve --stand {stand_file or 'FILE'}")
     if len(known) > 1:
         names = ", ".join(f"{a.stand} ({a.stand_file})" for a in known)
         raise Refusal(f"Several daemons run: {names}.", "Name one with --stand FILE.")
     return known[0]
+
+
+def _check_there(stand_file: str | None) -> None:
+    """A name typed wrong is said to be that, and not a daemon that does not run."""
+    with suppress(PermissionError):
+        if stand_file and not Path(stand_file).exists():
+            raise DaemonError(
+                f"There is no stand file {stand_file}.", "Check its name (--stand, REVMARK_STAND)."
+            )
 
 
 def _none_found(what: str, start: str) -> DaemonError:

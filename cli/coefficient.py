@@ -15,8 +15,8 @@ def group() -> None: ...
 @group.command(name="list", context_settings={"max_content_width": 80})
 @stand_option
 @click.option("--model", metavar="CODE", help="Only this model.")
-@click.option("--plane", type=click.IntRange(1, 99))
-@click.option("--channel", metavar="NAME")
+@click.option("--plane", type=click.IntRange(1, 99), help="Only this weight plane.")
+@click.option("--channel", metavar="NAME", help="Only this channel.")
 @click.option("--rpm", "speed_hz", type=Speed(), metavar="SPEED", help="Only within 0.5 % of this speed.")
 @json_option
 def list_(
@@ -33,6 +33,8 @@ def list_(
     from store import asjson
 
     with reading(stand) as history:
+        if model is not None:
+            history.model(model)  # a typo is not an empty list
         found = [asjson.coefficient_json(c) for c in history.coefficients(model, plane, channel, speed_hz)]
     if as_json:
         print_json(found)

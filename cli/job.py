@@ -28,6 +28,8 @@ def list_(stand: str | None, machine: str | None, *, as_json: bool) -> None:
     from store import asjson
 
     with reading(stand) as history:
+        if machine is not None:
+            history.machine(machine)  # a typo is not an empty list
         jobs = [asjson.job_json(j) for j in history.jobs(machine)]
     if as_json:
         print_json(jobs)

@@ -13,6 +13,7 @@ from cli.asking import post_or_ask
 from cli.client import Client, find, new_key
 from cli.marked import print_marked
 from cli.output import json_option, operator_option, print_json, stand_option, warn
+from cli.typed import Number
 from config.errors import DaemonError, Refusal
 
 LABELS = ["O", "O+T", "check", "trim", "slow-roll"]
@@ -25,19 +26,18 @@ SEND_FOR_S, LOST_FOR_S = 3.0, 30.0
 @click.command(context_settings={"max_content_width": 80})
 @click.argument("label", type=click.Choice(LABELS), required=False)
 @stand_option
-@click.option("--last", "choose", flag_value="last", help="The newest run's reading is meant.")
-@click.option("--next", "choose", flag_value="next", help="The next run is meant.")
+@click.option("--last", is_flag=True, help="The newest run's reading is meant.")
+@click.option("--next", is_flag=True, help="The next run is meant.")
 @click.option("--no-wait", is_flag=True, help="Come back at once; the mark stays pending.")
 @click.option("--wait", is_flag=True, help="Wait for the mark that is pending, or say how the newest ended.")
 @click.option("--cancel", is_flag=True, help="Cancel the mark that is pending.")
-@click.option("--timeout", metavar="SECONDS", type=float, help="Cancel when it takes longer than this.")
+@click.option("--timeout", metavar="SECONDS", type=Number(), help="Cancel when it takes longer than this.")
 @click.option("--yes", is_flag=True, help="The weights are as they are meant to be.")
 @operator_option
 @json_option
 def command(
     label: str | None,
     stand: str | None,
-    choose: str | None,
     timeout: float | None,
     operator: str,
     **flags: bool,
@@ -54,6 +54,7 @@ def command(
     if flags["wait"] and label is None:
         return _wait(link, link.client.get("/v1/mark/newest")["key"], timeout, flags)
     key = new_key()
+    choose = "last" if flags["last"] else "next" if flags["next"] else None
     body = {"key": key, "label": label, "choose": choose, "confirmed": flags["yes"], "who": operator}
     try:
         answer = post_or_ask(link.mark, body, as_json=flags["as_json"])
@@ -103,6 +104,8 @@ def _check_usage(label: str | None, flags: dict[str, bool]) -> None:
         raise click.UsageError("--cancel takes no label and no --wait.")
     if not label and not flags["cancel"] and not flags["wait"]:
         raise click.UsageError(f"Name the label: {', '.join(LABELS)}.")
+    if flags["last"] and flags["next"]:
+        raise click.UsageError("--last and --next exclude each other.")
     if flags["wait"] and flags["no_wait"]:
         raise click.UsageError("--wait and --no-wait exclude each other.")
 

@@ -19,7 +19,9 @@ def group() -> None: ...
 @stand_option
 @click.option("--job", metavar="NUMBER", help="Only this job.")
 @click.option("--machine", metavar="SERIAL", help="Only this machine.")
-@click.option("--limit", type=click.IntRange(1, 100_000), default=30, show_default=True)
+@click.option(
+    "--limit", type=click.IntRange(1, 100_000), default=30, show_default=True, help="At most so many."
+)
 @json_option
 def list_(stand: str | None, job: str | None, machine: str | None, limit: int, *, as_json: bool) -> None:
     """The newest runs."""

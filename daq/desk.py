@@ -89,6 +89,8 @@ class Desk:
         self._ends = ends
 
     def _once(self, asked: Request, verb: str, act: Callable[[Ledger], Json]) -> Json:
+        """Do ``act`` once for the request's key; what it checks is not checked again at a retry, which gets
+        the stored answer."""
         body = asked.model_dump(mode="json", exclude={"key"})
         return self._writer.ask(lambda ledger: ledger.once(asked.key, verb, body, lambda: act(ledger)))
 
@@ -116,7 +118,6 @@ class Desk:
         return self._once(asked, "machine", lambda led: asjson.machine_json(led.add_machine(draft, who)))
 
     def mount(self, asked: MountAsked, peer: str) -> Json:
-        refuse_if_turning(self._board, "a mount")
         self._check_end(asked.rotation.seen_from, "the direction of rotation")
         draft = MountDraft(
             asked.serial,
@@ -131,26 +132,29 @@ class Desk:
             asked.speeds_hz,
             asked.carry_over,
         )
-        who = asked.who or peer
-        return self._once(asked, "mount", lambda led: asjson.mount_json(led.mount(draft, who), asked.job))
-
-    def unmount(self, asked: UnmountAsked, peer: str) -> Json:
-        refuse_if_turning(self._board, "taking the machine off")
 
         def act(ledger: Ledger) -> Json:
+            refuse_if_turning(self._board, "a mount")
+            return asjson.mount_json(ledger.mount(draft, asked.who or peer), asked.job)
+
+        return self._once(asked, "mount", act)
+
+    def unmount(self, asked: UnmountAsked, peer: str) -> Json:
+        def act(ledger: Ledger) -> Json:
+            refuse_if_turning(self._board, "taking the machine off")
             ended = ledger.unmount(asked.who or peer)
             return {"ended": asjson.mount_json(ended) if ended else None}
 
         return self._once(asked, "unmount", act)
 
     def weight(self, asked: WeightAsked, peer: str) -> Json:
-        require_lock_out(self._board, locked_out=asked.locked_out)
         piece, who = _piece(asked.piece), asked.who or peer
         pull = None if asked.drilled else consult.force(self._history, piece)
-        if not asked.confirmed and not asked.drilled:
-            self._question(piece, pull)
 
         def act(ledger: Ledger) -> Json:
+            require_lock_out(self._board, locked_out=asked.locked_out)
+            if not asked.confirmed and not asked.drilled:
+                self._question(piece, pull)
             do = ledger.drill if asked.drilled else ledger.fit
             return {"weights": [asjson.weight_json(w) for w in do(piece, who, asked.after)]}
 
@@ -158,13 +162,13 @@ class Desk:
         return {**told, "force": pull.to_dict() if pull else None, "cautions": list(cautions.WEIGHT_FIT)}
 
     def remove(self, asked: RemovalAsked, peer: str) -> Json:
-        require_lock_out(self._board, locked_out=asked.locked_out)
         if sum([asked.all, asked.hole is not None, asked.angle_deg is not None]) != 1:
             raise Refusal(
                 "Which weights came off is not said.", "Name one of --hole, --at and --all; see weight list."
             )
 
         def act(ledger: Ledger) -> Json:
+            require_lock_out(self._board, locked_out=asked.locked_out)
             gone = ledger.remove(
                 asked.plane,
                 asked.who or peer,

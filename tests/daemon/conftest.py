@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import ExitStack
@@ -42,16 +43,36 @@ def make_bay(forks: Forks, runtime: Path, tmp_path: Path) -> Iterator[Callable[.
         yield make
 
 
+@pytest.fixture(scope="session")
+def prepared(forks: Forks, tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
+    """Two stores that a real daemon made: an empty one, and one with machine F-204 mounted."""
+    folder = tmp_path_factory.mktemp("prepared")
+    stores = {name: folder / f"{name}.sqlite" for name in ("empty", "mounted")}
+    with pytest.MonkeyPatch.context() as patch, short_folder() as runtime:
+        patch.setenv("REVMARK_RUNTIME", str(runtime))
+        patch.delenv("REVMARK_STAND", raising=False)
+        with a_bay(forks, folder, runtime) as made:
+            for name, act in (("empty", lambda: None), ("mounted", made.set_up)):
+                made.start()
+                act()
+                assert made.stop() == 0
+                shutil.copy(made.store, stores[name])
+    return stores
+
+
 @pytest.fixture
-def bay(make_bay: Callable[..., Bay]) -> Bay:
+def bay(make_bay: Callable[..., Bay], prepared: dict[str, Path]) -> Bay:
     """A stand with its daemon running and nothing mounted."""
     made = make_bay()
+    shutil.copy(prepared["empty"], made.store)
     made.start()
     return made
 
 
 @pytest.fixture
-def mounted(bay: Bay) -> Bay:
+def mounted(make_bay: Callable[..., Bay], prepared: dict[str, Path]) -> Bay:
     """A stand with its daemon running and machine F-204 mounted, clean, for job 0142."""
-    bay.set_up()
-    return bay
+    made = make_bay()
+    shutil.copy(prepared["mounted"], made.store)
+    made.start()
+    return made

@@ -142,7 +142,7 @@ def test_once_per_rev_lost_leaves_the_run_open(mounted: Bay) -> None:
 
 def test_a_fault_that_does_not_exist_is_refused(mounted: Bay) -> None:
     done = mounted.run("sim", "fault", "melt")
-    assert done.code == 1
+    assert done.code == 2
     assert "melt" in done.err
     done = mounted.run("sim", "fault", "clip", "--channel", "probe 9")
     assert done.code == 1

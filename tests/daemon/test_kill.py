@@ -88,7 +88,12 @@ class Worker:
         """Each of a mass of its own, so that a second one would show."""
         self.weights += 1
         piece = {"plane": 1, "mass_g": self.weights / 1000, "hole": 1 + self.weights % 24}
-        return Act("/v1/weight", {"key": new_key(), "piece": piece, "locked_out": True})
+        body = {
+            "piece": piece,
+            "locked_out": True,
+            "confirmed": self.weights > 24,
+        }  # a second one in the hole
+        return Act("/v1/weight", {"key": new_key(), **body})
 
     def send(self, client: Client, act: Act) -> None:
         self.in_flight = act

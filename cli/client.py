@@ -152,7 +152,7 @@ class Client:
         except OSError as error:
             raise DaemonError(
                 f"The daemon of {self.address.stand} did not answer ({error}).",
-                "See whether it runs (revmark status); a retry of the same command is safe.",
+                "See whether it runs (revmark status), and whether this was done, before you repeat it.",
             ) from error
         return _unpack(status, answer, self.address)
 

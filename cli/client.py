@@ -9,8 +9,9 @@ from __future__ import annotations
 import json
 import os
 import socket
+from collections.abc import Mapping
 from contextlib import suppress
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -34,6 +35,9 @@ class Address:
     port: int
     token: str
     unix: str | None
+    show: Mapping[str, str] = field(default_factory=dict)
+    """By channel, how the stand file has its amplitudes shown; empty from an older daemon."""
+    time_zone: str | None = None
 
     def connect(self) -> socket.socket:
         """A connected socket. Raises OSError when nobody answers."""
@@ -59,6 +63,8 @@ def _read_runtime(path: Path) -> Address | None:
             int(told["port"]),
             told["token"],
             told.get("socket"),
+            dict(told.get("show") or {}),
+            told.get("time_zone"),
         )
     except (OSError, ValueError, KeyError, TypeError):
         return None

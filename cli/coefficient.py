@@ -35,15 +35,21 @@ def list_(
     with reading(stand) as history:
         if model is not None:
             history.model(model)  # a typo is not an empty list
-        found = [asjson.coefficient_json(c) for c in history.coefficients(model, plane, channel, speed_hz)]
+        known = history.coefficients(model, plane, channel, speed_hz)
+        set_ups = {one: history.set_up(one) for one in {c.set_up_id for c in known}}
+    probes = [set_ups[c.set_up_id].channel(c.channel) for c in known]
+    found = [
+        {**asjson.coefficient_json(c), "unit": probe.unit if probe else None}
+        for c, probe in zip(known, probes, strict=True)
+    ]
     if as_json:
         print_json(found)
         return
     rows = [
         (c["model"], c["machine"], c["job"], c["plane"], c["channel"], f"{c['speed_rpm']:.0f}",
-         f"{c['amplitude_pk_per_gmm']:.4g}", angle(c["lag_deg"]),
+         f"{c['amplitude_pk_per_gmm']:.4g}", f"{c['unit'] or '?'} pk/g.mm", angle(c["lag_deg"]),
          f"{100 * c['se_pk_per_gmm'] / c['amplitude_pk_per_gmm']:.1f}")
         for c in found
     ]  # fmt: skip
-    headers = ["model", "machine", "job", "plane", "channel", "r/min", "pk/g.mm", "lag", "+- %"]
-    say(table(rows, headers, "lllrlrrrr"))
+    headers = ["model", "machine", "job", "plane", "channel", "r/min", "effect", "unit", "lag deg", "+- %"]
+    say(table(rows, headers, "lllrlrrlrr"))

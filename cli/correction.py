@@ -7,7 +7,19 @@ from typing import Any
 
 import click
 
-from cli.output import angle, clean, json_option, print_json, say, shown, stand_option, table, warn
+from cli.output import (
+    ANGLES,
+    Show,
+    angle,
+    clean,
+    json_option,
+    print_json,
+    say,
+    shown,
+    stand_option,
+    table,
+    warn,
+)
 from cli.typed import Quantity, Speed
 
 Json = Mapping[str, Any]
@@ -26,7 +38,7 @@ Json = Mapping[str, Any]
 @json_option
 def command(stand: str | None, *, as_json: bool, **told: Any) -> None:
     """The correction weights for one or two planes, in real holes, and the residual they should leave."""
-    from cli.place import newest_job, reading
+    from cli.place import manner, newest_job, reading
     from store import consult
     from store.balance.cautions import CORRECTION
 
@@ -44,12 +56,12 @@ def command(stand: str | None, *, as_json: bool, **told: Any) -> None:
     if as_json:
         print_json(advice)
         return
-    say(*advice_lines(advice))
+    say(*advice_lines(advice, manner(stand).show))
     for line in CORRECTION:
         warn(f"caution: {line}")
 
 
-def advice_lines(advice: Json) -> Iterator[str]:
+def advice_lines(advice: Json, show: Show | None = None) -> Iterator[str]:
     """The advice in lines that fit 80 columns, from its JSON."""
     base = advice["base"]
     slow = f", less slow roll {clean(advice['slow_roll_run'])}" if advice["slow_roll_run"] else ""
@@ -58,16 +70,43 @@ def advice_lines(advice: Json) -> Iterator[str]:
         f"{advice['speed_hz'] * 60:.0f} r/min"
     )
     yield f"from {base['label']}, run {clean(base['run'])} reading {base['reading']}{slow}"
+    if advice["fitted_now"]:
+        yield f"ADD to what is fitted now, and leave it on: {_fitted(advice['fitted_now'])}"
     yield ""
     yield _pieces(advice["planes"])
+    yield ANGLES
     yield ""
     for plane in advice["planes"]:
         yield from _plane_lines(plane)
     for left in advice["left_out"]:
-        yield f"plane {left['plane']} is left out: {clean(left['why'])}"
+        yield f"plane {left['plane']} is left out: {clean(left['why'])}; {_stays(left)}"
     yield ""
-    yield _outlook(advice["channels"])
+    yield _outlook(advice["channels"], show)
     yield from _words(advice)
+
+
+def _fitted(pieces: list[Json]) -> str:
+    """``plane 1: 10 g in hole 5; plane 2: 3 g in hole 2, drilled 1 g in hole 7``."""
+    by_plane: dict[int, list[str]] = {}
+    for piece in pieces:
+        drilled = "drilled " if piece["drilled"] else ""
+        by_plane.setdefault(piece["plane"], []).append(f"{drilled}{piece['mass_g']:g} g {_where(piece)}")
+    return "; ".join(f"plane {plane}: {', '.join(told)}" for plane, told in by_plane.items())
+
+
+def _where(piece: Json) -> str:
+    if piece["hole"] is not None:
+        return f"in hole {piece['hole']}"
+    degrees = piece["against_rotation_deg"]
+    return "at an angle not known" if degrees is None else f"at {angle(degrees)} deg"
+
+
+def _stays(left: Json) -> str:
+    stays = left["unbalance_that_stays"]
+    if stays is None:
+        return "its unbalance stays, how much is not known"
+    spot = angle(stays["against_rotation_deg"])
+    return f"its unbalance stays, {stays['gmm']:.1f} g.mm, heavy spot at {spot} deg"
 
 
 def _pieces(planes: list[Json]) -> str:
@@ -75,10 +114,9 @@ def _pieces(planes: list[Json]) -> str:
     for plane in planes:
         for piece in plane["pieces"]:
             hole = piece["hole"] if piece["hole"] is not None else "-"
-            held = plane["already_in_hole_g"].get(str(hole))
             rows.append(
                 (plane["plane"], hole, angle(piece["against_rotation_deg"]), f"{piece['mass_g']:.1f}",
-                 f"{piece['radius_mm']:g}", f"{held:g}" if held else "-")
+                 f"{piece['radius_mm']:g}", _there(piece))
             )  # fmt: skip
         if not plane["pieces"]:
             rows.append((plane["plane"], "-", "-", "nothing", "-", "-"))
@@ -86,44 +124,44 @@ def _pieces(planes: list[Json]) -> str:
     return table(rows, headers, "rrrrrr")
 
 
+def _there(piece: Json) -> str:
+    """What sits already where a piece goes."""
+    fitted, drilled = piece["there_now_g"], piece["drilled_there_g"]
+    told = [f"{fitted:g}"] if fitted else []
+    return ", ".join([*told, *([f"drilled {drilled:g}"] if drilled else [])]) or "-"
+
+
 def _plane_lines(plane: Json) -> Iterator[str]:
-    add, left = plane["add"], plane["predicted_residual"]
+    add, left, share = plane["add"], plane["left_by_rounding"], plane["permissible_share_gmm"]
     yield (
-        f"plane {plane['plane']}: exact {add['gmm']:.1f} g.mm at {angle(add['against_rotation_deg'])} deg "
-        f"(+- {plane['add_sd_per_component_gmm']:.1f}), force {plane['force_n']:.1f} N"
+        f"plane {plane['plane']}: add {add['gmm']:.1f} g.mm at {angle(add['against_rotation_deg'])} deg, "
+        f"force {plane['force_n']:.1f} N"
     )
-    share = plane["permissible_share_gmm"]
-    limit = f" of {share:.1f} permissible" if share is not None else "; no tolerance on record"
-    yield f"  predicted residual {left['gmm']:.1f} g.mm{limit}"
+    limit = f"permissible {share:.1f}" if share is not None else "no tolerance on record"
+    spread = f"+- {plane['add_sd_per_component_gmm']:.1f} (one sd per component)"
+    yield f"  left by rounding to holes {left['gmm']:.1f} g.mm; spread {spread}; {limit}"
     if plane["instead_of_what_is_fitted"]:
         told = ", ".join(_piece(p) for p in plane["instead_of_what_is_fitted"])
-        yield f"  or, with all that is fitted there taken off: {told}"
+        rounding = plane["left_by_rounding_instead"]["gmm"]
+        yield f"  INSTEAD, with all that is fitted there taken off: {told}"
+        yield f"    (left by rounding to holes {rounding:.1f} g.mm)"
 
 
 def _piece(piece: Json) -> str:
-    hole = piece["hole"]
-    where = f"hole {hole}" if hole is not None else f"{angle(piece['against_rotation_deg'])} deg"
-    return (
-        f"{piece['mass_g']:.1f} g in {where}" if hole is not None else f"{piece['mass_g']:.1f} g at {where}"
-    )
+    return f"{piece['mass_g']:.1f} g {_where(piece)}"
 
 
-def _outlook(channels: list[Json]) -> str:
+def _outlook(channels: list[Json], show: Show | None) -> str:
     rows = []
     for channel in channels:
-        base, unit, base_lag = _shown(channel, channel["base"])
-        size, _, lag = _shown(channel, channel["predicted"])
-        wide, _, _ = _shown(channel, {**channel["predicted"], "amplitude_pk": channel["predicted_p90_pk"]})
-        middle, _, _ = _shown(
-            channel, {**channel["predicted"], "amplitude_pk": channel["predicted_median_pk"]}
-        )
+        name, foreseen = {"channel": channel["channel"]}, channel["predicted"]
+        base, unit, base_lag = shown({**name, **channel["base"]}, show)
+        size, _, lag = shown({**name, **foreseen}, show)
+        wide, _, _ = shown({**name, **foreseen, "amplitude_pk": channel["predicted_p90_pk"]}, show)
+        middle, _, _ = shown({**name, **foreseen, "amplitude_pk": channel["predicted_median_pk"]}, show)
         rows.append((channel["channel"], unit, base, base_lag, size, lag, middle, wide))
     headers = ["channel", "unit", "base", "lag", "predicted", "lag", "median", "9 of 10 below"]
     return table(rows, headers, "llrrrrrr")
-
-
-def _shown(channel: Json, vector: Json) -> tuple[str, str, str]:
-    return shown({"channel": channel["channel"], **vector})
 
 
 def _words(advice: Json) -> Iterator[str]:

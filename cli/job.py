@@ -3,12 +3,25 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
+from datetime import tzinfo
 from typing import Any
 
 import click
 
 from cli.marked import print_verdict
-from cli.output import clean, json_option, print_json, say, shown, stand_option, table
+from cli.output import (
+    ANGLES,
+    Show,
+    clean,
+    json_option,
+    local,
+    print_json,
+    say,
+    shown,
+    stand_option,
+    table,
+    times,
+)
 from cli.weight import place
 
 Json = Mapping[str, Any]
@@ -24,7 +37,7 @@ def group() -> None: ...
 @json_option
 def list_(stand: str | None, machine: str | None, *, as_json: bool) -> None:
     """The jobs, newest first."""
-    from cli.place import reading
+    from cli.place import manner, reading
     from store import asjson
 
     with reading(stand) as history:
@@ -34,12 +47,13 @@ def list_(stand: str | None, machine: str | None, *, as_json: bool) -> None:
     if as_json:
         print_json(jobs)
         return
+    zone = manner(stand).zone
     rows = [
-        (j["job"], j["machine"], (j["opened_utc"] or "")[:16].replace("T", " "),
+        (j["job"], j["machine"], local(j["opened_utc"], zone)[:16],
          ", ".join(f"{s:.0f}" for s in j["speeds_rpm"]))
         for j in jobs
     ]  # fmt: skip
-    say(table(rows, ["job", "machine", "opened UTC", "balancing r/min"], "lllr"))
+    say(table(rows, ["job", "machine", "opened", "balancing r/min"], "lllr"), times(zone))
 
 
 @group.command(context_settings={"max_content_width": 80})
@@ -48,7 +62,7 @@ def list_(stand: str | None, machine: str | None, *, as_json: bool) -> None:
 @json_option
 def show(job: str, stand: str | None, *, as_json: bool) -> None:
     """One job: its mounts, runs, weights, and the verdict of its newest check."""
-    from cli.place import reading
+    from cli.place import manner, reading
     from store import consult
 
     with reading(stand) as history:
@@ -56,41 +70,49 @@ def show(job: str, stand: str | None, *, as_json: bool) -> None:
     if as_json:
         print_json(told)
         return
-    say(*_lines(told))
+    how = manner(stand)
+    say(*_lines(told, how.show, how.zone))
     if told["verdict"]:
         say("")
-        print_verdict(told["verdict"])
+        print_verdict(told["verdict"], how.show)
 
 
-def _lines(told: Json) -> Iterator[str]:
+def _lines(told: Json, show: Show, zone: tzinfo) -> Iterator[str]:
     speeds = ", ".join(f"{s:.0f}" for s in told["speeds_rpm"])
     yield f"job {clean(told['job'])}: {clean(told['machine'])}, balancing speed {speeds} r/min"
     for mount in told["mounts"]:
         marks = ", ".join(f"plane {m['plane']} {m['from_hole1_deg']:g} deg" for m in mount["marks"])
-        yield f"mounted {mount['at_utc'][:16].replace('T', ' ')} UTC, turning {clean(mount['rotation'])}"
+        yield f"mounted {local(mount['at_utc'], zone)[:16]}, turning {clean(mount['rotation'])}"
         if marks:
             yield f"  rotor mark from hole 1: {marks} ({clean(mount['mark_how'] or 'how is not recorded')})"
     yield ""
-    yield _runs(told["runs"])
+    yield _runs(told["runs"], show)
     if told["weights"]:
         yield ""
         yield table(
             [(w["act"], place(w), w["after_run"] or "the mount", w["who"]) for w in told["weights"]],
             ["weight", "where", "after", "who"],
         )
+        if not told["verdict"] and any(w["hole"] is None for w in told["weights"]):
+            yield ANGLES
+    yield times(zone)
 
 
-def _runs(runs: list[Json]) -> str:
+def _runs(runs: list[Json], show: Show) -> str:
+    from daq.signal.health import short
+    from store.records import flags_of
+
     rows = []
     for run in runs:
         for reading in run["readings"]:
             for vector in reading["vectors"]:
                 if vector["order"] == 1:
-                    size, unit, lag = shown(vector)
+                    size, unit, lag = shown(vector, show)
+                    flags = ", ".join(map(short, flags_of(reading["flags"], vector["channel"])))
                     what = reading["label"] or "-"
                     rows.append(
                         (run["run"], reading["number"], what, f"{reading['speed_rpm']:.1f}",
-                         vector["channel"], size, unit, lag, "yes" if reading["flags"] else "")
+                         vector["channel"], size, unit, lag, flags)
                     )  # fmt: skip
         if not run["readings"]:
             rows.append((run["run"], "-", "no reading", "-", "-", "-", "-", "-", ""))

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from cli.output import angle, clean, say, shown, table, warn
+from cli.output import ANGLES, Show, angle, clean, say, shown, shown_error, table, warn
 
 Json = Mapping[str, Any]
 
@@ -30,37 +30,38 @@ def print_marked(answer: Json) -> None:
     for text in answer.get("warnings", []):
         warn(f"warning: {clean(text)}")
     if answer.get("verdict"):
-        print_verdict(answer["verdict"])
+        print_verdict(answer["verdict"], answer.get("show"))
 
 
-def vector_table(vectors: list[Json], show: Mapping[str, str] | None = None) -> str:
+def vector_table(vectors: list[Json], show: Show | None = None) -> str:
     """1X and higher orders by channel, with the standard error of the amplitude as shown."""
     rows = []
     for vector in vectors:
         size, unit, lag = shown(vector, show)
-        error, _, _ = shown({**vector, "amplitude_pk": vector["se_pk"]}, show)
+        error = shown_error(vector, vector["se_pk"], show)
         rows.append((vector["channel"], f"{vector['order']}X", size, unit, lag, error))
     return table(rows, ["channel", "order", "amplitude", "unit", "lag deg", "+-"], "llrlrr")
 
 
-def print_verdict(verdict: Json) -> None:
+def print_verdict(verdict: Json, show: Show | None = None) -> None:
     """Measured beside predicted, residual unbalance beside its tolerance, and the verdict."""
-    say("", _beside(verdict["channels"]), "", _residuals(verdict["planes"]))
+    say("", _beside(verdict["channels"], show), "", _residuals(verdict["planes"]), ANGLES)
     say(*_verdict_lines(verdict))
     for text in verdict["warnings"]:
         warn(f"warning: {clean(text)}")
 
 
-def _beside(channels: list[Json]) -> str:
+def _beside(channels: list[Json], show: Show | None) -> str:
     rows = []
     for channel in channels:
         name = {"channel": channel["channel"]}
-        size, unit, lag = shown({**name, **channel["measured"]})
+        size, unit, lag = shown({**name, **channel["measured"]}, show)
         if channel["predicted"] is None:
             rows.append((channel["channel"], unit, size, lag, "-", "-", "-"))
             continue
-        foreseen, _, foreseen_lag = shown({**name, **channel["predicted"]})
-        apart, _, _ = shown({**name, **channel["predicted"], "amplitude_pk": channel["difference_pk"]})
+        foreseen, _, foreseen_lag = shown({**name, **channel["predicted"]}, show)
+        far = {**name, **channel["predicted"], "amplitude_pk": channel["difference_pk"]}
+        apart, _, _ = shown(far, show)
         rows.append((channel["channel"], unit, size, lag, foreseen, foreseen_lag, apart))
     headers = ["channel", "unit", "measured", "lag deg", "predicted", "lag deg", "apart"]
     return table(rows, headers, "llrrrrr")
@@ -81,7 +82,7 @@ def _residuals(planes: list[Json]) -> str:
                 verdict,
             )
         )
-    headers = ["plane", "residual g.mm", "+-", "at deg", "permissible g.mm", "tolerance"]
+    headers = ["plane", "residual g.mm", "+-", "heavy spot deg", "permissible g.mm", "tolerance"]
     return table(rows, headers, "rrrrrl")
 
 

@@ -6,13 +6,20 @@ import json
 import math
 import sys
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from typing import Any, TypeVar
+from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
+
+if TYPE_CHECKING:
+    from datetime import tzinfo
+
+    from config.units import Display
 
 F = TypeVar("F", bound=Callable[..., Any])
 Json = Mapping[str, Any]
 COLUMNS = 80
+ANGLES = "angles: degrees from the rotor mark, against rotation"
+"""Said once by whatever prints places on the rotor."""
 
 
 def clean(text: object) -> str:
@@ -85,26 +92,66 @@ def is_terminal() -> bool:
     return sys.stdin.isatty() and sys.stdout.isatty()
 
 
-def amplitude(value_pk: float, unit: str, show: str) -> float:
-    """A stored 0-peak amplitude as it is shown (``show`` like ``um pp``)."""
-    from config.units import AMPLITUDE_UNITS, parse_display
-
-    kind = next(k for k, units in AMPLITUDE_UNITS.items() if unit in units)
-    return value_pk * parse_display(show, kind).factor
-
-
 DEFAULT_SHOW = {"um": "um pp", "mm/s": "mm/s rms", "m/s2": "m/s2 rms"}
 
 
-def shown(vector: Json, show: Mapping[str, str] | None = None) -> tuple[str, str, str]:
+Show = Mapping[str, str]
+"""By channel, how its amplitudes are shown: ``um pp``."""
+
+
+def display_of(channel: str, unit: str, show: Show | None = None) -> Display:
+    """How a channel of this base unit is shown: as the stand file says, else by its unit alone.
+
+    A channel that measured something else when it was recorded is not shown in today's unit.
+    """
+    from config.units import AMPLITUDE_UNITS, parse_display
+
+    kind = next(k for k, units in AMPLITUDE_UNITS.items() if unit in units)
+    told = (show or {}).get(channel) or DEFAULT_SHOW[unit]
+    fits = told.rpartition(" ")[0] in AMPLITUDE_UNITS[kind]
+    return parse_display(told if fits else DEFAULT_SHOW[unit], kind)
+
+
+def decimals(display: Display) -> int:
+    """Three for um and mm/s, more where the unit is a coarse one (mil, ips)."""
+    return 3 + max(0, math.floor(-math.log10(display.factor)))
+
+
+def shown(vector: Json, show: Show | None = None) -> tuple[str, str, str]:
     """Amplitude, its unit and the lag of a vector of the JSON answers, as text for a table."""
-    how = (show or {}).get(vector["channel"]) or DEFAULT_SHOW[vector["unit"]]
-    lag = vector["lag_deg"]
+    display, lag = display_of(vector["channel"], vector["unit"], show), vector["lag_deg"]
+    size = vector["amplitude_pk"] * display.factor
     return (
-        f"{amplitude(vector['amplitude_pk'], vector['unit'], how):.3f}",
-        how,
+        f"{size:.{decimals(display)}f}",
+        display.name,
         "below noise" if lag is None else angle(lag),
     )
+
+
+def shown_error(vector: Json, error_pk: float, show: Show | None = None) -> str:
+    """An error of a vector's amplitude, in the vector's unit as it is shown, to three figures."""
+    return figures(error_pk * display_of(vector["channel"], vector["unit"], show).factor)
+
+
+def figures(value: float) -> str:
+    """Three significant figures without an exponent: ``0.00412``, ``1.23``, ``162``."""
+    if not math.isfinite(value) or value == 0:
+        return f"{value:g}"
+    return f"{value:.{min(9, max(0, 2 - math.floor(math.log10(abs(value)))))}f}"
+
+
+def local(at_utc: str | None, zone: tzinfo) -> str:
+    """A time of the JSON answers in a time zone, to the second and without the zone's name."""
+    from datetime import datetime
+
+    if not at_utc:
+        return "-"
+    return datetime.fromisoformat(at_utc).astimezone(zone).strftime("%Y-%m-%d %H:%M:%S")
+
+
+def times(zone: tzinfo) -> str:
+    """The line that names the zone of the times above it."""
+    return f"times: {getattr(zone, 'key', 'UTC')}"
 
 
 def angle(degrees: float) -> str:

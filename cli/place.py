@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import dataclass, field
+from datetime import UTC, tzinfo
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from cli.client import find
-from config.errors import DaemonError
+from cli.client import Address, find
+from config.errors import DaemonError, RevmarkError
 
 if TYPE_CHECKING:
     from store.history import History
@@ -26,6 +28,43 @@ def store_path(stand: str | None) -> Path:
         raise DaemonError(
             error.cause, f"Name the stand whose store to read: --stand FILE. {error.remedy}"
         ) from error
+
+
+@dataclass(frozen=True, slots=True)
+class Manner:
+    """How a stand has its figures printed. JSON heeds none of it."""
+
+    show: Mapping[str, str] = field(default_factory=dict)
+    """By channel; one that is not there is shown by its unit alone."""
+    zone: tzinfo = UTC
+    """In which times are printed."""
+
+
+def manner(stand: str | None) -> Manner:
+    """The manner of the stand file named, else of the daemon that runs; the plain one when neither tells."""
+    try:
+        if stand is None:
+            return manner_of(find(None))
+        from config.stand import load_stand
+
+        told = load_stand(Path(stand))
+    except RevmarkError:
+        return Manner()
+    return Manner({c.name: c.display.name for c in told.channels}, told.zone)
+
+
+def manner_of(address: Address) -> Manner:
+    """As the daemon published it when it started."""
+    return Manner(address.show, _zone(address.time_zone))
+
+
+def _zone(name: str | None) -> tzinfo:
+    from zoneinfo import ZoneInfo
+
+    try:
+        return ZoneInfo(name) if name else UTC
+    except (KeyError, ValueError):
+        return UTC
 
 
 @contextmanager

@@ -2,18 +2,16 @@
 
 from __future__ import annotations
 
-from datetime import UTC, tzinfo
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
 
-from cli.output import DEFAULT_SHOW, clean, json_option, print_json, say, stand_option, warn
+from cli.output import clean, display_of, json_option, print_json, say, stand_option, warn
 from cli.typed import Speed
 
 if TYPE_CHECKING:
-    from config.stand import Stand
-    from config.units import Display
+    from cli.place import Manner
     from store.casework_polar import PolarPicture
     from store.history import History
 
@@ -54,11 +52,11 @@ def group() -> None: ...
 def polar(job: str, file: Path, stand: str | None, *, as_json: bool, **told: Any) -> None:
     """Draw a job's vectors: O, O+T and its effect, check, predicted check, trim, slow roll."""
     _may_write(file, force=told["force"])
-    from cli.place import reading
+    from cli.place import manner, reading
 
     with reading(stand) as history:
         picture = _picture(history, job, told["channels"], told["speed_hz"])
-    _draw(picture, file, told["dpi"], _stand_file(stand))
+    _draw(picture, file, told["dpi"], manner(stand))
     if as_json:
         print_json({"file": str(file), **picture.to_dict()})
         return
@@ -86,18 +84,18 @@ def _picture(history: History, job: str, channels: tuple[str, ...], speed_hz: fl
     )
 
 
-def _draw(picture: PolarPicture, file: Path, dpi: int, stand: Stand | None) -> None:
+def _draw(picture: PolarPicture, file: Path, dpi: int, how: Manner) -> None:
     """Everything is drawn before the file is touched."""
     import warnings
 
     from cli.plots import polar as plots
     from config.errors import Refusal
 
-    zone: tzinfo = stand.zone if stand else UTC
+    shows = {c.channel: display_of(c.channel, c.unit, how.show) for c in picture.channels}
     form = file.suffix.lower().removeprefix(".")
     with warnings.catch_warnings(record=True) as missing:
         warnings.simplefilter("always")
-        drawing = plots.draw(picture, _shows(picture, stand), zone)
+        drawing = plots.draw(picture, shows, how.zone)
         longest = max(drawing.page.width, drawing.page.height) * dpi
         if form == "png" and longest > MOST_DOTS:
             raise Refusal(
@@ -108,31 +106,6 @@ def _draw(picture: PolarPicture, file: Path, dpi: int, stand: Stand | None) -> N
     if any("missing from font" in str(w.message) for w in missing):
         warn("note: some characters of the names are not in the font and are drawn as boxes")
     _write(file, data)
-
-
-def _stand_file(stand: str | None) -> Stand | None:
-    """The stand file meant, for its time zone and units; None when it cannot be read any more."""
-    from cli.client import find
-    from config.errors import RevmarkError
-    from config.stand import load_stand
-
-    try:
-        return load_stand(Path(stand if stand is not None else find(None).stand_file))
-    except RevmarkError:
-        return None
-
-
-def _shows(picture: PolarPicture, stand: Stand | None) -> dict[str, Display]:
-    """How each channel is shown: as the stand file says, else by its unit."""
-    from config.units import BASE_UNIT, parse_display
-
-    kinds = {unit: kind for kind, unit in BASE_UNIT.items()}
-    found = {c.channel: parse_display(DEFAULT_SHOW[c.unit], kinds[c.unit]) for c in picture.channels}
-    for channel in picture.channels:
-        told = stand.channel(channel.channel) if stand else None
-        if told is not None and told.unit == channel.unit:
-            found[channel.channel] = told.display
-    return found
 
 
 # --- the file ------------------------------------------------------------------------------------------

@@ -2,13 +2,25 @@
 
 from __future__ import annotations
 
+from datetime import tzinfo
 from typing import Any
 
 import click
 
 from cli.client import Client, find, new_key
 from cli.marked import vector_table
-from cli.output import clean, finite, json_option, operator_option, print_json, say, stand_option, table
+from cli.output import (
+    clean,
+    finite,
+    json_option,
+    local,
+    operator_option,
+    print_json,
+    say,
+    stand_option,
+    table,
+    times,
+)
 
 
 @click.group(help="Runs and their readings.")
@@ -25,7 +37,7 @@ def group() -> None: ...
 @json_option
 def list_(stand: str | None, job: str | None, machine: str | None, limit: int, *, as_json: bool) -> None:
     """The newest runs."""
-    from cli.place import reading
+    from cli.place import manner, reading
     from store import asjson
 
     with reading(stand) as history:
@@ -33,13 +45,15 @@ def list_(stand: str | None, job: str | None, machine: str | None, limit: int, *
     if as_json:
         print_json(lines)
         return
+    zone = manner(stand).zone
     rows = [
-        (r["run"], r["machine"] or "-", (r["started_utc"] or "")[:16].replace("T", " "),
+        (r["run"], r["machine"] or "-", local(r["started_utc"], zone)[:16],
          finite(r["speed_rpm"], ".0f"), r["readings"], ", ".join(r["labels"]) or "-",
          "void" if r["void"] else r["state"])
         for r in lines
     ]  # fmt: skip
-    say(table(rows, ["run", "machine", "started UTC", "r/min", "readings", "labels", "state"], "lllrrll"))
+    headers = ["run", "machine", "started", "r/min", "readings", "labels", "state"]
+    say(table(rows, headers, "lllrrll"), times(zone))
 
 
 @group.command(context_settings={"max_content_width": 80})
@@ -48,7 +62,7 @@ def list_(stand: str | None, job: str | None, machine: str | None, limit: int, *
 @json_option
 def show(run: str, stand: str | None, *, as_json: bool) -> None:
     """One run with its readings and vectors."""
-    from cli.place import reading
+    from cli.place import manner, reading
     from daq.signal.health import sentence
     from store import asjson
 
@@ -57,24 +71,25 @@ def show(run: str, stand: str | None, *, as_json: bool) -> None:
     if as_json:
         print_json(told)
         return
-    say(*_described(told))
+    how = manner(stand)
+    say(*_described(told, how.zone))
     for one in told["readings"]:
         label = f" {one['label']}" if one["label"] else ""
         say(
             "",
             f"reading {one['number']}{label}: {one['speed_rpm']:.1f} r/min, {one['revolutions']} revolutions "
             f"in {one['duration_s']:.1f} s",
-            vector_table(one["vectors"]),
+            vector_table(one["vectors"], how.show),
             *(f"flag: {clean(sentence(f))}" for f in one["flags"]),
         )
 
 
-def _described(run: dict[str, Any]) -> list[str]:
+def _described(run: dict[str, Any], zone: tzinfo) -> list[str]:
     also = f" (also {run['unassigned']})" if run["unassigned"] and run["job"] else ""
     lines = [
         f"run {clean(run['run'])}{also}: {run['origin']}, {run['state']}"
         + (f", {clean(run['reason'])}" if run["reason"] else ""),
-        f"started {run['started_utc']}, ended {run['ended_utc'] or '-'}",
+        f"started {local(run['started_utc'], zone)}, ended {local(run['ended_utc'], zone)}; {times(zone)}",
     ]
     if run["operator"]:
         lines.append(f"operator {clean(run['operator'])}")

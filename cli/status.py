@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from datetime import tzinfo
 from typing import Any
 
 import click
 
 from cli.client import Client, find
-from cli.output import clean, json_option, print_json, say, stand_option, table
+from cli.output import Show, clean, json_option, local, print_json, say, shown, stand_option, table, times
 
 Json = Mapping[str, Any]
 
@@ -18,46 +19,71 @@ Json = Mapping[str, Any]
 @json_option
 def command(stand: str | None, *, as_json: bool) -> None:
     """What the stand does now, what is mounted, what waits and what is still unsteady."""
-    answer = Client(find(stand)).get("/v1/status")
+    from cli.place import manner_of
+
+    address = find(stand)
+    answer = Client(address).get("/v1/status")
     if as_json:
         print_json(answer)
         return
-    say(*_lines(answer))
-    if answer["live"]["vectors"]:
-        say(_live_table(answer["live"]["vectors"]))
+    how = manner_of(address)
+    say(*status_lines(answer, how.show, how.zone))
 
 
-def _lines(answer: Json) -> list[str]:
-    live, mount, pending = answer["live"], answer["mount"], answer["pending"]
-    speed = f", {live['speed_rpm']:.1f} r/min" if live["speed_rpm"] is not None else ""
-    lines = [f"stand    {clean(answer['stand'])}: {live['state']}{speed}"]
-    if live["detail"]:
-        lines.append(f"         {clean(live['detail'])}")
-    lines.append(f"source   {clean(live['source'])}")
-    lines.append(f"store    {clean(answer['store'])}: {clean(live['store'])}")
-    if live["held_records"]:
-        lines.append(f"         held in memory until it writes again: {live['held_records']} records")
+def status_lines(answer: Json, show: Show, zone: tzinfo) -> list[str]:
+    """The answer in lines that fit 80 columns. An older daemon may leave out any of it."""
+    vectors = answer.get("live", {}).get("vectors")
+    return [*_lines(answer, zone), *([_live_table(vectors, show)] if vectors else [])]
+
+
+def _lines(answer: Json, zone: tzinfo) -> list[str]:
+    live, mount = answer.get("live", {}), answer.get("mount")
+    speed = f", {live['speed_rpm']:.1f} r/min" if live.get("speed_rpm") is not None else ""
+    lines = [f"stand    {_word(answer, 'stand')}: {_word(live, 'state')}{speed}"]
+    lines += _below(live.get("detail"))
+    if answer.get("stand_file_changed"):
+        lines += _below("the stand file has changed since the daemon read it; a restart takes it up")
+    lines.append(f"source   {_word(live, 'source')}")
+    lines.append(f"store    {_word(answer, 'store')}: {_word(live, 'store')}")
+    if live.get("held_records"):
+        lines += _below(f"held in memory until it writes again: {live['held_records']} records")
     if mount:
-        lines.append(
-            f"mounted  {clean(mount['machine'])} (model {clean(mount['model'])}), job {clean(mount['job'])}"
-        )
+        of = f"(model {_word(mount, 'model')}), job {_word(mount, 'job')}"
+        lines.append(f"mounted  {_word(mount, 'machine')} {of}")
     else:
         lines.append("mounted  nothing; runs are stored as unassigned")
-    if live["run"]:
-        lines.append(f"run      {clean(live['run'])}, {'steady' if live['steady'] else 'not steady'}")
-    if live["still_out"]:
-        lines.append(f"         {clean(live['still_out'])}")
-    if pending:
-        lines.append(f"mark     {pending['label']} pending since {pending['asked_utc']}")
-    if live["lost_samples"] or live["dropped_readings"]:
-        lines.append(
-            f"lost     {live['lost_samples']} samples, {live['dropped_readings']} readings not stored"
-        )
+    return lines + _run_lines(live) + _mark_lines(answer.get("pending"), zone)
+
+
+def _run_lines(live: Json) -> list[str]:
+    lines = []
+    if live.get("run"):
+        lines.append(f"run      {clean(live['run'])}, {'steady' if live.get('steady') else 'not steady'}")
+    lines += _below(live.get("still_out"))
+    samples, readings = live.get("lost_samples", 0), live.get("dropped_readings", 0)
+    if samples or readings:
+        lines.append(f"lost     {samples} samples, {readings} readings not stored")
     return lines
 
 
-def _live_table(vectors: list[Json]) -> str:
-    rows = [
-        (v["channel"], f"{v['amplitude_pk']:.3f}", f"{v['unit']} pk", f"{v['lag_deg']:.1f}") for v in vectors
-    ]
+def _mark_lines(pending: Json | None, zone: tzinfo) -> list[str]:
+    if not pending:
+        return []
+    since = local(pending.get("asked_utc"), zone)
+    return [f"mark     {_word(pending, 'label')} pending since {since}; {times(zone)}"]
+
+
+def _word(told: Json, key: str) -> str:
+    return clean(told.get(key) or "not told")
+
+
+def _below(text: object) -> list[str]:
+    return [f"         {clean(text)}"] if text else []
+
+
+def _live_table(vectors: list[Json], show: Show) -> str:
+    rows = []
+    for vector in vectors:
+        size, unit, lag = shown(vector, show)
+        rows.append((vector["channel"], size, unit, lag))
     return table(rows, ["channel", "1X now", "unit", "lag deg"], "lrlr")

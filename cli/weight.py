@@ -9,7 +9,18 @@ import click
 
 from cli.asking import post_or_ask
 from cli.client import Client, find, new_key
-from cli.output import clean, json_option, operator_option, print_json, say, stand_option, table, warn
+from cli.output import (
+    ANGLES,
+    angle,
+    clean,
+    json_option,
+    operator_option,
+    print_json,
+    say,
+    stand_option,
+    table,
+    warn,
+)
 from cli.typed import Quantity
 
 Json = Mapping[str, Any]
@@ -115,6 +126,8 @@ def _told(answer: Json, *, as_json: bool) -> None:
         print_json(answer)
     else:
         say(*(f"{w['act']}: {place(w)}" for w in answer["weights"]))
+        if any(w["hole"] is None for w in answer["weights"]):
+            say(ANGLES)
     force = [answer["force"]["caution"]] if answer.get("force") else []
     for line in (*force, *answer.get("cautions", [])):
         warn(f"caution: {clean(line)}")
@@ -134,21 +147,28 @@ def list_(stand: str | None, *, as_json: bool) -> None:
     from cli.place import reading
     from config.errors import Refusal
     from store import asjson
+    from store.casework_scene import fitted_piece
 
     with reading(stand) as history:
         mount = history.current_mount()
         if mount is None:
             raise Refusal("Nothing is mounted.", "Mount a machine with: revmark mount")
-        weights = [asjson.weight_json(w) for w in history.weights(mount.id)]
+        set_up, events = history.newest_set_up(), history.weights(mount.id)
+    placed = [fitted_piece(e, mount, set_up.ends).angle_deg if set_up else e.angle_deg for e in events]
+    weights = [
+        {**asjson.weight_json(e), "against_rotation_deg": degrees}
+        for e, degrees in zip(events, placed, strict=True)
+    ]
     if as_json:
         print_json(weights)
         return
     rows = [
-        (w["plane"], w["act"], w["hole"] or "-", "-" if w["angle_deg"] is None else f"{w['angle_deg']:.1f}",
+        (w["plane"], w["act"], w["hole"] or "-",
+         "not known" if w["against_rotation_deg"] is None else angle(w["against_rotation_deg"]),
          f"{w['mass_g']:g}", f"{w['radius_mm']:g}", w["who"])
         for w in weights
     ]  # fmt: skip
-    say(table(rows, ["plane", "act", "hole", "angle deg", "mass g", "radius mm", "who"], "rlrrrrl"))
+    say(table(rows, ["plane", "act", "hole", "angle deg", "mass g", "radius mm", "who"], "rlrrrrl"), ANGLES)
 
 
 @group.command(context_settings={"max_content_width": 80})
@@ -177,12 +197,11 @@ def _advised(advice: Json) -> list[str]:
         f"trial weight for plane {advice['plane']}: {advice['mass_g']:.1f} g at {advice['radius_mm']:g} mm"
     ]
     if advice["hole"] is not None:
-        lines.append(
-            f"  in hole {advice['hole']} ({advice['hole_against_rotation_deg']:.1f} deg from the mark)"
-        )
+        degrees = angle(advice["hole_against_rotation_deg"])
+        lines.append(f"  in hole {advice['hole']} ({degrees} deg from the rotor mark, against rotation)")
     elif advice["place_against_rotation_deg"] is not None:
         lines.append(
-            f"  at {advice['place_against_rotation_deg']:.1f} deg from the rotor mark, against rotation"
+            f"  at {angle(advice['place_against_rotation_deg'])} deg from the rotor mark, against rotation"
         )
     else:
         lines.append("  no place can be named: choose one, and note it")

@@ -26,7 +26,7 @@ from daq.clock import Clock, SystemClock
 from daq.clockwatch import ClockWatch, step_text
 from daq.control import Identity, application, loopback_socket, serve_control
 from daq.drivers.registry import AnyDriver, make_driver
-from daq.interface import acts, questions
+from daq.interface import acts, questions, shows
 from daq.pump import Pump
 from daq.recorder import Recorder
 from daq.runtime import Access, Runtime, access_of, closed_to_group, give
@@ -157,6 +157,8 @@ class Daemon:
                 "stand": self._stand.name,
                 "stand_file": os.path.realpath(self._stand.file),
                 "store": str(self._stand.store_path),
+                "show": shows(self._stand),
+                "time_zone": self._stand.identity.time_zone,
                 "port": port,
                 "started_us": self._clock.now_us(),
             },

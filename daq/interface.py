@@ -90,8 +90,12 @@ def stand_file_stamp(stand: Stand) -> tuple[int, int] | None:
 def mark_desk(
     stand: Stand, writer: Writer, history: History, board: Board, analysis: Analysis, clock: Clock
 ) -> MarkDesk:
-    show = {c.name: c.shown.name for c in stand.channels if c.shown is not None}
-    return MarkDesk(writer, history, board, clock, analysis, stand.run.slow_roll_limit_hz, show)
+    return MarkDesk(writer, history, board, clock, analysis, stand.run.slow_roll_limit_hz, shows(stand))
+
+
+def shows(stand: Stand) -> dict[str, str]:
+    """By channel, how the stand file has its amplitudes shown."""
+    return {c.name: c.display.name for c in stand.channels}
 
 
 def status_json(stand: Stand, history: History, board: Board) -> Json:

@@ -9,11 +9,13 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Any, Literal
 
-from store.balance.angles import angle_deg
+from store.balance.angles import angle_deg, difference_deg
 from store.balance.holes import Piece
 from store.balance.reuse import NotReused
 
 Source = Literal["own", "history"]
+SAME_PLACE_DEG = 0.5
+"""A piece fitted at an angle this near to a hole is said to be in it (judgement)."""
 
 
 def vector_dict(value: complex, unit: str) -> dict[str, Any]:
@@ -32,6 +34,41 @@ def piece_dict(piece: Piece) -> dict[str, Any]:
         "mass_g": piece.mass_g,
         "radius_mm": piece.radius_mm,
     }
+
+
+@dataclass(frozen=True, slots=True)
+class FittedPiece:
+    """What is on the rotor now, or was at a run."""
+
+    plane: int
+    mass_g: float
+    radius_mm: float
+    own_radius: bool
+    """True where the radius is not the plane's."""
+    hole: int | None
+    angle_deg: float | None
+    """Against rotation from the rotor mark; None = the mark's position is not known."""
+    drilled: bool
+
+    def in_place_of(self, advised: Piece) -> bool:
+        """True when it sits where a piece is advised."""
+        if self.plane != advised.plane:
+            return False
+        if self.hole is not None and advised.hole is not None:
+            return self.hole == advised.hole
+        if self.angle_deg is None:
+            return False
+        return abs(difference_deg(self.angle_deg, advised.angle_deg)) <= SAME_PLACE_DEG
+
+    def to_dict(self) -> dict[str, Any]:
+        return {
+            "plane": self.plane,
+            "hole": self.hole,
+            "against_rotation_deg": self.angle_deg,
+            "mass_g": self.mass_g,
+            "radius_mm": self.radius_mm,
+            "drilled": self.drilled,
+        }
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,11 +117,16 @@ def refused_dict(refused: NotReused) -> dict[str, Any]:
 
 @dataclass(frozen=True, slots=True)
 class LeftOut:
+    """A plane of the rotor that is not corrected: its unbalance stays."""
+
     plane: int
     why: str
+    stays: complex | None = None
+    """Its unbalance with what is fitted now, g.mm at its heavy spot; None = not known."""
 
     def to_dict(self) -> dict[str, Any]:
-        return {"plane": self.plane, "why": self.why}
+        stays = None if self.stays is None else unbalance_dict(self.stays)
+        return {"plane": self.plane, "why": self.why, "unbalance_that_stays": stays}
 
 
 @dataclass(frozen=True, slots=True)
@@ -136,10 +178,12 @@ class PlaneAdvice:
     """To fit beside what is fitted."""
     instead: tuple[Piece, ...]
     """To fit in place of all that is fitted; empty when nothing is, or when it was drilled."""
-    in_hole_g: dict[int, float]
-    """Mass already in the holes that ``pieces`` names, where there is any."""
+    there: tuple[FittedPiece, ...]
+    """What sits already where ``pieces`` go."""
     left: complex
-    """Residual unbalance predicted with ``pieces`` fitted, g.mm at its heavy spot."""
+    """What rounding to holes and masses leaves with ``pieces`` fitted, g.mm at its heavy spot."""
+    left_instead: complex | None
+    """The same with ``instead`` fitted; None when that is empty."""
     share_gmm: float | None
     """This plane's share of the permissible residual unbalance; None = no tolerance on record."""
     force_n: float
@@ -150,6 +194,14 @@ class PlaneAdvice:
         """What ``pieces`` add up to, g.mm."""
         return sum((p.unbalance for p in self.pieces), start=0j)
 
+    def _piece_dict(self, piece: Piece) -> dict[str, Any]:
+        held = [p for p in self.there if p.in_place_of(piece)]
+        return {
+            **piece_dict(piece),
+            "there_now_g": sum(p.mass_g for p in held if not p.drilled),
+            "drilled_there_g": sum(p.mass_g for p in held if p.drilled),
+        }
+
     def to_dict(self) -> dict[str, Any]:
         return {
             "plane": self.plane,
@@ -158,11 +210,13 @@ class PlaneAdvice:
             "add": unbalance_dict(self.add),
             "add_mass_g": abs(self.add) / self.radius_mm,
             "add_sd_per_component_gmm": self.sd_gmm,
-            "pieces": [piece_dict(p) for p in self.pieces],
+            "pieces": [self._piece_dict(p) for p in self.pieces],
             "pieces_sum": unbalance_dict(self.chosen),
             "instead_of_what_is_fitted": [piece_dict(p) for p in self.instead],
-            "already_in_hole_g": {str(h): m for h, m in self.in_hole_g.items()},
-            "predicted_residual": unbalance_dict(self.left),
+            "left_by_rounding": unbalance_dict(self.left),
+            "left_by_rounding_instead": (
+                None if self.left_instead is None else unbalance_dict(self.left_instead)
+            ),
             "permissible_share_gmm": self.share_gmm,
             "force_n": self.force_n,
         }
@@ -182,6 +236,8 @@ class CorrectionAdvice:
     base_label: str
     slow_roll_run: str | None
     """Run whose slow-roll vectors were subtracted; None = runout is corrected as if it were unbalance."""
+    fitted: tuple[FittedPiece, ...]
+    """All that is on the rotor now: the advice is to be added to it."""
     planes: tuple[PlaneAdvice, ...]
     left_out: tuple[LeftOut, ...]
     channels: tuple[ChannelOutlook, ...]
@@ -203,6 +259,7 @@ class CorrectionAdvice:
             "origins": list(self.origins),
             "base": {"run": self.base_run, "reading": self.base_reading, "label": self.base_label},
             "slow_roll_run": self.slow_roll_run,
+            "fitted_now": [p.to_dict() for p in self.fitted],
             "planes": [p.to_dict() for p in self.planes],
             "left_out": [p.to_dict() for p in self.left_out],
             "channels": [c.to_dict() for c in self.channels],

@@ -17,11 +17,19 @@ from store.balance.tolerance import Tolerance, tolerance_of
 from store.balance.trial import force_n
 from store.balance.uncertainty import REFUSE_BELOW_RATIO, WARN_BELOW_RATIO, amplitude_quantile
 from store.balance.weights import Unbalances, pieces_now
-from store.casework_answers import ChannelOutlook, CorrectionAdvice, LeftOut, PlaneAdvice, UsedCoefficient
+from store.casework_answers import (
+    ChannelOutlook,
+    CorrectionAdvice,
+    FittedPiece,
+    LeftOut,
+    PlaneAdvice,
+    UsedCoefficient,
+)
 from store.casework_scene import (
     Scene,
     Sources,
     base_of,
+    fitted_piece,
     history,
     left_notes,
     predict,
@@ -39,6 +47,8 @@ REFUSE_CONDITION = 1e3
 """Ratio of singular values above which planes can hardly be told apart by the probes (judgement)."""
 WARN_P90_SHARE = 0.6
 """Predicted p90 residual over what is there now (REUSE (d) 12)."""
+NEAR_SD = 3.0
+"""An unbalance within so many of its standard deviations is near what the coefficients tell (judgement)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -140,7 +150,9 @@ def correction_for(
     if not solved:
         raise _nothing_known(scene, wanted, reused)
     made = system(scene, found, base, _slow(scene, asked=subtract_slow_roll), solved)
-    return _advice(made, tuple(p for p in wanted if p not in solved), reused, step_g)
+    asked = {p.number for p in wanted}
+    left_out = tuple(p for p in scene.planes if p not in solved)
+    return _advice(made, _left_out(made, left_out, asked, reused), reused, step_g)
 
 
 def _wanted(scene: Scene, planes: tuple[int, ...] | None) -> tuple[WeightPlane, ...]:
@@ -203,7 +215,7 @@ def _nothing_known(scene: Scene, wanted: tuple[WeightPlane, ...], reused: ReuseP
 
 
 def _advice(
-    made: System, left_out: tuple[WeightPlane, ...], reused: ReusePool | None, step_g: float
+    made: System, left_out: tuple[LeftOut, ...], reused: ReusePool | None, step_g: float
 ) -> CorrectionAdvice:
     scene = made.scene
     weights_now = scene.weights_now()
@@ -214,6 +226,7 @@ def _advice(
     add = {p.number: -u for p, u in zip(made.planes, made.unbalance(now), strict=True)}
     tolerance = tolerance_of(scene.standing.mount.machine)
     planes = _planes(made, add, weights_now, since, now, tolerance, step_g)
+    within = () if left_out else _already_within(planes, since)
     channels = _outlooks(made, now, _with_pieces(since, planes))
     machine = scene.standing.mount.machine
     return CorrectionAdvice(
@@ -225,9 +238,10 @@ def _advice(
         base_run=first.run_name,
         base_reading=first.reading_number,
         base_label=first.label.value,
+        fitted=_fitted(scene),
         slow_roll_run=next((o.run_name for o in made.slow.values()), None),
         planes=planes,
-        left_out=tuple(LeftOut(p.number, _why_left(reused)) for p in left_out),
+        left_out=left_out,
         channels=channels,
         condition_number=condition(made),
         coefficients=_used(made),
@@ -235,8 +249,8 @@ def _advice(
         scatter_is_prior=_is_prior(made),
         permissible_gmm=tolerance.permissible_gmm if tolerance else None,
         tolerance_how=tolerance.how if tolerance else "",
-        warnings=_warnings(made, channels),
-        notes=_notes(made, reused),
+        warnings=_warnings(made, channels, within=bool(within)),
+        notes=(*within, *_notes(made, reused)),
     )
 
 
@@ -249,9 +263,61 @@ def _refuse_unknown(made: System, since: Unbalances, base_run: str) -> None:
         )
 
 
+def _left_out(
+    made: System, planes: tuple[WeightPlane, ...], asked: set[int], reused: ReusePool | None
+) -> tuple[LeftOut, ...]:
+    """Planes that are not corrected, with the unbalance that stays there where it can be told."""
+    stays = _unbalance_now(made) if planes else {}
+    return tuple(
+        LeftOut(
+            p.number,
+            _why_left(reused) if p.number in asked else "not asked for (--plane)",
+            stays.get(p.number),
+        )
+        for p in planes
+    )
+
+
 def _why_left(reused: ReusePool | None) -> str:
     asked = "history has none that may be used" if reused else "--reuse may know it"
     return f"no run tells the effect of its weights apart; {asked}"
+
+
+def _unbalance_now(made: System) -> dict[int, complex]:
+    """The unbalance of every plane with what is fitted now; empty where the planes cannot be told apart."""
+    scene, found = made.scene, made.found
+    numbers = [p.number for p in scene.planes]
+    if any(n in found.weak or not found.knows(n) for n in numbers):
+        return {}
+    try:
+        whole = system(scene, found, made.base, made.slow, scene.planes)
+    except Refusal:
+        return {}
+    since = weight_change(scene.weights_now(), next(iter(made.base.values())).weights)
+    now = [predict(scene, made.base[c], found, c, since)[0] for c in whole.channels]
+    return dict(zip(numbers, whole.unbalance(now), strict=True))
+
+
+def _fitted(scene: Scene) -> tuple[FittedPiece, ...]:
+    """All that is on the rotor now, plane by plane."""
+    mount, ends = scene.standing.mount, scene.standing.ends
+    held = [fitted_piece(e, mount, ends) for e in pieces_now(scene.story, mount)]
+    return tuple(sorted(held, key=lambda p: p.plane))
+
+
+def _already_within(planes: tuple[PlaneAdvice, ...], since: Unbalances) -> tuple[str, ...]:
+    """The first note, where what is there is within the tolerance of every plane; else nothing."""
+    shares = [p.share_gmm for p in planes]
+    if any(s is None or abs(p.add) > s for p, s in zip(planes, shares, strict=True)):
+        return ()
+    told = ", ".join(
+        f"{abs(p.add):.1f} of {s:.1f} g.mm in plane {p.plane}" for p, s in zip(planes, shares, strict=True)
+    )
+    sure = "" if not since else " by prediction, for the weights changed since"
+    worst = max((abs(p.add) / p.sd_gmm if p.sd_gmm > 0 else math.inf for p in planes), default=math.inf)
+    tell = "below" if worst <= 1.0 else "near" if worst <= NEAR_SD else ""
+    rest = f"; what is left is {tell} what these coefficients can tell" if tell else ""
+    return (f"Already in tolerance{sure} (residual {told}){rest}.",)
 
 
 def _with_pieces(since: Unbalances, planes: tuple[PlaneAdvice, ...]) -> Unbalances:
@@ -272,9 +338,11 @@ def _planes(
 ) -> tuple[PlaneAdvice, ...]:
     mount, ends = made.scene.standing.mount, made.scene.standing.ends
     pieces = {p.number: place(add[p.number], p, mount, ends, step_g) for p in made.planes}
-    chosen = np.array([sum((x.unbalance for x in pieces[p.number]), start=0j) for p in made.planes])
+    chosen = np.array([_sum(pieces[p.number]) for p in made.planes])
     left = made.unbalance(v + complex(dv) for v, dv in zip(now, made.A @ chosen, strict=True))
-    sds = _sd_of_add(made, add, since)
+    sds, fitted = _sd_of_add(made, add, since), _fitted(made.scene)
+    total = {p.number: weights_now.get(p.number, 0j) + add[p.number] for p in made.planes}
+    instead = {p.number: _instead(made.scene, p, total[p.number], step_g) for p in made.planes}
     return tuple(
         PlaneAdvice(
             plane=p.number,
@@ -283,9 +351,10 @@ def _planes(
             add=add[p.number],
             sd_gmm=sds[i],
             pieces=pieces[p.number],
-            instead=_instead(made.scene, p, weights_now.get(p.number, 0j) + add[p.number], step_g),
-            in_hole_g=_in_holes(made.scene, pieces[p.number]),
+            instead=instead[p.number],
+            there=tuple(f for f in fitted if any(f.in_place_of(x) for x in pieces[p.number])),
             left=left[i],
+            left_instead=_sum(instead[p.number]) - total[p.number] if instead[p.number] else None,
             share_gmm=tolerance.shares_gmm.get(p.number) if tolerance else None,
             force_n=force_n(abs(chosen[i]), top_speed_hz(made.scene)),
         )
@@ -315,13 +384,9 @@ def _instead(scene: Scene, plane: WeightPlane, total: complex, step_g: float) ->
     return place(total, plane, mount, scene.standing.ends, step_g)
 
 
-def _in_holes(scene: Scene, pieces: tuple[Piece, ...]) -> dict[int, float]:
-    held: dict[int, float] = {}
-    for event in pieces_now(scene.story, scene.standing.mount):
-        if any(p.plane == event.plane and p.hole == event.hole is not None for p in pieces):
-            hole = event.hole or 0
-            held[hole] = held.get(hole, 0.0) + (event.mass_g if event.act == "fitted" else 0.0)
-    return {h: m for h, m in held.items() if m > 0}
+def _sum(pieces: Iterable[Piece]) -> complex:
+    """g.mm against rotation from the rotor mark."""
+    return sum((p.unbalance for p in pieces), start=0j)
 
 
 def _outlooks(made: System, now: list[complex], total: Unbalances) -> tuple[ChannelOutlook, ...]:
@@ -363,7 +428,8 @@ def _origins_used(scene: Scene) -> set[Origin]:
     return {r.origin for r in scene.story.runs if r.name in names}
 
 
-def _warnings(made: System, channels: tuple[ChannelOutlook, ...]) -> tuple[str, ...]:
+def _warnings(made: System, channels: tuple[ChannelOutlook, ...], *, within: bool) -> tuple[str, ...]:
+    """``within``: what is there now is within the tolerance already, so a share of it says nothing."""
     found = ratio_warnings(made.found, [p.number for p in made.planes])
     number = condition(made)
     if number > WARN_CONDITION:
@@ -373,7 +439,7 @@ def _warnings(made: System, channels: tuple[ChannelOutlook, ...]) -> tuple[str, 
         )
     before = math.sqrt(sum(abs(c.now) ** 2 for c in channels))
     share = math.sqrt(sum(c.p90_pk**2 for c in channels)) / before if before > 0 else 0.0
-    if _reuses(made) and share > WARN_P90_SHARE:
+    if _reuses(made) and not within and share > WARN_P90_SHARE:
         found.append(
             f"One machine in ten may keep {100 * min(share, 9.99):.0f} % of its vibration or more with these "
             "pieces; a trial weight is the safer way."

@@ -11,23 +11,24 @@ from dataclasses import dataclass
 from typing import Any, Literal
 
 from config.errors import Refusal
-from store.balance.angles import piece_angle_deg, same_sense
+from store.balance.angles import same_sense
 from store.balance.fit import BALANCING, Observation, near, standing_of
 from store.balance.reuse import Candidate
 from store.balance.standing import Standing
 from store.balance.tolerance import tolerance_of
 from store.balance.weights import mount_of, pieces_at, pieces_now
-from store.casework_answers import Verdict, unbalance_dict, vector_dict
+from store.casework_answers import FittedPiece, Verdict, unbalance_dict, vector_dict
 from store.casework_scene import (
     Scene,
     build,
     default_speed_hz,
+    fitted_piece,
     history,
     slow_rolls,
     sources,
     weight_change,
 )
-from store.records import JobStory, Label, Mount, Reading, Run, Sense, Turn, WeightEvent
+from store.records import JobStory, Label, Reading, Run, Sense, Turn, flags_of
 
 Role = Literal["O", "O+T", "check", "trim", "slow-roll", "predicted"]
 
@@ -45,6 +46,7 @@ class PolarVector:
     lag_known: bool = True
     """False where the amplitude is below the noise floor."""
     flagged: bool = False
+    """A health flag of the reading concerns this channel."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -83,19 +85,6 @@ class PolarChannel:
     vectors: tuple[PolarVector, ...]
     effects: tuple[PolarEffect, ...]
     circle: ToleranceCircle | None
-
-
-@dataclass(frozen=True, slots=True)
-class FittedPiece:
-    plane: int
-    mass_g: float
-    radius_mm: float
-    own_radius: bool
-    """True where the radius is not the plane's."""
-    hole: int | None
-    angle_deg: float | None
-    """Against rotation from the rotor mark; None = the mark's position is not known."""
-    drilled: bool
 
 
 @dataclass(frozen=True, slots=True)
@@ -274,7 +263,8 @@ def _measured(scene: Scene, o: Observation, channel: str, number: int) -> PolarV
     reading = _reading_of(scene.story, o)
     vector = reading.vector(channel)
     known = vector is not None and abs(vector.value) > vector.noise_floor
-    return PolarVector(o.label.value, o.run_name, number, o.value, known, bool(reading.flags))
+    flagged = bool(flags_of(reading.flags, channel))
+    return PolarVector(o.label.value, o.run_name, number, o.value, known, flagged)
 
 
 def _predicted(verdicts: list[Verdict], o: Observation, channel: str) -> complex | None:
@@ -370,27 +360,10 @@ def _weights(scene: Scene, runs: list[Run]) -> tuple[FittedAt, ...]:
         mount = mount_of(story, run)
         label = next((r.label for r in run.readings if r.label in BALANCING), None)
         if label is not None and mount is not None:
-            pieces = tuple(_piece(e, mount, ends) for e in pieces_at(story, run))
+            pieces = tuple(fitted_piece(e, mount, ends) for e in pieces_at(story, run))
             found.append(FittedAt(label.value, run.name, pieces))
     mount = scene.standing.mount
-    now = tuple(_piece(e, mount, ends) for e in pieces_now(story, mount))
+    now = tuple(fitted_piece(e, mount, ends) for e in pieces_now(story, mount))
     if mount.ended_us is None and found and now != found[-1].pieces:
         found.append(FittedAt(None, None, now))
     return tuple(found)
-
-
-def _piece(event: WeightEvent, mount: Mount, ends: tuple[str, str]) -> FittedPiece:
-    plane = mount.machine.model.plane(event.plane)
-    try:
-        angle: float | None = piece_angle_deg(event, mount, ends)
-    except Refusal:
-        angle = None
-    return FittedPiece(
-        plane=event.plane,
-        mass_g=event.mass_g,
-        radius_mm=event.radius_mm,
-        own_radius=plane is None or plane.radius_mm != event.radius_mm,
-        hole=event.hole,
-        angle_deg=angle,
-        drilled=event.act == "drilled",
-    )

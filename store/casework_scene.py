@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from config.errors import Refusal
-from store.balance.angles import plane_of
+from store.balance.angles import piece_angle_deg, plane_of
 from store.balance.coefficients import planes_of, present_standing
 from store.balance.fit import (
     ChannelFit,
@@ -25,8 +25,8 @@ from store.balance.scatter import Scatter
 from store.balance.standing import Standing
 from store.balance.uncertainty import REFUSE_BELOW_RATIO, WARN_BELOW_RATIO
 from store.balance.weights import Unbalances, pieces_now, same_weights, unbalances
-from store.casework_answers import UsedCoefficient
-from store.records import JobStory, Label, Origin, Reading, Run, WeightPlane
+from store.casework_answers import FittedPiece, UsedCoefficient
+from store.records import JobStory, Label, Mount, Origin, Reading, Run, WeightEvent, WeightPlane
 
 BASES = frozenset({Label.O, Label.CHECK, Label.TRIM})
 """Readings a correction may start from; the newest is taken."""
@@ -131,6 +131,24 @@ def history(scene: Scene, candidates: Iterable[Candidate] | None) -> ReusePool |
     if candidates is None:
         return None
     return pool(candidates, scene.standing, speed_hz=scene.speed_hz, origins=scene.origins, not_job=scene.job)
+
+
+def fitted_piece(event: WeightEvent, mount: Mount, ends: tuple[str, str]) -> FittedPiece:
+    """What a weight event put on the rotor, and where."""
+    plane = mount.machine.model.plane(event.plane)
+    try:
+        angle: float | None = piece_angle_deg(event, mount, ends)
+    except Refusal:
+        angle = None
+    return FittedPiece(
+        plane=event.plane,
+        mass_g=event.mass_g,
+        radius_mm=event.radius_mm,
+        own_radius=plane is None or plane.radius_mm != event.radius_mm,
+        hole=event.hole,
+        angle_deg=angle,
+        drilled=event.act == "drilled",
+    )
 
 
 # --- base and slow roll --------------------------------------------------------------------------------

@@ -8,7 +8,7 @@ Base units: um, mm/s, m/s2 by the channel's kind; g.mm; Hz; degrees; microsecond
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
 from typing import Any, Literal
@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 Turn = Literal["clockwise", "counterclockwise"]
 Kind = Literal["displacement", "velocity", "acceleration"]
 Edge = Literal["falling", "rising"]
+MarkChange = Literal["moved", "mistyped"]
 
 
 class Origin(StrEnum):
@@ -188,6 +189,7 @@ class Mount:
     """The machine as its revision stood at the mount."""
     rotation: Sense
     marks: tuple[MarkPosition, ...]
+    """As known now: one that was mistyped is the one that a later mount told."""
     mark_how: str | None
     """How the mark's position was measured this time; None = not typed anew, so nothing is reused."""
     mark_width_deg: float | None
@@ -228,6 +230,8 @@ class WeightEvent:
     """For ``removed``: the event that fitted the piece now taken off."""
     at_us: int
     who: str
+    void: str | None = None
+    """Why the entry was taken out; None = it counts. Only lists that ask for them hold void entries."""
 
 
 # --- runs and readings -------------------------------------------------------------------------------
@@ -245,6 +249,11 @@ class Vector:
     cov: float
     noise_floor: float
     unit: str
+
+
+def flags_of(flags: Iterable[str], channel: str) -> tuple[str, ...]:
+    """Of a reading's health flags (``code``, or ``code:channel``) those that concern a channel."""
+    return tuple(f for f in flags if f.partition(":")[2] in ("", channel))
 
 
 @dataclass(frozen=True, slots=True)
@@ -340,6 +349,8 @@ class JobStory:
     weights: tuple[WeightEvent, ...]
     """In the order in which they were done: by run, then by entry."""
     set_ups: Mapping[UUID, SetUp]
+    machine_now: Machine | None = None
+    """The machine's newest revision, whose tolerance counts; None = as mounted."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -421,12 +432,14 @@ class PieceDraft:
 
 @dataclass(frozen=True, slots=True)
 class MachineDraft:
-    """``planes`` and ``first_critical_hz`` are the model's: empty/None = the model as it is known."""
+    """``planes`` and ``first_critical_hz`` are the model's. What is None or empty stays as it is known; a
+    new machine needs model, mass and speed, a new model its planes.
+    """
 
     serial: str
-    model_code: str
-    rotor_mass_kg: float
-    service_hz: float
+    model_code: str | None = None
+    rotor_mass_kg: float | None = None
+    service_hz: float | None = None
     grade_mm_s: float | None = None
     permissible_gmm: float | None = None
     bearing_loads_kg: tuple[float, ...] = ()
@@ -451,6 +464,8 @@ class MountDraft:
     """Balancing speeds; empty = the machine's service speed."""
     carry_over: bool = False
     """True: what was fitted in the job's previous mount is fitted still."""
+    mark_change: MarkChange | None = None
+    """Why the rotor mark's position is another one than at the job's mount before; None = it is asked."""
 
 
 @dataclass(frozen=True, slots=True)

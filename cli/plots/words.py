@@ -11,10 +11,9 @@ from itertools import groupby
 
 from cli.output import angle, clean
 from cli.plots.page import shorten, text_width, wrap
-from store.casework_answers import PlaneVerdict, Verdict
+from store.casework_answers import FittedPiece, PlaneVerdict, Verdict
 from store.casework_polar import (
     FittedAt,
-    FittedPiece,
     PolarEffect,
     PolarPicture,
     PolarVector,
@@ -190,6 +189,6 @@ def _plane(plane: PlaneVerdict) -> str:
     if plane.residual is None:
         return f"plane {plane.plane}: not judged, {clean(plane.why_not)}"
     share = "no tolerance on record" if plane.share_gmm is None else f"permissible {plane.share_gmm:.1f} g.mm"
-    left = f"residual {abs(plane.residual):.1f} g.mm at {angle(lag_deg(plane.residual))} deg"
+    left = f"residual {abs(plane.residual):.1f} g.mm, heavy spot {angle(lag_deg(plane.residual))} deg"
     said = {True: "in", False: "OUT", None: "not judged"}[plane.in_tolerance]
     return f"plane {plane.plane}: {left}, {share}: {said}"

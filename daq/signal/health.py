@@ -46,9 +46,23 @@ SENTENCES: dict[str, str] = {
     CLIPPED: "{channel} is clipped: its voltage reaches the end of the input's range.",
     FLAT: "{channel} is flat: its signal does not move at all.",
     GAP: "{channel} has its gap voltage outside the limits of the stand file.",
-    WEAK: "{channel} has a 1X that hardly stands above its noise.",
+    WEAK: "{channel}: its 1X is less than 3 times the noise of single samples (or the stand file's "
+    "min_signal_to_noise; marine practice 3:1); the averaged vector's own +- stands beside it.",
 }
 """Codes and what they mean."""
+SHORT: dict[str, str] = {
+    NO_PULSES: "no pulses",
+    LOST_PULSES: "no pulses",
+    MISSED: "missed",
+    DOUBLES: "doubles",
+    FEW_SAMPLES: "few",
+    SAMPLES_LOST: "lost",
+    CLIPPED: "clipped",
+    FLAT: "flat",
+    GAP: "gap V",
+    WEAK: "weak",
+}
+"""One word for a column of a table."""
 
 
 def flag(code: str, channel: str | None = None) -> str:
@@ -61,6 +75,12 @@ def sentence(flagged: str) -> str:
     code, _, channel = flagged.partition(":")
     text = SENTENCES.get(code, f"Flag {code} of {{channel}}." if channel else f"Flag {code}.")
     return text.format(channel=channel or "a probe")
+
+
+def short(flagged: str) -> str:
+    """A stored flag in a word; an unknown code is the word itself."""
+    code = flagged.partition(":")[0]
+    return SHORT.get(code, code)
 
 
 def describe(flags: Sequence[str]) -> tuple[str, ...]:

@@ -169,7 +169,11 @@ def test_one_plane_is_left_out_and_named(kit, truth, rotor):
 def test_a_plane_may_be_named(kit, truth):
     advice = correction_for(fan(kit, truth).story(), planes=(2,))
     assert [p.plane for p in advice.planes] == [2]
-    assert advice.left_out == ()
+    # the other one's unbalance stays: the correction that it is not given, turned by 180 deg
+    (left,) = advice.left_out
+    told = truth["correction_from_raw_vectors"][0]
+    assert (left.plane, left.why, told["plane"]) == (1, "not asked for (--plane)", 1)
+    assert left.stays == pytest.approx(-P(told["gmm"], told["deg_against_rotation"]), rel=1e-6)
     with pytest.raises(Refusal, match="no plane 7"):
         correction_for(fan(kit, truth).story(), planes=(7,))
 

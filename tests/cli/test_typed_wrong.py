@@ -164,7 +164,6 @@ def fails(
         # what is missing
         (("serve",), "'--stand'"),
         (("machine", "add"), "'SERIAL'"),
-        (ADD[:5], "'--mass'"),
         (("mount",), "A mount needs the machine, --job and --rotation (or --none)."),
         (MOUNT, "one of --clean, --fitted or --carry-over"),
         (("mark",), "Name the label: O, O+T, check, trim, slow-roll."),

@@ -82,7 +82,7 @@ def _residuals(planes: list[Json]) -> str:
                 verdict,
             )
         )
-    headers = ["plane", "residual g.mm", "+-", "heavy spot deg", "permissible g.mm", "tolerance"]
+    headers = ["plane", "residual g.mm", "+-", "heavy spot deg", "permissible", "tolerance"]
     return table(rows, headers, "rrrrrl")
 
 

@@ -17,6 +17,8 @@ ANSWERS: dict[str, Body] = {
     "--yes": {"confirmed": True},
     "--last": {"choose": "last"},
     "--next": {"choose": "next"},
+    "--mark-moved": {"mark_change": "moved"},
+    "--mark-mistyped": {"mark_change": "mistyped"},
 }
 """What each option says to the control channel."""
 
@@ -50,4 +52,5 @@ def _answer(question: NeedsAnswer) -> Body:
 PROMPTS = {
     "--locked-out": "Is the drive locked out, and have you seen the rotor at rest?",
     "--yes": "Go on all the same?",
+    "--mark-mistyped": "Was it mistyped before, and is it right now?",
 }

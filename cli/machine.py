@@ -7,7 +7,7 @@ from typing import Any
 import click
 
 from cli.client import Client, find, new_key
-from cli.output import clean, finite, json_option, operator_option, print_json, say, stand_option, table
+from cli.output import clean, finite, json_option, operator_option, print_json, say, stand_option, table, warn
 from cli.typed import Number, PlaneType, Quantity, Speed
 
 
@@ -18,10 +18,10 @@ def group() -> None: ...
 @group.command(context_settings={"max_content_width": 80})
 @click.argument("serial")
 @stand_option
-@click.option("--model", required=True, metavar="CODE", help="The maker's code of the model.")
-@click.option("--mass", required=True, type=Quantity("rotor mass", 1e-6), metavar="MASS",
+@click.option("--model", metavar="CODE", help="The maker's code of the model.")
+@click.option("--mass", type=Quantity("rotor mass", 1e-6), metavar="MASS",
               help="Rotor mass: 40kg.")  # fmt: skip
-@click.option("--speed", required=True, type=Speed(), metavar="SPEED", help="Service speed: 1500rpm.")
+@click.option("--speed", type=Speed(), metavar="SPEED", help="Service speed: 1500rpm.")
 @click.option("--grade", type=Number(), metavar="G", help="Balance grade of ISO 21940-11, such as 2.5.")
 @click.option("--permissible", type=Quantity("unbalance", 1e-6), metavar="UNBALANCE",
               help="Tolerance of the whole rotor: 300g.mm.")  # fmt: skip
@@ -36,7 +36,11 @@ def group() -> None: ...
 @operator_option
 @json_option
 def add(serial: str, stand: str | None, operator: str, *, as_json: bool, **told: Any) -> None:
-    """Add a machine, or revise what is known of it."""
+    """Add a machine, or revise what is known of it.
+
+    A new machine needs --model, --mass and --speed, a new model its planes. Of a known machine, what is
+    not typed stays as it is; a grade typed alone replaces a permissible figure.
+    """
     body = {
         "key": new_key(),
         "who": operator,
@@ -56,6 +60,8 @@ def add(serial: str, stand: str | None, operator: str, *, as_json: bool, **told:
         print_json(answer)
     else:
         say(*_described(answer))
+        for note in answer["notes"]:
+            warn(f"note: {clean(note)}")
 
 
 @group.command(name="list")

@@ -26,13 +26,18 @@ SEND_FOR_S, LOST_FOR_S = 3.0, 30.0
 @click.command(context_settings={"max_content_width": 80})
 @click.argument("label", type=click.Choice(LABELS), required=False)
 @stand_option
-@click.option("--last", is_flag=True, help="The newest run's reading is meant.")
+@click.option("--last", is_flag=True,
+              help="The reading of the job's newest run is meant: the one with the highest number, a run "
+                   "assigned later too.")  # fmt: skip
 @click.option("--next", is_flag=True, help="The next run is meant.")
+@click.option("--run", metavar="NAME", help="A reading of this run is meant, such as 0142/3, of any job.")
+@click.option("--reading", type=click.IntRange(1, 10**9), metavar="N",
+              help="Which of that run's readings; default: the newest that can take the label.")  # fmt: skip
 @click.option("--no-wait", is_flag=True, help="Come back at once; the mark stays pending.")
 @click.option("--wait", is_flag=True, help="Wait for the mark that is pending, or say how the newest ended.")
 @click.option("--cancel", is_flag=True, help="Cancel the mark that is pending.")
 @click.option("--timeout", metavar="SECONDS", type=Number(), help="Cancel when it takes longer than this.")
-@click.option("--yes", is_flag=True, help="The weights are as they are meant to be.")
+@click.option("--yes", is_flag=True, help="The weights, or another label than it has, are as meant.")
 @operator_option
 @json_option
 def command(
@@ -40,6 +45,8 @@ def command(
     stand: str | None,
     timeout: float | None,
     operator: str,
+    run: str | None,
+    reading: int | None,
     **flags: bool,
 ) -> int:
     """Label a run's reading: O, O+T, check, trim or slow-roll.
@@ -48,6 +55,7 @@ def command(
     next run's. Prints the vectors and the run's number.
     """
     _check_usage(label, flags)
+    _check_run(label, run, reading, flags)
     link = Link(stand)
     if flags["cancel"]:
         return _end(link.client.post("/v1/mark/cancel", {"key": new_key()}), flags)
@@ -56,8 +64,9 @@ def command(
     key = new_key()
     choose = "last" if flags["last"] else "next" if flags["next"] else None
     body = {"key": key, "label": label, "choose": choose, "confirmed": flags["yes"], "who": operator}
+    which: dict[str, Any] = {"run": run, "reading": reading} if run else {}
     try:
-        answer = post_or_ask(link.mark, body, as_json=flags["as_json"])
+        answer = post_or_ask(link.mark, {**body, **which}, as_json=flags["as_json"])
     except KeyboardInterrupt:
         return _cancel(link, key, flags)
     if flags["no_wait"] or answer["mark"]["state"] != "pending":
@@ -108,6 +117,13 @@ def _check_usage(label: str | None, flags: dict[str, bool]) -> None:
         raise click.UsageError("--last and --next exclude each other.")
     if flags["wait"] and flags["no_wait"]:
         raise click.UsageError("--wait and --no-wait exclude each other.")
+
+
+def _check_run(label: str | None, run: str | None, reading: int | None, flags: dict[str, bool]) -> None:
+    if reading is not None and not run:
+        raise click.UsageError("--reading needs its --run.")
+    if run and (label is None or flags["last"] or flags["next"]):
+        raise click.UsageError("--run takes a label, and neither --last nor --next.")
 
 
 def _wait(link: Link, key: str, timeout: float | None, flags: dict[str, bool]) -> int:

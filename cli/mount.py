@@ -7,6 +7,7 @@ from typing import Any
 
 import click
 
+from cli.asking import post_or_ask
 from cli.client import Client, find, new_key
 from cli.output import clean, json_option, operator_option, print_json, say, stand_option
 from cli.typed import PieceType, Quantity, RotorMarkType, SenseType, Speed
@@ -22,6 +23,9 @@ from cli.typed import PieceType, Quantity, RotorMarkType, SenseType, Speed
                    "are numbered; 7.5deg, or 1=7.5deg for plane 1.")  # fmt: skip
 @click.option("--mark-how", metavar="TEXT", help="How that was measured; without it nothing is reused.")
 @click.option("--mark-width", type=Quantity("angle"), metavar="ANGLE", help="Width of the rotor mark.")
+@click.option("--mark-moved", is_flag=True, help="The rotor mark is elsewhere than in this job's last mount.")
+@click.option("--mark-mistyped", is_flag=True,
+              help="Its place was mistyped in this job's last mount; that is put right.")  # fmt: skip
 @click.option("--support", default="", metavar="TEXT", help="What it stands on: rigid, soft, own base.")
 @click.option("--coupling", default="", metavar="TEXT", help="What drives it: solo, belt, coupled.")
 @click.option("--clean", "is_clean", is_flag=True, help="No balance weights are fitted.")
@@ -45,7 +49,9 @@ def command(machine: str | None, stand: str | None, operator: str, *, as_json: b
         print_json(answer) if as_json else say("Nothing is mounted now.")
         return
     _check_usage(machine, told)
-    answer = Client(find(stand)).post("/v1/mount", _body(str(machine), operator, told))
+    client = Client(find(stand))
+    body = _body(str(machine), operator, told)
+    answer = post_or_ask(lambda b: client.post("/v1/mount", b), body, as_json=as_json)
     print_json(answer) if as_json else say(*_described(answer, told))
 
 
@@ -54,6 +60,8 @@ def _check_usage(machine: str | None, told: Mapping[str, Any]) -> None:
         raise click.UsageError("A mount needs the machine, --job and --rotation (or --none).")
     if sum([told["is_clean"], bool(told["fitted"]), told["carry_over"]]) != 1:
         raise click.UsageError("Say what is fitted already: one of --clean, --fitted or --carry-over.")
+    if told["mark_moved"] and told["mark_mistyped"]:
+        raise click.UsageError("--mark-moved and --mark-mistyped exclude each other.")
 
 
 def _body(machine: str, operator: str, told: Mapping[str, Any]) -> dict[str, Any]:
@@ -70,6 +78,7 @@ def _body(machine: str, operator: str, told: Mapping[str, Any]) -> dict[str, Any
         "coupling": told["coupling"],
         "fitted": list(told["fitted"]),
         "carry_over": told["carry_over"],
+        "mark_change": "moved" if told["mark_moved"] else "mistyped" if told["mark_mistyped"] else None,
         "speeds_hz": list(told["speeds"]),
     }
 

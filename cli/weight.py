@@ -26,7 +26,7 @@ from cli.typed import Quantity
 Json = Mapping[str, Any]
 
 
-@click.group(help="Weights: advice, fitted, removed, drilled, listed.")
+@click.group(help="Weights: advice, fitted, removed, drilled, listed, voided.")
 def group() -> None: ...
 
 
@@ -139,11 +139,63 @@ def place(weight: Json) -> str:
     return f"plane {weight['plane']} {where}, {weight['mass_g']:g} g at {weight['radius_mm']:g} mm"
 
 
-@group.command(name="list")
+@group.command(context_settings={"max_content_width": 80})
+@click.argument("number", type=click.IntRange(1, 2**53))
+@click.argument("why")
 @stand_option
+@operator_option
 @json_option
-def list_(stand: str | None, *, as_json: bool) -> None:
+def void(number: int, why: str, stand: str | None, operator: str, *, as_json: bool) -> None:
+    """Take a wrong entry out, by its NUMBER in weight list --all, saying WHY.
+
+    It stays in the store. The removal of a voided piece goes with it. Type the right entry with --after.
+    """
+    body = {"key": new_key(), "who": operator, "number": number, "why": why}
+    answer = Client(find(stand)).post("/v1/weight/void", body)
+    if as_json:
+        print_json(answer)
+    else:
+        say(*(f"entry {w['number']} no longer counts: {w['act']}, {place(w)}" for w in answer["weights"]))
+
+
+@group.command(name="list", context_settings={"max_content_width": 80})
+@stand_option
+@click.option("--all", "every", is_flag=True, help="Every entry of the mount with its number, void ones too.")
+@click.option("--job", metavar="NUMBER", help="With --all: the entries of every mount of this job.")
+@json_option
+def list_(stand: str | None, job: str | None, *, every: bool, as_json: bool) -> None:
     """What is fitted on the mounted rotor now."""
+    if job and not every:
+        raise click.UsageError("--job goes with --all.")
+    if every:
+        _list_entries(stand, job, as_json=as_json)
+    else:
+        _list_fitted(stand, as_json=as_json)
+
+
+def _list_entries(stand: str | None, job: str | None, *, as_json: bool) -> None:
+    from cli.place import reading
+    from config.errors import Refusal
+    from store import consult
+
+    with reading(stand) as history:
+        current = history.current_mount()
+        if current is None and not job:
+            raise Refusal("Nothing is mounted.", "Name a job with --job.")
+        mounts = history.mounts(job) if job else (current,) if current else ()
+        entries = consult.weight_entries(history, mounts)
+    if as_json:
+        print_json(entries)
+        return
+    rows = [
+        (w["number"], w["act"], place(w), clean(w["after_run"] or "the mount"), clean(w["who"]),
+         clean(w["void"] or ""))
+        for w in entries
+    ]  # fmt: skip
+    say(table(rows, ["number", "act", "where", "after", "who", "void"], "rlllll"))
+
+
+def _list_fitted(stand: str | None, *, as_json: bool) -> None:
     from cli.place import reading
     from config.errors import Refusal
     from store import asjson

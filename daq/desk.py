@@ -22,6 +22,7 @@ from daq.requests import (
     UnmountAsked,
     VoidAsked,
     WeightAsked,
+    WeightVoidAsked,
 )
 from daq.writer import Writer
 from store import asjson, consult
@@ -115,7 +116,12 @@ class Desk:
             asked.first_critical_hz,
         )
         who = asked.who or peer
-        return self._once(asked, "machine", lambda led: asjson.machine_json(led.add_machine(draft, who)))
+
+        def act(ledger: Ledger) -> Json:
+            kept = ledger.add_machine(draft, who)
+            return {**asjson.machine_json(kept), "notes": consult.mounted_otherwise(self._history, kept)}
+
+        return self._once(asked, "machine", act)
 
     def mount(self, asked: MountAsked, peer: str) -> Json:
         self._check_end(asked.rotation.seen_from, "the direction of rotation")
@@ -131,6 +137,7 @@ class Desk:
             tuple(_piece(p) for p in asked.fitted),
             asked.speeds_hz,
             asked.carry_over,
+            asked.mark_change,
         )
 
         def act(ledger: Ledger) -> Json:
@@ -181,6 +188,15 @@ class Desk:
 
         return self._once(asked, "remove", act)
 
+    def void_weight(self, asked: WeightVoidAsked, peer: str) -> Json:
+        """Take a wrong entry out; nothing is touched on the rotor, so no lock-out is asked."""
+
+        def act(ledger: Ledger) -> Json:
+            gone = ledger.void_weight(asked.number, asked.why, asked.who or peer)
+            return {"weights": [asjson.weight_json(w) for w in gone]}
+
+        return self._once(asked, "void weight", act)
+
     def void(self, asked: VoidAsked, peer: str) -> Json:
         who = asked.who or peer
         return self._once(asked, "void", lambda led: asjson.run_json(led.void_run(asked.run, asked.why, who)))
@@ -195,6 +211,13 @@ class Desk:
         """The rotor mark's place by plane; one given for no plane in particular holds for all."""
         if not asked.marks:
             return ()
+        named = [m.plane for m in asked.marks]
+        twice = next((p for p in named if named.count(p) > 1), 0)
+        if twice != 0:
+            where = "for no plane in particular" if twice is None else f"for plane {twice}"
+            raise Refusal(
+                f"The rotor mark's position is given twice {where}.", "Give it once for each plane."
+            )
         planes = self._history.machine(asked.serial).model.planes
         for_all = {p.number: m.from_hole1_deg for m in asked.marks if m.plane is None for p in planes}
         by_plane = for_all | {m.plane: m.from_hole1_deg for m in asked.marks if m.plane is not None}
@@ -223,24 +246,27 @@ class Desk:
 
     def _check_loads(self, asked: MachineAsked) -> None:
         """Static loads of the bearings must be one for each plane and add up to the rotor's mass."""
-        loads = asked.bearing_loads_kg
-        planes = len(asked.planes) or self._planes_of(asked.model)
+        known = next((m for m in self._history.machines() if m.serial == asked.serial), None)
+        loads = asked.bearing_loads_kg or (known.bearing_loads_kg if known else ())
+        mass = asked.rotor_mass_kg or (known.rotor_mass_kg if known else 0.0)
+        code = asked.model or (known.model.code if known else "")
+        planes = len({p.number for p in asked.planes} | self._planes_of(code))
         if loads and planes and len(loads) != planes:
             raise Refusal(
-                f"{len(loads)} bearing load(s) for {planes} weight plane(s) of model {asked.model}.",
+                f"{len(loads)} bearing load(s) for {planes} weight plane(s) of model {code}.",
                 "Give --bearing-load once for each plane, in their order, or not at all.",
             )
-        if loads and abs(sum(loads) - asked.rotor_mass_kg) > LOADS_APART * asked.rotor_mass_kg:
+        if loads and mass and abs(sum(loads) - mass) > LOADS_APART * mass:
             raise Refusal(
-                f"The bearing loads add up to {sum(loads):g} kg, the rotor has {asked.rotor_mass_kg:g} kg.",
+                f"The bearing loads add up to {sum(loads):g} kg, the rotor has {mass:g} kg.",
                 "Correct one of them: the trial weight's size hangs on the loads.",
             )
 
-    def _planes_of(self, code: str) -> int:
+    def _planes_of(self, code: str) -> set[int]:
         try:
-            return len(self._history.model(code).planes)
+            return {p.number for p in self._history.model(code).planes}
         except Refusal:
-            return 0
+            return set()
 
     def _check_end(self, end: str, what: str) -> None:
         if end not in self._ends:

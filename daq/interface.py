@@ -42,6 +42,7 @@ def acts(
         Act("/v1/unmount", requests.UnmountAsked, desk.unmount),
         Act("/v1/weight", requests.WeightAsked, desk.weight),
         Act("/v1/weight/remove", requests.RemovalAsked, desk.remove),
+        Act("/v1/weight/void", requests.WeightVoidAsked, desk.void_weight),
         Act("/v1/run/void", requests.VoidAsked, desk.void),
         Act("/v1/run/assign", requests.AssignAsked, desk.assign),
         Act("/v1/mark", requests.MarkAsked, marks.ask),

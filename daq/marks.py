@@ -51,6 +51,10 @@ class MarkDesk:
         self._show = dict(show)
 
     def ask(self, asked: MarkAsked, peer: str) -> Json:
+        if asked.run is not None:
+            return self.answer(self._label_run(asked, asked.run, asked.who or peer))
+        if asked.reading is not None:
+            raise Refusal("A reading is named, but no run.", "Name its run too: --run.")
         live = self._board.read()
         from_sample = live.sample if live.may_be_turning else None
         mark = self._writer.ask(
@@ -69,6 +73,23 @@ class MarkDesk:
             self._analysis.want_fresh(from_sample)
         self._board.stir()
         return self.answer(mark)
+
+    def _label_run(self, asked: MarkAsked, run: str, who: str) -> Mark:
+        if asked.choose is not None:
+            raise Refusal("A run is named, and the last or next is chosen too.", "Say one of the two.")
+        mark = self._writer.ask(
+            lambda ledger: ledger.label_run(
+                asked.key,
+                run,
+                asked.reading,
+                Label(asked.label),
+                who,
+                confirmed=asked.confirmed,
+                slow_roll_limit_hz=self._slow_roll_limit_hz,
+            )
+        )
+        self._board.stir()
+        return mark
 
     def cancel(self, asked: CancelAsked, _peer: str) -> Json:
         key = asked.mark or self._pending().key

@@ -8,6 +8,7 @@ from pydantic import BaseModel, ConfigDict, Field
 
 Key = Annotated[str, Field(min_length=8, max_length=64, pattern=r"^[0-9A-Za-z_-]+$")]
 Name = Annotated[str, Field(min_length=1, max_length=64)]
+RunName = Annotated[str, Field(min_length=3, max_length=80)]
 Text = Annotated[str, Field(max_length=500)]
 Finite = Annotated[float, Field(allow_inf_nan=False, strict=True, ge=-1e9, le=1e9)]
 Positive = Annotated[float, Field(gt=0, allow_inf_nan=False, strict=True, le=1e9)]
@@ -41,10 +42,12 @@ class PlaneBody(BaseModel):
 
 
 class MachineAsked(Request):
+    """What is None or empty stays as it is known of the machine."""
+
     serial: Name
-    model: Name
-    rotor_mass_kg: Positive
-    service_hz: Positive
+    model: Name | None = None
+    rotor_mass_kg: Positive | None = None
+    service_hz: Positive | None = None
     grade_mm_s: Positive | None = None
     permissible_gmm: Positive | None = None
     bearing_loads_kg: tuple[Positive, ...] = ()
@@ -81,6 +84,8 @@ class MountAsked(Request):
     coupling: Text = ""
     fitted: tuple[PieceBody, ...] = ()
     carry_over: bool = False
+    mark_change: Literal["moved", "mistyped"] | None = None
+    """Why the rotor mark's position is another one than at the job's mount before; None = ask."""
     speeds_hz: tuple[Positive, ...] = ()
 
 
@@ -91,6 +96,10 @@ class UnmountAsked(Request):
 class MarkAsked(Request):
     label: Literal["O", "O+T", "check", "trim", "slow-roll"]
     choose: Literal["last", "next"] | None = None
+    run: RunName | None = None
+    """The run whose reading is meant, of any job."""
+    reading: Annotated[int, Field(ge=1, le=10**9)] | None = None
+    """Its number in that run; None = the newest that can take the label."""
     confirmed: bool = False
 
 
@@ -117,6 +126,12 @@ class RemovalAsked(Request):
     all: bool = False
     locked_out: bool = False
     after: Name | None = None
+
+
+class WeightVoidAsked(Request):
+    number: Annotated[int, Field(ge=1, le=2**53)]
+    """Of the entry, as ``weight list --all`` shows it."""
+    why: Annotated[str, Field(min_length=1, max_length=500)]
 
 
 class SimStartAsked(Request):

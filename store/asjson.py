@@ -139,6 +139,7 @@ def mount_json(mount: Mount, job_number: str | None = None) -> Json:
 def weight_json(event: WeightEvent) -> Json:
     return {
         "id": str(event.id),
+        "number": event.seq,
         "act": event.act,
         "plane": event.plane,
         "mass_g": event.mass_g,
@@ -149,6 +150,7 @@ def weight_json(event: WeightEvent) -> Json:
         "removes": str(event.removes_id) if event.removes_id else None,
         "at_utc": utc(event.at_us),
         "who": event.who,
+        "void": event.void,
     }
 
 

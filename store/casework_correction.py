@@ -31,12 +31,14 @@ from store.casework_scene import (
     base_of,
     fitted_piece,
     history,
+    judged_machine,
     left_notes,
     predict,
     ratio_warnings,
     scene_now,
     slow_rolls,
     sources,
+    turn_notes,
     unknown_effects,
     weight_change,
 )
@@ -224,7 +226,7 @@ def _advice(
     _refuse_unknown(made, since, first.run_name)
     now = [predict(scene, made.base[c], made.found, c, since)[0] for c in made.channels]
     add = {p.number: -u for p, u in zip(made.planes, made.unbalance(now), strict=True)}
-    tolerance = tolerance_of(scene.standing.mount.machine)
+    tolerance = tolerance_of(judged_machine(scene))
     planes = _planes(made, add, weights_now, since, now, tolerance, step_g)
     within = () if left_out else _already_within(planes, since)
     channels = _outlooks(made, now, _with_pieces(since, planes))
@@ -463,4 +465,4 @@ def _notes(made: System, reused: ReusePool | None) -> tuple[str, ...]:
     origins = sorted(o.value for o in _origins_used(made.scene))
     if origins != ["live"]:
         notes.append(f"From {' and '.join(origins)} runs.")
-    return tuple(notes + left_notes(made.scene))
+    return tuple(notes + turn_notes(made.scene, made.base) + left_notes(made.scene))

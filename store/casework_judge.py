@@ -28,6 +28,7 @@ from store.casework_scene import (
     Sources,
     base_or_none,
     history,
+    judged_machine,
     left_notes,
     predict,
     ratio_warnings,
@@ -69,8 +70,8 @@ def judge(
     coefficients whose newest run is older. Raises Refusal when the reading is not there or has no such label.
     """
     case = _case(story, reading_id, reuse, any_origin=any_origin)
-    tolerance = tolerance_of(case.scene.standing.mount.machine)
-    machine = case.scene.standing.mount.machine
+    machine = judged_machine(case.scene)
+    tolerance = tolerance_of(machine)
     channels = _channels(case)
     return Verdict(
         job_number=story.job.number,

@@ -24,6 +24,7 @@ from store.casework_scene import (
     default_speed_hz,
     fitted_piece,
     history,
+    judged_machine,
     slow_rolls,
     sources,
     weight_change,
@@ -298,7 +299,7 @@ def _circles(
     reuse: Iterable[Candidate] | None,
 ) -> dict[str, ToleranceCircle]:
     """One circle a channel for a single-plane machine with a tolerance and a known effect; else none."""
-    tolerance = tolerance_of(scene.standing.mount.machine)
+    tolerance = tolerance_of(judged_machine(scene))
     if tolerance is None or len(scene.planes) != 1:
         return {}
     plane = scene.planes[0].number

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from config.errors import Refusal
-from store.balance.angles import piece_angle_deg, plane_of
+from store.balance.angles import frame_turn_deg, piece_angle_deg, plane_of
 from store.balance.coefficients import planes_of, present_standing
 from store.balance.fit import (
     ChannelFit,
@@ -26,7 +26,7 @@ from store.balance.standing import Standing
 from store.balance.uncertainty import REFUSE_BELOW_RATIO, WARN_BELOW_RATIO
 from store.balance.weights import Unbalances, pieces_now, same_weights, unbalances
 from store.casework_answers import FittedPiece, UsedCoefficient
-from store.records import JobStory, Label, Mount, Origin, Reading, Run, WeightEvent, WeightPlane
+from store.records import JobStory, Label, Machine, Mount, Origin, Reading, Run, WeightEvent, WeightPlane
 
 BASES = frozenset({Label.O, Label.CHECK, Label.TRIM})
 """Readings a correction may start from; the newest is taken."""
@@ -131,6 +131,28 @@ def history(scene: Scene, candidates: Iterable[Candidate] | None) -> ReusePool |
     if candidates is None:
         return None
     return pool(candidates, scene.standing, speed_hz=scene.speed_hz, origins=scene.origins, not_job=scene.job)
+
+
+def judged_machine(scene: Scene) -> Machine:
+    """The mounted machine with its newest revision's tolerance; the geometry stays the mount's."""
+    mounted, now = scene.standing.mount.machine, scene.story.machine_now
+    if now is None or now.serial != mounted.serial:
+        return mounted
+    return replace(now, model=mounted.model)
+
+
+def turn_notes(scene: Scene, base: Mapping[str, Observation]) -> list[str]:
+    """A sentence when the base reading is of an earlier mount and was turned for a moved rotor mark."""
+    name = next((o.run_name for o in base.values()), "")
+    run = next((r for r in scene.story.runs if r.name == name), None)
+    then = None if run is None else standing_of(scene.story, run)
+    if then is None or then.mount.id == scene.standing.mount.id:
+        return []
+    turned = frame_turn_deg(then.mount, scene.standing.mount, scene.standing.ends)
+    if not turned:
+        return []
+    what = f"its vectors and weights were turned by {turned:+.4g} deg in the sense of lag"
+    return [f"Run {name} is of an earlier mount: {what}, because the rotor mark was moved since."]
 
 
 def fitted_piece(event: WeightEvent, mount: Mount, ends: tuple[str, str]) -> FittedPiece:

@@ -5,7 +5,7 @@ The daemon (verdict of a mark) and the command line (correction, advice, job) bo
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from contextlib import suppress
 from typing import Any
 from uuid import UUID
@@ -15,7 +15,7 @@ from store import asjson, casework
 from store.balance.reuse import Candidate
 from store.casework_answers import CorrectionAdvice, ForceAdvice, TrialAdvice, Verdict
 from store.history import History
-from store.records import JobStory, Label, PieceDraft, Run
+from store.records import JobStory, Label, Machine, Mount, PieceDraft, Run
 
 Json = dict[str, Any]
 JUDGED = (Label.CHECK, Label.TRIM)
@@ -52,6 +52,22 @@ def force(history: History, piece: PieceDraft) -> ForceAdvice | None:
     return casework.fit_force(mount, piece, (*job.speeds_hz, mount.machine.service_hz))
 
 
+def mounted_otherwise(history: History, machine: Machine) -> list[str]:
+    """A sentence when the machine just entered stands mounted as an earlier revision; else nothing."""
+    mount = history.current_mount()
+    if mount is None or mount.machine.serial != machine.serial:
+        return []
+    then, model = mount.machine, mount.machine.model
+    if then.revision != machine.revision:
+        what = f"its revision {then.revision}"
+    elif model.id != machine.model.id:
+        what = f"revision {model.revision} of model {model.code}"
+    else:
+        return []
+    at_once = "its tolerance and vibration limit count at once"
+    return [f"{machine.serial} is mounted as {what}; mount it again for the new one ({at_once})."]
+
+
 def verdict(history: History, job: str, reading_id: UUID) -> Verdict:
     """How a check or trim reading stands, by what was known before its run."""
     story = history.job_story(job)
@@ -75,6 +91,18 @@ def _judged(story: JobStory) -> Iterator[tuple[Run, UUID]]:
         for reading in reversed(run.readings):
             if reading.label in JUDGED:
                 yield run, reading.id
+
+
+def weight_entries(history: History, mounts: Iterable[Mount]) -> list[Json]:
+    """Every weight entry of some mounts, void ones too, each with the run after which it was done."""
+    found: list[Json] = []
+    for mount in mounts:
+        story = history.job_story(history.job_of(mount.id).number, with_void=True)
+        names = {run.id: run.name for run in story.runs}
+        for event in history.weight_events(mount.id, with_void=True):
+            after = None if event.after_run_id is None else names.get(event.after_run_id, "a run moved away")
+            found.append({**asjson.weight_json(event), "after_run": after})
+    return found
 
 
 def job_json(history: History, number: str) -> Json:

@@ -166,10 +166,10 @@ class History:
         with self._read() as c:
             return recall.still_there(recall.weight_events(c, [mount_id]))
 
-    def weight_events(self, mount_id: UUID) -> tuple[WeightEvent, ...]:
-        """Every act of the mount, in the order in which it was done."""
+    def weight_events(self, mount_id: UUID, *, with_void: bool = False) -> tuple[WeightEvent, ...]:
+        """Every act of the mount that counts (or every one), in the order in which it was done."""
         with self._read() as c:
-            return recall.weight_events(c, [mount_id])
+            return recall.weight_events(c, [mount_id], with_void=with_void)
 
     # --- marks
 

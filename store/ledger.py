@@ -204,7 +204,8 @@ class Ledger:
         """What stands on the stand from now on; ends the mount before and opens the job when it is new.
 
         A rotor mark's position not typed for a plane with holes is taken from the machine's mount before,
-        and ``mark_how`` is then None. What was drilled in the job's mount before stays drilled.
+        and ``mark_how`` is then None. What was drilled in the job's mount before stays drilled. Another
+        position than at the job's mount before: NeedsAnswer, until ``mark_change`` says why.
         """
         with self._write() as w:
             return ledger_rotor.begin_mount(w, draft, _who(who))
@@ -244,6 +245,12 @@ class Ledger:
             return ledger_weights.remove(
                 w, plane, _who(who), after_run, hole=hole, angle_deg=angle_deg, every=every
             )
+
+    def void_weight(self, number: int, why: str, who: str) -> tuple[WeightEvent, ...]:
+        """The entry of that number (``seq``) does not count, nor the removal of its piece; both stay."""
+        with self._write() as w:
+            ledger_rotor.refuse_while_pending(w, "voided")
+            return ledger_weights.void(w, number, why, _who(who))
 
     # --- marks
 
@@ -289,6 +296,22 @@ class Ledger:
         question = Question(key, label, _who(who), confirmed=confirmed, slow_roll_limit_hz=slow_roll_limit_hz)
         with self._write() as w:
             return ledger_marks.label_one(w, question, reading_id)
+
+    def label_run(
+        self,
+        key: str,
+        run: str,
+        number: int | None,
+        label: Label,
+        who: str,
+        *,
+        confirmed: bool = False,
+        slow_roll_limit_hz: float | None = None,
+    ) -> Mark:
+        """Label a reading of a run of any job; ``number`` None = the newest that can take the label."""
+        question = Question(key, label, _who(who), confirmed=confirmed, slow_roll_limit_hz=slow_roll_limit_hz)
+        with self._write() as w:
+            return ledger_marks.label_named(w, question, run, number)
 
     # --- runs and readings
 

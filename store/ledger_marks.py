@@ -58,7 +58,7 @@ def ask(w: Writer, q: Question) -> Mark:
     of = recall.job_by_id(w.c, current.job_id)
     if q.choose == "last":
         return _label_last(w, q, of, current)
-    _question_weights(w, q, of, current, None)
+    _ask_person(q, [_odd_weights(w, q, of, current, None)])
     if q.choose is None and q.from_sample is None:
         _refuse_to_choose(w, q, of, current)
     _add_mark(w, q, current)
@@ -84,10 +84,30 @@ def label_one(w: Writer, q: Question, reading_id: UUID) -> Mark:
     if why_not:
         raise Refusal(f"Reading {found.number} of run {run.name} {why_not}.", "Mark one at that speed.")
     at = recall.mount_by_id(w.c, run.mount_id)
-    _question_weights(w, q, of, at, run)
+    _ask_person(q, [_relabels(q, run, found), _odd_weights(w, q, of, at, run)])
     _add_mark(w, q, at)
     _put_label(w, q.key, run, found)
     return _mark(w, q.key)
+
+
+def label_named(w: Writer, q: Question, name: str, number: int | None) -> Mark:
+    """Label a reading of the run of that name; ``number`` None = its newest that can take the label."""
+    known = _known(w, q)
+    if known is not None:
+        return known
+    run = recall_runs.run_named(w.c, name)
+    if run.job_number is None or not run.readings:
+        lacks = "no readings" if run.job_number is not None else "no job"
+        raise Refusal(
+            f"Run {run.name} has {lacks}, so nothing of it can be marked.", "See `revmark run show`."
+        )
+    if number is None:
+        return label_one(w, q, _newest_fitting(q, run, recall.job_named(w.c, run.job_number)).id)
+    found = next((r for r in run.readings if r.number == number), None)
+    if found is None:
+        there = ", ".join(str(r.number) for r in run.readings)
+        raise Refusal(f"Run {run.name} has no reading {number}.", f"Its readings: {there}.")
+    return label_one(w, q, found.id)
 
 
 def _known(w: Writer, q: Question) -> Mark | None:
@@ -125,28 +145,46 @@ def _add_mark(w: Writer, q: Question, at: Mount) -> None:
 # --- what only a person can answer -------------------------------------------------------------------
 
 
-def _question_weights(w: Writer, q: Question, of: Job, at: Mount, run: Run | None) -> None:
-    """O with other weights than listed at the mount, O+T with the same as at O: asked, unless confirmed.
+Doubt = tuple[str, str] | None
+"""Cause and remedy of a question that --yes answers."""
+
+
+def _ask_person(q: Question, doubts: Sequence[Doubt]) -> None:
+    """All doubts in one question, so that one --yes is said with every one of them seen."""
+    open_ = [d for d in doubts if d is not None]
+    if open_ and not q.confirmed:
+        causes, remedies = zip(*open_, strict=True)
+        raise NeedsAnswer(" ".join(causes), " ".join(remedies), options=("--yes",))
+
+
+def _relabels(q: Question, run: Run, found: Reading) -> Doubt:
+    """A reading that has another label; the old one stays in the store behind the new."""
+    if found.label is None or found.label is q.label:
+        return None
+    return (
+        f"Reading {found.number} of run {run.name} is labelled {found.label}; it would become {q.label}.",
+        "If that is meant, say --yes.",
+    )
+
+
+def _odd_weights(w: Writer, q: Question, of: Job, at: Mount, run: Run | None) -> Doubt:
+    """O with other weights than listed at the mount, O+T with the same as at O.
 
     ``run``: the run that is to be labelled; None = the next one, with the weights of now.
     """
     if q.confirmed or q.label not in (Label.O, Label.O_T):
-        return
+        return None
     story = recall_runs.story(w.c, of.number, labelled_only=True)
     here = pieces_now(story, at) if run is None else pieces_at(story, run)
     if q.label is Label.O and not same_weights(here, pieces_listed(story, at)):
-        raise NeedsAnswer(
-            "The weights on the rotor differ from those listed when it was mounted, "
-            "so this would be no O run.",
-            "If it is to be O all the same, say --yes.",
-            options=("--yes",),
-        )
+        changed = "The weights on the rotor differ from those listed when it was mounted"
+        return f"{changed}, so this would be no O run.", "If it is to be O all the same, say --yes."
     if q.label is Label.O_T and _same_as_at_o(story, here):
-        raise NeedsAnswer(
+        return (
             "The weights on the rotor are those of the O run, so there is no trial weight.",
             "Enter it with `revmark weight fit`, or say --yes.",
-            options=("--yes",),
         )
+    return None
 
 
 def _same_as_at_o(story: JobStory, here: Sequence[WeightEvent]) -> bool:
@@ -182,11 +220,15 @@ def _label_last(w: Writer, q: Question, of: Job, at: Mount) -> Mark:
     run = recall_runs.newest_run_of_job(w.c, of.id)
     if run is None or run.mount_id != at.id or not run.readings:
         raise Refusal(f"Job {of.number} has no run with readings in this mount.", "Mark the next: --next.")
+    return label_one(w, q, _newest_fitting(q, run, of).id)
+
+
+def _newest_fitting(q: Question, run: Run, of: Job) -> Reading:
     fitting = [r for r in run.readings if not unfit(q.label, r.speed_hz, of, q.slow_roll_limit_hz)]
     if not fitting:
         why_not = unfit(q.label, run.readings[-1].speed_hz, of, q.slow_roll_limit_hz)
         raise Refusal(f"No reading of run {run.name} fits {q.label}: the newest {why_not}.", "Run it again.")
-    return label_one(w, q, fitting[-1].id)
+    return fitting[-1]
 
 
 # --- ending ------------------------------------------------------------------------------------------

@@ -5,15 +5,16 @@ from __future__ import annotations
 import hashlib
 import json
 import math
+from collections.abc import Mapping
 from dataclasses import asdict, replace
 from typing import Any
 from uuid import UUID
 
 from sqlalchemy import func, select
 
-from config.errors import Refusal
-from store import ledger_weights, recall, recall_runs
-from store.balance.angles import sign_of
+from config.errors import NeedsAnswer, Refusal
+from store import ledger_coefficients, ledger_weights, recall, recall_runs
+from store.balance.angles import MARK_AGREEMENT_DEG, difference_deg, mark_shifts_deg, sign_of
 from store.names import NAME_LENGTH, check_finite, check_name, check_positive, check_text
 from store.records import (
     Job,
@@ -34,6 +35,7 @@ from store.tables import (
     model,
     mount,
     mount_mark,
+    mount_mark_revision,
     set_up,
     set_up_channel,
     weight_plane,
@@ -42,6 +44,8 @@ from store.writer import Writer
 
 _SAME_SPEED = 1e-6
 """Relative: a speed typed again is the speed already there."""
+MOST_PLANES = 2
+"""The holes' split, the verdict's shares and the plots are proven for one and two planes."""
 
 
 # --- the stand ---------------------------------------------------------------------------------------
@@ -90,14 +94,21 @@ def _new_set_up(w: Writer, draft: SetUpDraft, digest: str) -> UUID:
 
 
 def keep_machine(w: Writer, draft: MachineDraft, who: str) -> Machine:
-    """A new machine, a new revision of a known one, or (nothing differs) the one that is there."""
-    _check_machine(draft)
-    of = _keep_model(w, draft, who)
+    """A new machine, a new revision of a known one, or (nothing differs) the one that is there.
+
+    What is not typed stays as it is known; a grade typed without a figure replaces the figure, which
+    would override it.
+    """
+    check_name("The machine's name", draft.serial)
     known = w.c.execute(
         select(machine).where(machine.c.serial == draft.serial).order_by(machine.c.revision.desc())
     ).first()
+    before = None if known is None else recall.newest_machine(w.c, draft.serial)
+    draft = _filled(draft, before)
+    _check_machine(draft)
+    of = _keep_model(w, draft, who)
     values = _machine_values(draft)
-    same = known is not None and recall.model_by_id(w.c, known.model_id).code == of.code
+    same = before is not None and before.model.code == of.code
     if known is None or not same or any(getattr(known, k) != v for k, v in values.items()):
         w.add(
             machine,
@@ -109,6 +120,25 @@ def keep_machine(w: Writer, draft: MachineDraft, who: str) -> Machine:
             **values,
         )
     return recall.newest_machine(w.c, draft.serial)
+
+
+def _filled(draft: MachineDraft, known: Machine | None) -> MachineDraft:
+    """The draft with what was not typed taken from the machine as it is known."""
+    if known is None:
+        return draft
+    permissible = known.permissible_gmm if draft.grade_mm_s is None else None
+    return replace(
+        draft,
+        model_code=known.model.code if draft.model_code is None else draft.model_code,
+        rotor_mass_kg=known.rotor_mass_kg if draft.rotor_mass_kg is None else draft.rotor_mass_kg,
+        service_hz=known.service_hz if draft.service_hz is None else draft.service_hz,
+        grade_mm_s=known.grade_mm_s if draft.grade_mm_s is None else draft.grade_mm_s,
+        permissible_gmm=permissible if draft.permissible_gmm is None else draft.permissible_gmm,
+        bearing_loads_kg=draft.bearing_loads_kg or known.bearing_loads_kg,
+        vibration_limit_um_pk=known.vibration_limit_um_pk
+        if draft.vibration_limit_um_pk is None
+        else draft.vibration_limit_um_pk,
+    )
 
 
 def _machine_values(draft: MachineDraft) -> dict[str, Any]:
@@ -124,7 +154,12 @@ def _machine_values(draft: MachineDraft) -> dict[str, Any]:
 
 
 def _check_machine(draft: MachineDraft) -> None:
-    check_name("The machine's name", draft.serial)
+    if draft.model_code is None or draft.rotor_mass_kg is None or draft.service_hz is None:
+        raise Refusal(
+            f"Machine {draft.serial!r} is not known yet, and its model, rotor mass or service speed is not "
+            "given.",
+            "Give all three (--model, --mass, --speed); a known machine keeps what is not typed.",
+        )
     check_name("The model's name", draft.model_code)
     check_positive("The rotor mass (kg)", draft.rotor_mass_kg)
     check_positive("The service speed (Hz)", draft.service_hz)
@@ -163,19 +198,35 @@ def _check_plane(plane: WeightPlane) -> None:
 
 
 def _keep_model(w: Writer, draft: MachineDraft, who: str) -> Model:
-    known = recall.newest_model(w.c, draft.model_code)
+    code = str(draft.model_code)
+    known = recall.newest_model(w.c, code)
     if known is None and not draft.planes:
         raise Refusal(
-            f"Model {draft.model_code!r} is not known yet, and no plane is given.",
+            f"Model {code!r} is not known yet, and no plane is given.",
             "Give its planes: radius, number of holes and how they are numbered.",
         )
-    planes = tuple(sorted(draft.planes, key=lambda p: p.number)) or (known.planes if known else ())
+    planes = _merged(known.planes if known else (), draft.planes)
+    if len(planes) > MOST_PLANES:
+        raise Refusal(
+            f"Model {code!r} would have {len(planes)} weight planes; for now revmark balances in one or two.",
+            "Give the one or two planes that are used.",
+        )
     critical = draft.first_critical_hz
     if critical is None and known is not None:
         critical = known.first_critical_hz
     if known is not None and (known.planes, known.first_critical_hz) == (planes, critical):
         return known
-    return _new_model(w, draft.model_code, known.revision + 1 if known else 1, planes, critical, who)
+    return _new_model(w, code, known.revision + 1 if known else 1, planes, critical, who)
+
+
+def _merged(known: tuple[WeightPlane, ...], typed: tuple[WeightPlane, ...]) -> tuple[WeightPlane, ...]:
+    """The planes typed in the place of those of their number; the others, and a position not typed, stay."""
+    planes = {p.number: p for p in known}
+    for plane in typed:
+        old = planes.get(plane.number)
+        kept = old.position_mm if old is not None and plane.position_mm is None else plane.position_mm
+        planes[plane.number] = replace(plane, position_mm=kept)
+    return tuple(planes[n] for n in sorted(planes))
 
 
 def _new_model(
@@ -216,7 +267,8 @@ def begin_mount(w: Writer, draft: MountDraft, who: str) -> Mount:
     """A new mount; it ends the one before. Opens the job when its number is new.
 
     Raises Refusal: unknown machine, job of another machine, mark position not known, unknown end,
-    a mark pending, a piece that cannot be where it is said to be.
+    a mark pending, a piece that cannot be where it is said to be; NeedsAnswer: another mark position than
+    at the job's mount before, and not said why.
     """
     refuse_while_pending(w, "mounted")
     of = recall.newest_machine(w.c, draft.serial)
@@ -245,9 +297,77 @@ def begin_mount(w: Writer, draft: MountDraft, who: str) -> Mount:
         [{"mount_id": mount_id, "plane": m.plane, "from_hole1_deg": m.from_hole1_deg} for m in marks],
     )
     begun = recall.mount_by_id(w.c, mount_id)
-    earlier = before if before is not None and before.job_id == into.id else None
+    _heed_mark_change(w, draft, begun, who)
+    earlier = None
+    if before is not None and before.job_id == into.id:
+        earlier = recall.mount_by_id(w.c, before.id)  # with the mark's place as it is known now
     ledger_weights.list_at_mount(w, begun, draft.fitted, earlier, carry_over=draft.carry_over, who=who)
     return begun
+
+
+def _heed_mark_change(w: Writer, draft: MountDraft, begun: Mount, who: str) -> None:
+    """Another mark position than at the job's mount before: moved, or mistyped before (then put right).
+
+    The mounts before it with that same position get the new one by rows of ``mount_mark_revision``.
+    """
+    stands, mounts = recall.newest_set_up(w.c), recall.mounts_of_job(w.c, begun.job_id)[:-1]
+    if stands is None or not mounts:
+        return
+    last = mounts[-1]
+    shifts = mark_shifts_deg(last, begun, stands.ends)
+    if not any(abs(s) > MARK_AGREEMENT_DEG for s in shifts.values()):
+        return
+    first = next(iter(shifts.values()))
+    as_one = all(abs(difference_deg(s, first)) <= MARK_AGREEMENT_DEG for s in shifts.values())
+    if draft.mark_change is None or (draft.mark_change == "moved" and not as_one):
+        raise _which_change(last, begun, shifts, as_one=as_one)
+    if draft.mark_change == "mistyped":
+        _put_marks_right(w, mounts, begun, tuple(shifts), who)
+
+
+def _which_change(last: Mount, begun: Mount, shifts: Mapping[int, float], *, as_one: bool) -> NeedsAnswer:
+    told = [
+        f"{f'Plane {plane}' if not i else f'plane {plane}'}'s rotor mark was {was.from_hole1_deg:g} deg from "
+        f"hole 1, now {now.from_hole1_deg:g}"
+        for i, plane in enumerate(sorted(shifts))
+        if (was := last.mark_of(plane)) is not None and (now := begun.mark_of(plane)) is not None
+    ]
+    if as_one:
+        return NeedsAnswer(
+            f"{', '.join(told)}: was the mark moved, or mistyped before?",
+            "Say --mark-moved (earlier runs are turned by it), or --mark-mistyped (the job's earlier mount "
+            "is put right).",
+            options=("--mark-moved", "--mark-mistyped"),
+        )
+    return NeedsAnswer(
+        f"{', '.join(told)}: one mark moves all planes alike, so it can only have been mistyped.",
+        "Say --mark-mistyped if the earlier mount was wrong; if the mark was moved, measure it in every "
+        "plane and mount again.",
+        options=("--mark-mistyped",),
+    )
+
+
+def _put_marks_right(
+    w: Writer, mounts: tuple[Mount, ...], begun: Mount, planes: tuple[int, ...], who: str
+) -> None:
+    wrong = mounts[-1]
+    for earlier in reversed(mounts):
+        if any(earlier.mark_of(p) != wrong.mark_of(p) for p in planes):
+            break  # the mark was moved in between: that position is another one's
+        rows = [
+            {
+                "mount_id": earlier.id,
+                "plane": m.plane,
+                "from_hole1_deg": m.from_hole1_deg,
+                "told_by_id": begun.id,
+                "at_us": w.now_us(),
+                "who": who,
+            }
+            for m in begun.marks
+            if m.plane in planes
+        ]
+        w.add_all(mount_mark_revision, rows)
+    ledger_coefficients.rebuild(w, begun.job_id)
 
 
 def end_mount(w: Writer, who: str) -> Mount | None:
@@ -289,9 +409,7 @@ def _marks(
 
 
 def _check_mount(w: Writer, draft: MountDraft, of: Machine, marks: tuple[MarkPosition, ...]) -> None:
-    check_name("The job's number", draft.job_number)
-    if draft.job_number == "U":
-        raise Refusal("U is kept for unassigned runs.", "Use the shop's number of the job.")
+    _check_job_number(draft.job_number)
     stands = recall.newest_set_up(w.c)
     if stands is None:
         raise Refusal("The stand's set-up is not stored yet.", "Start `revmark serve` with the stand file.")
@@ -317,6 +435,17 @@ def _check_mount(w: Writer, draft: MountDraft, of: Machine, marks: tuple[MarkPos
         check_text("How the rotor mark was measured:", draft.mark_how)
     for speed in draft.speeds_hz:
         check_positive("The balancing speed (Hz)", speed)
+
+
+def _check_job_number(number: str) -> None:
+    check_name("The job's number", number)
+    if number == "U":
+        raise Refusal("U is kept for unassigned runs.", "Use the shop's number of the job.")
+    if "/" in number:
+        raise Refusal(
+            f"The job's number {number!r} holds a '/', which stands before a run's number.",
+            "Write it with another sign, such as '-'.",
+        )
 
 
 def _job_of(w: Writer, draft: MountDraft, of: Machine, who: str) -> Job:

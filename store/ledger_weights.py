@@ -11,10 +11,10 @@ from sqlalchemy import select
 
 from config.errors import Refusal
 from store import ledger_coefficients, recall, recall_runs
-from store.balance.angles import difference_deg, frame_turn_deg, plane_of, same_sense, wrap_deg
-from store.names import check_finite, check_positive
-from store.records import Mount, PieceDraft, WeightAct, WeightEvent
-from store.tables import run_now, weight
+from store.balance.angles import Ends, difference_deg, frame_turn_deg, plane_of, same_sense, wrap_deg
+from store.names import check_finite, check_positive, check_text
+from store.records import Mount, PieceDraft, WeightAct, WeightEvent, WeightPlane
+from store.tables import run_now, weight, weight_void
 from store.writer import Writer
 
 AT_MOUNT = "mount"
@@ -64,6 +64,31 @@ def remove(
     return _events(w, at, ids)
 
 
+def void(w: Writer, number: int, why: str, who: str) -> tuple[WeightEvent, ...]:
+    """Take an entry out, with the removal of the piece that it fitted; both stay in the store.
+
+    ``number`` is its ``seq``. Raises Refusal: no such entry, void already, no reason.
+    """
+    why = check_text("The reason", why)
+    if not why:
+        raise Refusal("A void needs a reason.", "Say why the entry does not count.")
+    mount_id = w.c.execute(select(weight.c.mount_id).where(weight.c.seq == number)).scalar()
+    if mount_id is None:
+        raise Refusal(
+            f"There is no weight entry {number}.", "`revmark weight list --all` shows the entries' numbers."
+        )
+    events = recall.weight_events(w.c, [mount_id], with_void=True)
+    entry = next(e for e in events if e.seq == number)
+    if entry.void is not None:
+        raise Refusal(f"Weight entry {number} is void already ({entry.void}).", "Nothing to do.")
+    gone = [e for e in events if e.void is None and entry.id in (e.id, e.removes_id)]
+    for event in gone:
+        w.add(weight_void, weight_id=event.id, why=why, at_us=w.now_us(), who=who)
+    ledger_coefficients.rebuild(w, recall.mount_by_id(w.c, mount_id).job_id)
+    ids = {e.id for e in gone}
+    return tuple(e for e in recall.weight_events(w.c, [mount_id], with_void=True) if e.id in ids)
+
+
 def list_at_mount(
     w: Writer,
     begun: Mount,
@@ -86,9 +111,37 @@ def list_at_mount(
     if earlier is not None:
         for old in recall.still_there(recall.weight_events(w.c, [earlier.id])):
             if carry_over or old.act == "drilled":
+                _refuse_changed_plane(w, old, earlier, begun)
                 piece = _carried(w, old, earlier, begun)
                 rows.append(_row(w, w.ids.new(), begun, piece, act=old.act, who=who))
     w.add_all(weight, [{**row, "after_run_id": None, "at_mount": 1} for row in rows])
+
+
+def _refuse_changed_plane(w: Writer, old: WeightEvent, then: Mount, now: Mount) -> None:
+    """A piece is at its hole and radius as they were; where these were revised it would be moved silently."""
+    stands = recall.newest_set_up(w.c)
+    assert stands is not None  # a mount is refused without one
+    was, plane = plane_of(then, old.plane), plane_of(now, old.plane)
+    changed = _plane_changes(was, plane, stands.ends)
+    if changed:
+        raise Refusal(
+            f"The pieces in plane {plane.number} of {now.machine.serial} cannot be carried over: since its "
+            f"last mount {' and '.join(changed)}.",
+            "List what is fitted as it is counted now (--fitted), or open another job."
+            if old.act == "fitted"
+            else "What was drilled stays drilled: open another job, with the rotor as it is for its start.",
+        )
+
+
+def _plane_changes(was: WeightPlane, now: WeightPlane, ends: Ends) -> list[str]:
+    changed: list[str] = []
+    if not math.isclose(was.radius_mm, now.radius_mm, rel_tol=1e-9):
+        changed.append(f"its radius changed from {was.radius_mm:g} to {now.radius_mm:g} mm")
+    if was.holes != now.holes:
+        changed.append(f"its holes changed from {was.holes} to {now.holes}")
+    if not same_sense(was.numbering, now.numbering, ends):
+        changed.append(f"its numbering changed from {was.numbering} to {now.numbering}")
+    return changed
 
 
 def _carried(w: Writer, old: WeightEvent, then: Mount, now: Mount) -> PieceDraft:

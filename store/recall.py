@@ -31,12 +31,13 @@ from store.tables import (
     job_speed,
     machine,
     model,
-    mount_mark,
+    mount_mark_now,
     mount_now,
     set_up,
     set_up_channel,
     weight,
     weight_plane,
+    weight_void,
 )
 from store.tables import run as run_table
 
@@ -265,7 +266,7 @@ def last_mount_of(c: Connection, serial: str) -> Mount | None:
 
 def _mount(c: Connection, row: Row[Any]) -> Mount:
     marks = c.execute(
-        select(mount_mark).where(mount_mark.c.mount_id == row.id).order_by(mount_mark.c.plane)
+        select(mount_mark_now).where(mount_mark_now.c.mount_id == row.id).order_by(mount_mark_now.c.plane)
     ).all()
     who = c.execute(select(machine).where(machine.c.id == row.machine_id)).one()
     return Mount(
@@ -287,22 +288,28 @@ def _mount(c: Connection, row: Row[Any]) -> Mount:
 # --- weights -----------------------------------------------------------------------------------------
 
 
-def weight_events(c: Connection, mount_ids: Iterable[UUID]) -> tuple[WeightEvent, ...]:
-    """All acts of some mounts, in the order in which they were done: by mount, run, entry."""
-    return tuple(event for event, _ in anchored_events(c, mount_ids))
+def weight_events(
+    c: Connection, mount_ids: Iterable[UUID], *, with_void: bool = False
+) -> tuple[WeightEvent, ...]:
+    """The acts of some mounts that count, in the order in which they were done: by mount, run, entry."""
+    events = anchored_events(c, mount_ids, with_void=with_void)
+    return tuple(event for event, _ in events)
 
 
-def anchored_events(c: Connection, mount_ids: Iterable[UUID]) -> tuple[tuple[WeightEvent, int], ...]:
+def anchored_events(
+    c: Connection, mount_ids: Iterable[UUID], *, with_void: bool = False
+) -> tuple[tuple[WeightEvent, int], ...]:
     """The same with the place of the run after which each was done (0 = before the mount's first run)."""
     anchor = func.coalesce(run_table.c.seq, 0)
     rows = c.execute(
-        select(weight, anchor.label("anchor"))
+        select(weight, anchor.label("anchor"), weight_void.c.why.label("void"))
         .join(mount_now, mount_now.c.id == weight.c.mount_id)
         .join(run_table, run_table.c.id == weight.c.after_run_id, isouter=True)
+        .join(weight_void, weight_void.c.weight_id == weight.c.id, isouter=True)
         .where(weight.c.mount_id.in_(list(mount_ids)))
         .order_by(mount_now.c.seq, anchor, weight.c.at_mount.desc(), weight.c.seq)
     )
-    return tuple((_weight(r), r.anchor) for r in rows)
+    return tuple((_weight(r), r.anchor) for r in rows if with_void or r.void is None)
 
 
 def _weight(row: Row[Any]) -> WeightEvent:
@@ -321,6 +328,7 @@ def _weight(row: Row[Any]) -> WeightEvent:
         removes_id=row.removes_id,
         at_us=row.at_us,
         who=row.who,
+        void=row.void,
     )
 
 

@@ -104,13 +104,16 @@ def open_run(c: Connection) -> Run | None:
 
 
 def newest_run_of_job(c: Connection, job_id: UUID) -> Run | None:
-    """The newest run of a job that counts (not void), with readings."""
+    """The run with the job's highest number that counts (not void), with readings.
+
+    By number and not by time: a run given to the job later is its newest, whenever it was recorded.
+    """
     row = c.execute(
         _select_runs()
         .where(
             run_now.c.id.in_(runs_of_job_ids(job_id)), run_now.c.job_id == job_id, run_now.c.void.is_(None)
         )
-        .order_by(run_now.c.seq.desc())
+        .order_by(run_now.c.number.desc())
         .limit(1)
     ).first()
     return None if row is None else _run(row, _readings_by_run(c, [row.id])[row.id])
@@ -306,6 +309,7 @@ def story(
         runs=runs,
         weights=_placed([e for e in events if cut is None or e[1] < cut.seq], rows),
         set_ups={i: recall.set_up_by_id(c, i) for i in dict.fromkeys(r.set_up_id for r in rows)},
+        machine_now=recall.newest_machine(c, of.machine_serial),
     )
 
 

@@ -183,6 +183,20 @@ mount_mark = Table(
     real("from_hole1_deg"),
 )
 
+# a position that was mistyped at a mount, as a later mount told it
+mount_mark_revision = Table(
+    "mount_mark_revision",
+    metadata,
+    seq(),
+    ref("mount_id", "mount.id"),
+    whole("plane"),
+    real("from_hole1_deg"),
+    ref("told_by_id", "mount.id"),
+    whole("at_us"),
+    text("who"),
+    Index("ix_mount_mark_revision_mount_id_plane", "mount_id", "plane"),
+)
+
 weight = Table(
     "weight",
     metadata,
@@ -200,11 +214,21 @@ weight = Table(
     ref("removes_id", "weight.id", optional=True),
     whole("at_us"),
     text("who"),
-    UniqueConstraint("removes_id"),
     Index("ix_weight_mount_id", "mount_id"),
     CheckConstraint("act IN ('fitted', 'removed', 'drilled')", name="act"),
     CheckConstraint("(act = 'removed') = (removes_id IS NOT NULL)", name="removes"),
     CheckConstraint("mass_g > 0", name="mass"),
+)
+
+weight_void = Table(
+    "weight_void",
+    metadata,
+    seq(),
+    ref("weight_id", "weight.id"),
+    text("why"),
+    whole("at_us"),
+    text("who"),
+    UniqueConstraint("weight_id"),
 )
 
 # --- runs and readings -------------------------------------------------------------------------------
@@ -532,6 +556,15 @@ mount_now = Table(
     views,
     *(Column(c.name, c.type) for c in mount.columns),
     whole("ended_us"),
+)
+
+mount_mark_now = Table(
+    "mount_mark_now",
+    views,
+    Column("mount_id", Uuid16),
+    whole("plane"),
+    real("from_hole1_deg"),
+    real("typed_from_hole1_deg"),
 )
 
 mark_now = Table(

@@ -162,6 +162,20 @@ def frame_turn_deg(then: Mount, now: Mount, ends: Ends) -> float | None:
     return turns[0]
 
 
+def mark_shifts_deg(then: Mount, now: Mount, ends: Ends) -> dict[int, float]:
+    """By plane, how far the rotor mark's typed place moved on the rotor, against ``now``'s rotation.
+
+    Only planes that both mounts name and that are numbered the same way. One mark moves all planes alike.
+    """
+    shifts: dict[int, float] = {}
+    for mark in now.marks:
+        old, plane, was = then.mark_of(mark.plane), plane_of(now, mark.plane), plane_of(then, mark.plane)
+        if old is not None and same_sense(was.numbering, plane.numbering, ends):
+            moved = difference_deg(mark.from_hole1_deg, old.from_hole1_deg)
+            shifts[mark.plane] = _against(plane, now, moved, ends)
+    return shifts
+
+
 def _mark_against(mount: Mount, plane_number: int, ends: Ends) -> float:
     """Angle of the rotor mark against rotation from hole 1 of a plane."""
     plane = plane_of(mount, plane_number)

@@ -50,7 +50,7 @@ def types(monkeypatch: pytest.MonkeyPatch) -> Callable[..., None]:
     return typed
 
 
-@pytest.mark.parametrize("option", ["--locked-out", "--yes"])
+@pytest.mark.parametrize("option", ["--locked-out", "--yes", "--mark-mistyped"])
 def test_yes_posts_the_same_again_with_the_answer(types: Callable[..., None], option: str) -> None:
     desk = Desk((option,))
     types("y")
@@ -107,7 +107,7 @@ def test_with_json_or_without_a_terminal_nothing_is_asked(
 
 
 def test_every_option_that_answers_alone_has_its_question() -> None:
-    assert set(PROMPTS) == {"--locked-out", "--yes"}
+    assert set(PROMPTS) == {"--locked-out", "--yes", "--mark-mistyped"}
     assert all(text.endswith("?") for text in PROMPTS.values())
 
 

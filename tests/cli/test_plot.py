@@ -369,7 +369,7 @@ def test_a_prediction_turns_with_the_frame_of_its_reading(stand: Any) -> None:
     """Mounted again with the mark 30 deg further against rotation: every angle is 30 deg less."""
     two_plane_job(stand)
     before = vector_of(picture(stand), "predicted")
-    stand.mount(marks=(MarkPosition(1, 60.0),), carry_over=True)
+    stand.mount(marks=(MarkPosition(1, 60.0),), carry_over=True, mark_change="moved")
     stand.run(Label.O, **both(phasor(9, 21), phasor(8, 171)))
     after = picture(stand)
     assert vector_of(after, "check") == pytest.approx(phasor(9, 21), rel=1e-9)

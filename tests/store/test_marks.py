@@ -323,7 +323,7 @@ def test_last_without_a_fitting_reading(stand: Stand, speed_hz: float | None, sa
 def test_later_label_replaces_and_both_stay(stand: Stand) -> None:
     stand.mount()
     _, found = stand.run(Label.CHECK)
-    stand.ledger.label_reading("again", found.id, Label.TRIM, "rui")
+    stand.ledger.label_reading("again", found.id, Label.TRIM, "rui", confirmed=True)
     again = stand.history.reading(found.id)
     assert (again.label, again.labelled_by) == (Label.TRIM, "rui")
     assert stand.history.counts()["label"] == 2

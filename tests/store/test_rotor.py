@@ -241,7 +241,8 @@ def test_angle_is_counted_from_the_new_rotor_mark(stand: Stand) -> None:
     numbering, so it now lies 90 deg from the mark: hand calculation.
     """
     _worked_on(stand)
-    stand.mount(carry_over=True, marks=(MarkPosition(1, 40.0), MarkPosition(2, 10.0)))
+    marks = (MarkPosition(1, 40.0), MarkPosition(2, 10.0))
+    stand.mount(carry_over=True, marks=marks, mark_change="moved")
     assert _pieces(stand)[1][4] == pytest.approx(90.0)
 
 

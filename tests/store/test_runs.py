@@ -168,9 +168,10 @@ def test_names_of_no_run(refusing: Stand, name: str) -> None:
 
 
 def test_job_number_with_a_slash(stand: Stand) -> None:
-    stand.mount(job_number="26/0142")
-    assert stand.run(None)[0].name == "26/0142/1"
-    assert stand.history.run("26/0142/1").job_number == "26/0142"
+    """It would read like the name of a run."""
+    with pytest.raises(Refusal, match="'26/0142' holds a '/'"):
+        stand.mount(job_number="26/0142")
+    assert stand.history.jobs() == ()
 
 
 def test_recover(stand: Stand) -> None:

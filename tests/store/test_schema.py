@@ -15,7 +15,7 @@ from store_kit import Stand, samples
 from store import tables
 from store.database import reader_engine, writer_engine
 from store.migrations import KNOWN, configuration, statements
-from store.records import Label
+from store.records import Label, MarkPosition, PieceDraft
 
 
 def test_tables_are_what_the_migrations_make(store_path: Path) -> None:
@@ -57,6 +57,9 @@ def _fill(stand: Stand) -> None:
     stand.ledger.age_raw(0, at_most=1)
     stand.ledger.note_event("clock_step", "0.7 s")
     stand.ledger.once("request-1", "weight", {"mass_g": 3.0}, lambda: {"done": True})
+    (wrong,) = stand.ledger.fit(PieceDraft(1, 9.0, 2), "ana")
+    stand.ledger.void_weight(wrong.seq, "it went into hole 3", "ana")
+    stand.mount(marks=(MarkPosition(1, 40.0),), mark_change="mistyped")
 
 
 def test_source_tables_refuse_change(stand: Stand) -> None:
@@ -140,6 +143,11 @@ def test_views_for_other_programs(stand: Stand) -> None:
     vectors = """SELECT v.re_base_unit_pk, v.im_base_unit_pk, v.base_unit FROM v_vector v
         JOIN v_reading USING (reading_id) WHERE label = 'O+T' AND channel = 'probe 1' AND harmonic = 1"""
     assert other.execute(vectors).fetchall() == [(4.0, 3.0, "um")]
-    weights = "SELECT act, plane, mass_g, radius_mm, hole, angle_against_rotation_deg FROM v_weight"
-    assert other.execute(weights).fetchall() == [("fitted", 1, 3.0, 140.0, 16, None)]
+    weights = "SELECT act, plane, mass_g, radius_mm, hole, angle_against_rotation_deg, void FROM v_weight"
+    assert other.execute(weights).fetchall() == [
+        ("fitted", 1, 3.0, 140.0, 16, None, None),
+        ("fitted", 1, 9.0, 140.0, 2, None, "it went into hole 3"),
+    ]
+    marks = "SELECT plane, mark_from_hole1_deg, mark_typed_from_hole1_deg FROM v_mount ORDER BY mounted_us"
+    assert other.execute(marks).fetchall() == [(1, 40.0, 30.0), (1, 40.0, 40.0)]
     other.close()

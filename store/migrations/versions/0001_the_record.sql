@@ -351,7 +351,6 @@ CREATE TABLE weight (
     at_us INTEGER NOT NULL,
     who TEXT NOT NULL,
     PRIMARY KEY (seq),
-    CONSTRAINT uq_weight_removes_id UNIQUE (removes_id),
     CONSTRAINT ck_weight_act CHECK (act IN ('fitted', 'removed', 'drilled')),
     CONSTRAINT ck_weight_removes CHECK ((act = 'removed') = (removes_id IS NOT NULL)),
     CONSTRAINT ck_weight_mass CHECK (mass_g > 0),
@@ -361,6 +360,31 @@ CREATE TABLE weight (
     FOREIGN KEY(removes_id) REFERENCES weight (id)
 );
 CREATE INDEX ix_weight_mount_id ON weight (mount_id);
+
+CREATE TABLE weight_void (
+    seq INTEGER NOT NULL,
+    weight_id BLOB NOT NULL,
+    why TEXT NOT NULL,
+    at_us INTEGER NOT NULL,
+    who TEXT NOT NULL,
+    PRIMARY KEY (seq),
+    CONSTRAINT uq_weight_void_weight_id UNIQUE (weight_id),
+    FOREIGN KEY(weight_id) REFERENCES weight (id)
+);
+
+CREATE TABLE mount_mark_revision (
+    seq INTEGER NOT NULL,
+    mount_id BLOB NOT NULL,
+    plane INTEGER NOT NULL,
+    from_hole1_deg REAL NOT NULL,
+    told_by_id BLOB NOT NULL,
+    at_us INTEGER NOT NULL,
+    who TEXT NOT NULL,
+    PRIMARY KEY (seq),
+    FOREIGN KEY(mount_id) REFERENCES mount (id),
+    FOREIGN KEY(told_by_id) REFERENCES mount (id)
+);
+CREATE INDEX ix_mount_mark_revision_mount_id_plane ON mount_mark_revision (mount_id, plane);
 
 CREATE TABLE label (
     seq INTEGER NOT NULL,
@@ -482,6 +506,14 @@ CREATE TRIGGER weight_no_update BEFORE UPDATE ON weight
 BEGIN SELECT RAISE(ABORT, 'weight is append-only'); END;
 CREATE TRIGGER weight_no_delete BEFORE DELETE ON weight
 BEGIN SELECT RAISE(ABORT, 'weight is append-only'); END;
+CREATE TRIGGER weight_void_no_update BEFORE UPDATE ON weight_void
+BEGIN SELECT RAISE(ABORT, 'weight_void is append-only'); END;
+CREATE TRIGGER weight_void_no_delete BEFORE DELETE ON weight_void
+BEGIN SELECT RAISE(ABORT, 'weight_void is append-only'); END;
+CREATE TRIGGER mount_mark_revision_no_update BEFORE UPDATE ON mount_mark_revision
+BEGIN SELECT RAISE(ABORT, 'mount_mark_revision is append-only'); END;
+CREATE TRIGGER mount_mark_revision_no_delete BEFORE DELETE ON mount_mark_revision
+BEGIN SELECT RAISE(ABORT, 'mount_mark_revision is append-only'); END;
 CREATE TRIGGER run_no_update BEFORE UPDATE ON run
 BEGIN SELECT RAISE(ABORT, 'run is append-only'); END;
 CREATE TRIGGER run_no_delete BEFORE DELETE ON run
@@ -576,6 +608,12 @@ SELECT mount.*, (SELECT at_us FROM mount AS later WHERE later.seq > mount.seq OR
     AS ended_us
 FROM mount;
 
+CREATE VIEW mount_mark_now AS
+SELECT k.mount_id, k.plane, coalesce(r.from_hole1_deg, k.from_hole1_deg) AS from_hole1_deg,
+    k.from_hole1_deg AS typed_from_hole1_deg
+FROM mount_mark k LEFT JOIN mount_mark_revision r ON r.seq =
+    (SELECT max(seq) FROM mount_mark_revision WHERE mount_id = k.mount_id AND plane = k.plane);
+
 CREATE VIEW mark_now AS
 SELECT mark.*, coalesce(e.state, 'pending') AS state, coalesce(e.detail, '') AS detail,
     e.run_id, e.reading_id
@@ -602,10 +640,10 @@ FROM job LEFT JOIN job_speed ON job_speed.job_id = job.id;
 
 CREATE VIEW v_mount AS
 SELECT lower(hex(m.id)) AS mount_id, job.number AS job, machine.serial AS machine, m.rotation_turn,
-    m.rotation_seen_from, k.plane, k.from_hole1_deg AS mark_from_hole1_deg, m.mark_how, m.mark_width_deg,
-    m.support, m.coupling, m.at_us AS mounted_us, m.ended_us, m.who
+    m.rotation_seen_from, k.plane, k.from_hole1_deg AS mark_from_hole1_deg,
+    k.typed_from_hole1_deg AS mark_typed_from_hole1_deg, m.mark_how, m.mark_width_deg, m.support, m.coupling, m.at_us AS mounted_us, m.ended_us, m.who
 FROM mount_now m LEFT JOIN job ON job.id = m.job_id LEFT JOIN machine ON machine.id = m.machine_id
-LEFT JOIN mount_mark k ON k.mount_id = m.id;
+LEFT JOIN mount_mark_now k ON k.mount_id = m.id;
 
 CREATE VIEW v_set_up AS
 SELECT lower(hex(s.id)) AS set_up_id, s.stand, s.revision, s.angles_seen_from, s.zero, s.pulse_name,
@@ -645,9 +683,9 @@ CREATE VIEW v_weight AS
 SELECT w.seq, lower(hex(w.id)) AS weight_id, lower(hex(w.mount_id)) AS mount_id, job.number AS job,
     machine.serial AS machine, lower(hex(w.after_run_id)) AS after_run_id, w.at_mount, w.act, w.plane, w.mass_g,
     w.radius_mm, w.hole, w.angle_deg AS angle_against_rotation_deg, lower(hex(w.removes_id)) AS removes_id,
-    w.at_us, w.who
+    w.at_us, w.who, x.why AS void
 FROM weight w JOIN mount m ON m.id = w.mount_id JOIN job ON job.id = m.job_id
-JOIN machine ON machine.id = m.machine_id;
+JOIN machine ON machine.id = m.machine_id LEFT JOIN weight_void x ON x.weight_id = w.id;
 
 CREATE VIEW v_coefficient AS
 SELECT model_code AS model, machine_serial AS machine, job_number AS job, plane, channel, speed_hz,

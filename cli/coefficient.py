@@ -51,5 +51,5 @@ def list_(
          f"{100 * c['se_pk_per_gmm'] / c['amplitude_pk_per_gmm']:.1f}")
         for c in found
     ]  # fmt: skip
-    headers = ["model", "machine", "job", "plane", "channel", "r/min", "effect", "unit", "lag deg", "+- %"]
+    headers = ["model", "machine", "job", "plane", "channel", "r/min", "effect", "unit", "lag", "+- %"]
     say(table(rows, headers, "lllrlrrlrr"))

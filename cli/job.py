@@ -73,7 +73,6 @@ def show(job: str, stand: str | None, *, as_json: bool) -> None:
     how = manner(stand)
     say(*_lines(told, how.show, how.zone))
     if told["verdict"]:
-        say("")
         print_verdict(told["verdict"], how.show)
 
 

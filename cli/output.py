@@ -57,11 +57,12 @@ def print_json(answer: object) -> None:
 
 def table(rows: Iterable[Sequence[object]], headers: Sequence[str], right: str = "") -> str:
     """A plain table. ``right`` holds one letter a column: ``r`` right-aligned, anything else left."""
-    from tabulate import tabulate
+    import tabulate
 
+    tabulate.MIN_PADDING = 0  # else every heading is two columns wider than its text
     align = ["right" if letter == "r" else "left" for letter in right.ljust(len(headers))]
     cells = [[clean(cell) for cell in row] for row in rows]
-    return tabulate(
+    return tabulate.tabulate(
         cells, [clean(h) for h in headers], tablefmt="simple", disable_numparse=True, colalign=align
     )
 

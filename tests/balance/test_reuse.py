@@ -281,6 +281,19 @@ def test_predicted_residual_of_a_one_plane_shot(kit, rotor):
     assert channel.p90_pk / 28 == pytest.approx(0.51, abs=0.01)  # REUSE (b): p90 .51 for 20 %/15 deg
 
 
+@pytest.mark.parametrize(("grade", "warned"), [(0.16, True), (6.3, False)])
+def test_the_share_that_may_stay_is_no_warning_once_in_tolerance(kit, rotor, grade, warned):
+    """1 um at 0.02 um per g.mm is 50 g.mm; permissible 40 kg x G / 250.67 1/s: 25.5 or 1005 g.mm. p90 is
+    above 2.146 x 0.5 um of scatter, so above 60 % of 1 um (Rayleigh, as above)."""
+    machine = kit.machine("F-211", model=kit.model(planes=1), grade_mm_s=grade)
+    book = kit.Book(machine=machine, number="0150", set_up=kit.set_up(99, probes=1))
+    book.mount()
+    book.run(Label.O, 1 + 0j)
+    advice = correction_for(book.story(), reuse=made(kit, rotor, [0.02 + 0j]))
+    assert any("may keep" in w for w in advice.warnings) == warned
+    assert advice.notes[0].startswith("Already in tolerance (residual 50.0 of 1005.3 g.mm") != warned
+
+
 def test_own_runs_go_before_history_plane_by_plane(kit, rotor):
     old = candidates(source_job(kit, rotor))
     book = new_job(kit, rotor)

@@ -104,6 +104,21 @@ def test_no_tolerance_on_record(kit, truth):
     assert any("No tolerance is on record" in n for n in verdict.notes)
 
 
+def test_the_newest_revision_of_the_machine_has_the_tolerance(kit, truth):
+    """9549 G m/n = 9549 x 2.5 x 40 / 2393.7 = 398.9 g.mm (ISO 21940-11's own form, from memory)."""
+    book = fan(kit, truth, grade_mm_s=None)
+    reading = book.runs[-1].readings[0].id
+    now = kit.machine(grade_mm_s=2.5, vibration_limit_um_pk=1.0, revision=2, model=kit.model(planes=1))
+    verdict = judge(replace(book.story(), machine_now=now), reading)
+    assert verdict.permissible_gmm == pytest.approx(398.9, abs=0.1)
+    assert [p.plane for p in verdict.planes] == [1, 2]  # the geometry stays the mount's
+    assert [p.share_gmm for p in verdict.planes] == pytest.approx([199.45, 199.45], abs=0.1)
+    assert verdict.vibration.limit_um_pk == 1.0
+    assert correction_for(replace(book.story(), machine_now=now)).permissible_gmm == verdict.permissible_gmm
+    other = replace(now, serial="F-999")  # another machine's is never taken
+    assert judge(replace(book.story(), machine_now=other), reading).permissible_gmm is None
+
+
 def test_vibration_limit_is_judged_apart(kit, truth):
     verdict = check_of(fan(kit, truth, vibration_limit_um_pk=1.0))
     assert verdict.in_tolerance is True

@@ -14,7 +14,16 @@ from store_kit import FakeClock, Stand
 from config.errors import NeedsAnswer, Refusal
 from daq.board import Board, StandState
 from daq.desk import Desk
-from daq.requests import MachineAsked, MountAsked, PieceBody, RemovalAsked, SenseBody, WeightAsked
+from daq.requests import (
+    MachineAsked,
+    MarkPositionBody,
+    MountAsked,
+    PieceBody,
+    RemovalAsked,
+    SenseBody,
+    WeightAsked,
+    WeightVoidAsked,
+)
 from store.database import create_store
 
 
@@ -134,3 +143,63 @@ def test_bearing_loads_must_fit_the_rotor(desk, loads, words):
     )  # fmt: skip
     with pytest.raises(Refusal, match=words):
         desk.add_machine(asked, "ana")
+
+
+def mount(*marks, **other):
+    return MountAsked(
+        key="key-00000001", serial="F-204", job="0142",
+        rotation=SenseBody(turn="counterclockwise", seen_from="drive"), mark_how="degree wheel",
+        marks=tuple(MarkPositionBody(plane=plane, from_hole1_deg=at) for plane, at in marks), **other,
+    )  # fmt: skip
+
+
+def test_another_mark_position_is_asked_and_answered_under_the_same_key(desk, stand):
+    with pytest.raises(NeedsAnswer, match=r"was 30 deg from hole 1, now 67\.5: was the mark moved") as raised:
+        desk.mount(mount((1, 67.5)), "ana")
+    assert raised.value.options == ("--mark-moved", "--mark-mistyped")
+    told = desk.mount(mount((1, 67.5), mark_change="mistyped"), "ana")
+    assert told["marks"] == [{"plane": 1, "from_hole1_deg": 67.5}]
+    assert [m.marks[0].from_hole1_deg for m in stand.history.mounts("0142")] == [67.5, 67.5]
+
+
+@pytest.mark.parametrize("marks", [((1, 30.0), (1, 30.0)), ((None, 30.0), (None, 40.0))])
+def test_a_mark_position_given_twice_is_refused(desk, marks):
+    with pytest.raises(Refusal, match="given twice"):
+        desk.mount(mount(*marks), "ana")
+
+
+def test_one_plane_may_differ_from_what_holds_for_all(desk):
+    told = desk.mount(mount((None, 30.0), (2, 45.0)), "ana")
+    assert [m["from_hole1_deg"] for m in told["marks"]] == [30.0, 45.0]
+
+
+def test_a_void_entry_needs_no_lock_out_and_may_be_retried(desk, stand, board):
+    told = desk.weight(weight(), "ana")
+    board.post(state=StandState.TURNING, speed_hz=25.0)
+    asked = WeightVoidAsked(key="key-00000002", number=told["weights"][0]["number"], why="wrong hole")
+    gone = desk.void_weight(asked, "rui")
+    assert [(w["act"], w["void"]) for w in gone["weights"]] == [("fitted", "wrong hole")]
+    assert desk.void_weight(asked, "rui") == gone
+    assert stand.history.weights(stand.history.current_mount().id) == ()
+
+
+def test_revising_a_mounted_machine_says_how_it_is_mounted(desk):
+    told = desk.add_machine(MachineAsked(key="key-00000001", serial="F-204", grade_mm_s=6.3), "ana")
+    (note,) = told["notes"]
+    assert note.startswith(
+        "F-204 is mounted as its revision 1; mount it again for the new one (its tolerance"
+    )
+    assert (told["grade_mm_s"], told["rotor_mass_kg"], told["model"]) == (6.3, 40.0, "KR-22")
+
+
+def test_the_same_machine_again_or_another_says_nothing(desk):
+    assert desk.add_machine(MachineAsked(key="key-00000001", serial="F-204"), "ana")["notes"] == []
+    other = MachineAsked(
+        key="key-00000002", serial="F-211", model="KR-22", rotor_mass_kg=40.0, service_hz=25.0
+    )  # fmt: skip
+    assert desk.add_machine(other, "ana")["notes"] == []
+
+
+def test_a_new_mass_must_fit_the_loads_that_are_kept(desk):
+    with pytest.raises(Refusal, match="add up to 40 kg, the rotor has 60 kg"):
+        desk.add_machine(MachineAsked(key="key-00000001", serial="F-204", rotor_mass_kg=60.0), "ana")

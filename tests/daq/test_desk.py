@@ -14,8 +14,10 @@ from store_kit import FakeClock, Stand
 from config.errors import NeedsAnswer, Refusal
 from daq.board import Board, StandState
 from daq.desk import Desk
+from daq.marks import MarkDesk
 from daq.requests import (
     MachineAsked,
+    MarkAsked,
     MarkPositionBody,
     MountAsked,
     PieceBody,
@@ -203,3 +205,25 @@ def test_the_same_machine_again_or_another_says_nothing(desk):
 def test_a_new_mass_must_fit_the_loads_that_are_kept(desk):
     with pytest.raises(Refusal, match="add up to 40 kg, the rotor has 60 kg"):
         desk.add_machine(MachineAsked(key="key-00000001", serial="F-204", rotor_mass_kg=60.0), "ana")
+
+
+class NoAnalysis:
+    def want_fresh(self, from_sample):
+        raise AssertionError("a run that is named needs no new reading")
+
+
+def test_a_named_run_is_labelled_also_while_the_rotor_turns(stand, board):
+    marks = MarkDesk(AtOnce(stand.ledger), stand.history, board, FakeClock(), NoAnalysis(), 5.0, {})
+    stand.run(None)
+    board.post(state=StandState.TURNING, speed_hz=25.0)
+    told = marks.ask(MarkAsked(key="key-00000001", label="O", run="0142/1"), "rui")
+    assert (told["mark"]["state"], told["mark"]["run"], told["reading"]["label"]) == (
+        "labelled",
+        "0142/1",
+        "O",
+    )
+    with pytest.raises(NeedsAnswer, match="is labelled O; it would become check"):
+        marks.ask(MarkAsked(key="key-00000002", label="check", run="0142/1", reading=1), "rui")
+    for wrong, says in (({"reading": 1}, "no run"), ({"run": "0142/1", "choose": "last"}, "one of the two")):
+        with pytest.raises(Refusal, match=says):
+            marks.ask(MarkAsked(key="key-00000003", label="O", **wrong), "rui")

@@ -9,6 +9,7 @@ killed, and it ends as ``revmark`` does.
 
 from __future__ import annotations
 
+import gc
 import json
 import os
 import signal
@@ -61,6 +62,7 @@ def main() -> list[str]:
 
     for module in PRELOAD:
         importlib.import_module(module)
+    gc.freeze()  # the children's collections then leave the shared pages alone
     print(json.dumps("ready"), flush=True)
     for line in sys.stdin:
         asked = json.loads(line)

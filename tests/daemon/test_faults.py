@@ -74,7 +74,7 @@ def test_an_unplugged_source_interrupts_the_run_and_comes_back(mounted: Bay) -> 
     assert mark is not None
     assert mark.state is MarkState.LABELLED
     until(lambda: mounted.live()["state"] != "source lost", "the source to come back", 15.0)
-    assert {"source_lost", "source_back"} <= dict(events(mounted)).keys()
+    until(lambda: {"source_lost", "source_back"} <= dict(events(mounted)).keys(), "the events", every_s=0.2)
     name = mounted.until_run()  # it turns still, so a new run has begun
     mounted.mark("O")
     with mounted.history() as history:

@@ -22,6 +22,7 @@ from daq.drivers.problems import did_you_mean, sentences
 
 GROUP = "revmark.drivers"
 BUILT_IN: dict[str, str] = {
+    "daqmx": "daq.drivers.daqmx:DaqmxDriver",
     "replay": "daq.drivers.replay:ReplayDriver",
     "simulated": "daq.drivers.simulated:SimulatedDriver",
 }

@@ -60,9 +60,17 @@ def _pulse(found: LiveReport) -> str:
 
 def _channels(found: LiveReport) -> str:
     rows = [
-        (c.channel, c.input, f"{c.lowest_v:.2f} to {c.highest_v:.2f}", f"{c.range_high_v:.1f}", f"{c.gap_v:.2f}",
-         f"{finite(c.gap_low_v)} to {finite(c.gap_high_v)}", f"{c.noise:.3f} {c.unit}", f"{c.skew_us:.1f}")
+        (
+            c.channel,
+            c.input,
+            f"{c.lowest_v:.2f} to {c.highest_v:.2f}",
+            f"{c.range_high_v:.1f}",
+            f"{c.gap_v:.2f}",
+            f"{finite(c.gap_low_v)} to {finite(c.gap_high_v)}",
+            f"{c.noise:.3f} {c.unit}",
+            f"{c.skew_us:.1f}",
+        )
         for c in found.channels
-    ]  # fmt: skip
+    ]
     headers = ["channel", "input", "volts", "range", "gap V", "limits V", "noise", "skew us"]
     return table(rows, headers, "lllrrlrr")

@@ -227,7 +227,7 @@ def _pulses(
 
 
 def _width_deg(column: NDArray[Any], edges: Floats, trigger: Trigger, edge: str) -> float:
-    """How much of the turn the pulse fills: the share of whole turns spent beyond the level after the edge."""
+    """How much of the turn the pulse fills: the share of whole turns spent beyond the level."""
     inside = column[int(edges[0]) : int(edges[-1])]
     beyond = inside < trigger.level if edge == "falling" else inside > trigger.level
     return 360.0 * float(beyond.mean())
@@ -255,7 +255,7 @@ def _pulse_trouble(
 ) -> Iterator[str]:
     if missed or doubles:
         yield (
-            f"{name}: {missed} pulses missed, {doubles} double. Set the level to the middle of the pulse, and "
+            f"{name}: {missed} pulses missed, {doubles} double. Set the level to the middle of the pulse and "
             "look for scratches or a loose sensor."
         )
     if per_turn is not None and per_turn < FEWEST_PER_TURN:

@@ -1,4 +1,4 @@
-"""Tells systemd how the daemon does (sd_notify): a few lines of socket code, nothing where there is no systemd."""
+"""Tells systemd how the daemon does (sd_notify): a few lines of socket code, silent without systemd."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""What systemd is told (sd_notify(3), read in DAQ.md section 5): a datagram of lines, path or abstract socket."""
+"""What systemd is told (sd_notify(3), DAQ.md section 5): a datagram of lines, to a path or an abstract socket."""
 
 from __future__ import annotations
 

@@ -24,6 +24,7 @@ GROUP = "revmark.drivers"
 BUILT_IN: dict[str, str] = {
     "daqmx": "daq.drivers.daqmx:DaqmxDriver",
     "replay": "daq.drivers.replay:ReplayDriver",
+    "serial": "daq.drivers.serial_driver:SerialDriver",
     "simulated": "daq.drivers.simulated:SimulatedDriver",
 }
 AnyDriver = Driver[Any]

@@ -12,6 +12,7 @@ import pytest
 from daq.drivers.base import ChannelPlan, ProbePlan, PulsePlan
 
 sys.path.insert(0, str(Path(__file__).parent / "ni"))  # for ni_kit
+sys.path.insert(0, str(Path(__file__).parent / "serial"))  # for digitizer_kit
 
 from ni_kit import DeviceServer, world
 

@@ -1,5 +1,6 @@
 """Every registered driver keeps every rule; and the rules catch a driver that does not."""
 
+import digitizer_kit
 import ni_kit
 import numpy as np
 import pytest
@@ -37,6 +38,7 @@ def replay(pace):
 def daqmx(plan, clock, recordings, request):
     """Against the device server of tests/drivers/ni, on the real clock."""
     server = request.getfixturevalue("device_server")
+    server.renew()
 
     def lose(driver):
         server.verb("short", 100)  # a read that comes back short is a loss
@@ -45,7 +47,31 @@ def daqmx(plan, clock, recordings, request):
     return Subject(lambda: ni_kit.driver(server), lose=lose), SystemClock()
 
 
+def serial(lines):
+    """A digitizer on a wire of tests/drivers/serial, in pieces of 0.07 s, on the real clock."""
+
+    def subject(plan, clock, recordings, request):
+        port = request.getfixturevalue("tmp_path") / "port"
+        wire = digitizer_kit.SocketWire() if lines else digitizer_kit.PtyWire(port)
+        rotor = digitizer_kit.Rotor(rate_hz=1000.0 if lines else 12_800.0)
+        scans = round(0.07 * rotor.rate_hz)
+        digitizer = digitizer_kit.Digitizer(rotor, scans=scans, lines=8 * lines, every_s=0.1)
+        sender = digitizer_kit.Sender(wire, digitizer)
+        request.addfinalizer(sender.close)
+        options = {"port": wire.url, "channels": 3, "codec": "lines" if lines else "binary"}
+        wires, clock = digitizer_kit.plan(), SystemClock()
+        found = Subject(
+            lambda: make_driver("serial", options, wires, clock=clock),
+            lose=lambda driver: sender.swallow(2) * digitizer.scans,
+        )
+        return found, clock
+
+    return subject
+
+
 ENTRIES = {
+    ("serial", "frames on a pseudo-terminal"): serial(lines=False),
+    ("serial", "lines on a socket"): serial(lines=True),
     ("daqmx", "device server"): daqmx,
     ("simulated", "real pace"): simulated,
     ("replay", "real pace"): replay("real"),

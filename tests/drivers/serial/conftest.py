@@ -1,0 +1,8 @@
+"""Digitizers on pseudo-terminals and sockets."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).parent))  # for digitizer_kit

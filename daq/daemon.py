@@ -170,7 +170,7 @@ class Daemon:
         while not self._asked_to_stop.is_set():
             if self._pump.fatal is not None:
                 log.error("%s", self._pump.fatal)
-                return CONFIGURATION
+                return TRY_AGAIN if self._pump.fatal.kind == "gone" else CONFIGURATION
             trouble = self._supervisor.trouble(parts)
             if trouble is not None:
                 log.error("%s The daemon ends; start it again.", trouble)

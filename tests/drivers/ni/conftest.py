@@ -1,4 +1,4 @@
-"""One device server for all tests of a file; its faults are taken back after each test."""
+"""One device server for most tests, as new for each; others for other worlds."""
 
 from __future__ import annotations
 
@@ -24,6 +24,7 @@ def serve() -> Iterator[Callable[..., DeviceServer]]:
 
 
 @pytest.fixture
-def server(serve: Callable[..., DeviceServer]) -> DeviceServer:
-    """Dev1, all inputs at once."""
-    return serve()
+def server(device_server: DeviceServer) -> DeviceServer:
+    """Dev1 of ``ni_kit.world``, as new, also after a test that ended the process."""
+    device_server.renew()
+    return device_server

@@ -25,6 +25,7 @@ Verbs: see ``Verbs``.
 
 from __future__ import annotations
 
+import copy
 import json
 import math
 import os
@@ -63,6 +64,7 @@ TERMINALS = {10083: "RSE", 10078: "NRSE", 10106: "DIFF", 12529: "PSEUDO_DIFF"}
 NAMES, CHANNELS, AVAILABLE, TOTAL, NUMBER = 0x193B, 0x1273, 0x1223, 0x192A, 0x217B
 PRODUCT, SERIAL, SIMULTANEOUS, COUPLINGS = 0x0631, 0x0632, 0x298F, 0x2994
 RATE, CONVERT_RATE, BUFFER, RANGE_LOW, COUPLING, AC = 0x1344, 0x1848, 0x186C, 0x1816, 0x0064, 10045
+OPEN_EXIST = 0x3100
 
 
 class Refused(Exception):
@@ -124,12 +126,20 @@ class Verbs:
     """What goes wrong, on demand. Each method is a verb; its words are its arguments."""
 
     def __init__(self, world: dict) -> None:
-        self.world = world
+        self.world, self.first = world, copy.deepcopy(world)
+        self.jobs: dict[str, Job] = {}
+        self.reset()
+
+    def reset(self) -> str:
+        """As at the start: no fault, no task, the first world."""
+        self.world.clear()
+        self.world.update(copy.deepcopy(self.first))
+        self.jobs.clear()
         self.calls: dict[str, int] = {}
         self.planned: dict[str, list[int]] = {}
         self.short_by: list[int] = []
         self.absent = self.half = False
-        self.jobs: dict[str, Job] = {}
+        return "ok"
 
     def fail(self, method: str, code: str, times: str = "1") -> str:
         """The next calls of a method fail; a code above 0 is a warning of a read."""
@@ -168,7 +178,7 @@ class Verbs:
         return "ok"
 
     def put(self, key: str, value: str) -> str:
-        """Change the world: hz, turning, speed."""
+        """Change the world: hz, turning, speed; open = inputs without a sensor."""
         self.world[key] = json.loads(value)
         return "ok"
 
@@ -352,7 +362,13 @@ class Server(pb_grpc.NiDAQmxServicer):
         return pb.GetReadAttributeUInt64Response(value=job.total())
 
     def GetReadAttributeBool(self, request, context):
-        raise Refused(-200452)  # no list of open or overloaded channels
+        if "open" not in self.world:
+            raise Refused(-200452)  # a device without such lists
+        there = request.attribute_raw == OPEN_EXIST and bool(self.world["open"])
+        return pb.GetReadAttributeBoolResponse(value=there)
+
+    def GetReadAttributeString(self, request, context):
+        return pb.GetReadAttributeStringResponse(value=", ".join(self.world["open"]))
 
     def GetErrorString(self, request, context):
         return pb.GetErrorStringResponse(error_string=f"made-up text for {request.error_code}")

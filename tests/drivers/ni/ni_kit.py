@@ -92,6 +92,12 @@ class DeviceServer:
         """On the port it had."""
         self._start(self.port)
 
+    def renew(self) -> None:
+        """Without faults and tasks, whatever was done to it."""
+        if self._process.poll() is not None:
+            self.start_again()
+        self.verb("reset")
+
     def close(self) -> None:
         if self._process.poll() is None:
             self.kill()

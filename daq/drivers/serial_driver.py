@@ -13,7 +13,7 @@ from collections.abc import Iterator
 from dataclasses import replace
 from typing import Annotated, ClassVar, Literal
 
-from pydantic import Field, field_validator, model_validator
+from pydantic import Field, ValidationInfo, field_validator
 
 from config.errors import DriverError
 from daq.drivers.base import ChannelPlan, Chunk, Driver, DriverOptions, EndOfSource, SourceInfo
@@ -77,11 +77,12 @@ class SerialOptions(DriverOptions):
                 raise ValueError(f"holds a pattern that cannot be read: {error}") from error
         return port
 
-    @model_validator(mode="after")
-    def _traceable(self) -> SerialOptions:
-        if self.trace is not None and "://" in self.port:
-            raise ValueError("trace works for ports of this computer only, not for URLs")
-        return self
+    @field_validator("trace")
+    @classmethod
+    def _traceable(cls, trace: str | None, info: ValidationInfo) -> str | None:
+        if trace is not None and "://" in info.data.get("port", ""):
+            raise ValueError("works with ports of this computer only, where port is no URL")
+        return trace
 
 
 class SerialDriver(Driver[SerialOptions]):

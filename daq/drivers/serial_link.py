@@ -49,9 +49,9 @@ class Link:
         self._is_socket = port.lower().startswith("socket://")
         self._port: Any = None
         try:
-            self._port = serial.serial_for_url(
-                _url(port, trace), baud, exclusive=True, write_timeout=WRITE_S, do_not_open=True
-            )
+            self._port = serial.serial_for_url(_url(port, trace), baud, exclusive=True, do_not_open=True)
+            if not port.lower().startswith("rfc2217://"):  # which knows no such limit
+                self._port.write_timeout = WRITE_S
             self._port.open()
         except ValueError as error:
             raise DriverError(

@@ -145,7 +145,7 @@ class Digitizer:
     device: str = "bench digitizer 0042"
     sequence: int = 0
     first: int = 0
-    every_s: float = 0.5
+    every_s: float = 0.1
     _due: float = 0.0
 
     @property

@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections import deque
 from datetime import UTC, datetime
 from typing import TYPE_CHECKING, ClassVar
+from uuid import uuid4
 
 from config.errors import DriverError
 from daq.drivers.base import Chunk, Driver, DriverOptions, EndOfSource, SourceInfo
@@ -47,7 +48,8 @@ class DaqmxDriver(Driver[DaqmxOptions]):
         self._running: Acquisition | None = None
         self._overruns: deque[float] = deque(maxlen=OVERRUNS)
         self._devices: tuple[str, ...] = ()
-        self._worked = self._vanished = False
+        self._worked = self._vanished = self._left_behind = False
+        self._name = f"revmark-{uuid4().hex[:12]}"
         self._half_back_s: float | None = None
         self._came_s = self.clock.monotonic()
 
@@ -73,7 +75,9 @@ class DaqmxDriver(Driver[DaqmxOptions]):
         from daq.drivers.ni.identity import identify, require_present
         from daq.drivers.ni.session import Session
 
-        self._session = Session(self.options.server)
+        self._session = Session(self.options.server, self._name)
+        if self._left_behind and self.options.server is not None:
+            self._session.clear_left_behind()
         try:
             require_present(self._session, self._devices, self.options)
         except DriverError:
@@ -140,7 +144,7 @@ class DaqmxDriver(Driver[DaqmxOptions]):
         session, self._session = self._session, None
         try:
             if running is not None:
-                running.close()
+                self._left_behind = not running.close()
         finally:
             if session is not None:
                 session.close()

@@ -100,8 +100,11 @@ class Acquisition:
         self._reader.verify_array_shape = False  # the shape was right once; looking costs a call each time
         return came
 
-    def close(self) -> None:
-        """Stop and clear, whatever state the task is in: a stop repeats the error that ended the task."""
+    def close(self) -> bool:
+        """Stop and clear, whatever state the task is in: a stop repeats the error that ended the task.
+
+        False when it could not be cleared, so that a server may hold it still.
+        """
         try:
             self._task.stop()
         except Exception as error:
@@ -110,6 +113,8 @@ class Acquisition:
             self._task.close()
         except Exception as error:
             self._ignore(error)
+            return False
+        return True
 
     def _ignore(self, error: Exception) -> None:
         if not is_foreign(error):

@@ -94,8 +94,8 @@ _SENTENCES: tuple[tuple[tuple[int, ...], _Sentence], ...] = (
         _Sentence(
             "busy",
             "{link} is in use by another program, or by one that crashed",
-            "End that program; it is tried again by itself. If none is left, reset the device with its "
-            "maker's tool, which ends every program's measurement on it.",
+            "End that program; it is tried again by itself. If none is left, restart the device server if "
+            "there is one, or reset the device with its maker's tool; that ends all measurements on it.",
         ),
     ),
     (

@@ -28,3 +28,12 @@ def server(device_server: DeviceServer) -> DeviceServer:
     """Dev1 of ``ni_kit.world``, as new, also after a test that ended the process."""
     device_server.renew()
     return device_server
+
+
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    """What needs a device is left out unless ``-m`` names it."""
+    if "real" in (config.option.markexpr or ""):
+        return
+    left_out = [item for item in items if item.get_closest_marker("real")]
+    items[:] = [item for item in items if item not in left_out]
+    config.hook.pytest_deselected(items=left_out)

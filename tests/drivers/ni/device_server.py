@@ -255,8 +255,11 @@ class Server(pb_grpc.NiDAQmxServicer):
 
     def CreateTask(self, request, context):
         name = request.session_name or f"task{len(self.jobs) + 1}-{time.monotonic_ns()}"
-        self.jobs[name] = Job(self.world)
-        return pb.CreateTaskResponse(task=Session(name=name), new_session_initialized=True)
+        known = name in self.jobs
+        if request.initialization_behavior == (1 if known else 2):
+            context.abort(grpc.StatusCode.FAILED_PRECONDITION, "there is one, or none")
+        self.jobs.setdefault(name, Job(self.world))
+        return pb.CreateTaskResponse(task=Session(name=name), new_session_initialized=not known)
 
     def GetTaskAttributeString(self, request, context):
         names = ", ".join(c["name"] for c in self._job(request).channels)
@@ -330,12 +333,19 @@ class Server(pb_grpc.NiDAQmxServicer):
 
     def StartTask(self, request, context):
         job = self._job(request)
-        self._device(job.channels[0]["device"])
+        mine = {c["device"] for c in job.channels}
+        for device in mine:
+            self._device(device)
+        others = [j for j in self.jobs.values() if j is not job and j.begun_s is not None]
+        if any(c["device"] in mine for j in others for c in j.channels):
+            raise Refused(-50103)
         job.begun_s = time.monotonic()
         return pb.StartTaskResponse()
 
     def StopTask(self, request, context):
-        self._live(self._job(request))
+        job = self._job(request)
+        self._live(job)
+        job.begun_s = None
         return pb.StopTaskResponse()
 
     def ClearTask(self, request, context):

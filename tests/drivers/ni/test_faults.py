@@ -186,6 +186,22 @@ def test_unplugged_and_plugged_in_again(server: DeviceServer, source: AnyDriver)
     assert time.monotonic() - begun_s < SOON_S
 
 
+def test_a_link_that_broke_leaves_no_task_to_block_the_device(
+    server: DeviceServer, source: AnyDriver
+) -> None:
+    """The server was never told to clear: it would hold the device against its own client."""
+    source.open()
+    segment = blocks(source, 1)[-1].segment
+    server.verb("fail", "ClearTask", -201390, 1)
+    server.verb("fail", "ReadAnalogF64", -201390)
+    assert lose(source).cause.startswith(f"The network link to Dev1 at {server.address} failed")
+    source.close()
+    assert len(server.told()["tasks"]) == 1
+    source.open()
+    assert len(server.told()["tasks"]) == 1
+    assert blocks(source, 1)[0].segment > segment
+
+
 def test_a_server_that_dies_and_comes_back(server: DeviceServer, source: AnyDriver) -> None:
     source.open()
     segment = blocks(source, 1)[-1].segment
@@ -224,7 +240,7 @@ def at_home(server: DeviceServer, monkeypatch: pytest.MonkeyPatch) -> Any:
     from daq.drivers.ni import session
 
     real = session.Session
-    monkeypatch.setattr(session, "Session", lambda _: real(server.address))
+    monkeypatch.setattr(session, "Session", lambda _, name: real(server.address, name))
     made = make_driver("daqmx", options(), PLAN, clock=SystemClock())
     yield made
     made.close()
@@ -269,6 +285,19 @@ def test_in_use_is_told_and_tried_again(server: DeviceServer, source: AnyDriver)
         assert (caught.value.kind, caught.value.retryable) == ("busy", True)
     source.open()
     assert blocks(source, 1)
+
+
+def test_a_device_that_another_client_reads_is_in_use(server: DeviceServer, source: AnyDriver) -> None:
+    source.open()
+    second = driver(server)
+    with pytest.raises(DriverError, match="in use by another program") as caught:
+        second.open()
+    assert caught.value.kind == "busy"
+    assert [b.first_sample for b in blocks(source, 2)] == [0, 1280]
+    source.close()
+    second.open()
+    assert blocks(second, 1)
+    second.close()
 
 
 def test_a_task_that_cannot_start_is_not_left_behind(server: DeviceServer, source: AnyDriver) -> None:

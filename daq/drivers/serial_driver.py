@@ -31,8 +31,10 @@ DESCRIPTION_S = 4.0
 PATIENCE_S, RETRY_S = 3.0, 0.1
 """Opening again waits so long for a port that is gone, and looks so often."""
 WAIT_S = 0.1
-SMALL_BYTES, GATHER_S = 1024, 0.01
-"""After so few bytes the next ones get time to gather: one turn of the loop a byte would be waste."""
+SLOW_BYTES_PER_S, SMALL_BYTES, GATHER_S = 400_000, 1024, 0.01
+"""On a line this slow the next bytes get time to gather after so few: a turn of the loop each is waste."""
+PACE_S = 0.25
+"""How long the line's pace is looked at."""
 REPORT_S = 60.0
 """Damage is logged at most so often."""
 CODECS: dict[str, type[BinaryCodec] | type[LineCodec]] = {"binary": BinaryCodec, "lines": LineCodec}
@@ -114,15 +116,15 @@ class SerialDriver(Driver[SerialOptions]):
         info = self._accepted(told)
         self._take(early)
         self._heard = self.clock.monotonic(), self.tally.frames, self.tally.bytes
+        self._pace, self._slow = (self.clock.monotonic(), self.tally.bytes), False
         self._reported = self.clock.monotonic(), self.tally.frames, self.tally.damaged
         return info
 
     def _read(self, timeout_s: float) -> Chunk | EndOfSource | None:
         if not self._ready and self._trouble is None and self._link is not None:
             data = self._link.receive(timeout_s)
-            if 0 < len(data) < SMALL_BYTES:
-                self._pause(GATHER_S)
             self._take(self._stream.feed(data))
+            self._gather(len(data))
             self._watch_frames()
             self._report()
         if self._ready:
@@ -229,6 +231,15 @@ class SerialDriver(Driver[SerialOptions]):
         )
 
     # --- watching ------------------------------------------------------------------------------------
+
+    def _gather(self, size: int) -> None:
+        """Let bytes gather on a slow line; never on a fast one, whose buffers hold some milliseconds only."""
+        now_s, (begin_s, came) = self.clock.monotonic(), self._pace
+        if now_s - begin_s > PACE_S:
+            self._slow = self.tally.bytes - came < SLOW_BYTES_PER_S * (now_s - begin_s)
+            self._pace = now_s, self.tally.bytes
+        if self._slow and 0 < size < SMALL_BYTES:
+            self._pause(GATHER_S)
 
     def _watch_frames(self) -> None:
         """Raises DriverError when bytes have come for too long without a whole frame among them."""

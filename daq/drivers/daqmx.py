@@ -102,7 +102,9 @@ class DaqmxDriver(Driver[DaqmxOptions]):
         self._check_rate(running.rate_hz)
         self._scale = Scale(running.ranges_v, [item.divider for item in inputs])
         powered = any(item.excitation_a for item in inputs)
-        self._watch_stream = Watch(running.stream, running.buffer, powered=powered, log=self.log)
+        self._watch_stream = Watch(
+            running.stream, running.rate_hz, running.buffer, powered=powered, log=self.log
+        )
         self._settling = round(settling_s(self.options, inputs) * running.rate_hz)
         self._fetched = self._lost = self._shorts = 0
         running.start()

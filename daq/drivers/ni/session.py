@@ -6,6 +6,7 @@ Imports the library, so it is imported only when a source is opened.
 from __future__ import annotations
 
 import logging
+import warnings
 from typing import Any
 
 import nidaqmx
@@ -14,6 +15,7 @@ from nidaqmx import SessionInitializationBehavior
 from nidaqmx.system import System
 
 log = logging.getLogger("revmark.drivers.daqmx")
+warnings.filterwarnings("default", category=nidaqmx.errors.DaqWarning)  # once, not at every read
 
 DEADLINES_S = {
     "GetSystemInfoAttributeUInt32": 1.0,

@@ -62,6 +62,7 @@ ROWS: dict[str, tuple[str, ...] | str] = {
     ),
     "9 another rate, skew, drift": (
         "test_faults.py::test_a_rate_the_device_has_not_is_refused_or_coerced",
+        "test_watch.py::test_the_two_clocks_are_compared_now_and_then",
         "test_vectors.py::test_a_1x_vector_is_the_emulated_one",
         "test_vectors.py::test_without_the_skew_the_phase_is_wrong_by_what_the_multiplexer_takes",
         "test_vectors.py::test_the_set_up_keeps_the_skew_of_source_and_stand_file_together",

@@ -6,6 +6,7 @@ library's own threads and callbacks are not used; every call is made by whoever 
 
 from __future__ import annotations
 
+import logging
 from collections import deque
 from datetime import UTC, datetime
 from typing import TYPE_CHECKING, ClassVar
@@ -52,6 +53,15 @@ class DaqmxDriver(Driver[DaqmxOptions]):
         self._name = f"revmark-{uuid4().hex[:12]}"
         self._half_back_s: float | None = None
         self._came_s = self.clock.monotonic()
+
+    @classmethod
+    def _connected(cls) -> list[tuple[str, str]]:
+        """Devices of this PC; what hangs on a server is that server's to tell."""
+        with border(lambda: Where("The device"), logging.getLogger(f"revmark.drivers.{cls.name}")):
+            from daq.drivers.ni.identity import listed
+            from daq.drivers.ni.session import Session
+
+            return listed(Session(None, ""))
 
     # --- source --------------------------------------------------------------------------------------
 

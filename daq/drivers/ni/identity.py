@@ -37,6 +37,15 @@ def require_present(session: Session, devices: Sequence[str], options: DaqmxOpti
         )
 
 
+def listed(session: Session) -> list[tuple[str, str]]:
+    """(an input of it, what it says of itself) for each device that is there."""
+    found = []
+    for name in session.device_names():
+        device = session.device(name)
+        found.append((f"{name}/ai0", f"{device.product_type}, serial {int(device.serial_num):08X}"))
+    return found
+
+
 def identify(session: Session, devices: Sequence[str], options: DaqmxOptions, log: logging.Logger) -> str:
     """The devices in words. Raises DriverError when one is not what the stand file says."""
     found = [_checked(session.device(name), name, options) for name in devices]

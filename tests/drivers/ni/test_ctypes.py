@@ -111,6 +111,11 @@ said["tasks"] = fake.fake_tasks()
     assert said["tasks"] == 0
 
 
+def test_what_is_connected_is_listed_without_opening_it(library: Path) -> None:
+    said = play(library, 'said["found"] = type(source)._connected()\nsaid["tasks"] = fake.fake_tasks()')
+    assert said == {"found": [["Dev1/ai0", "SIM-C, serial 0000C0DE"]], "tasks": 0}
+
+
 def test_faults_through_the_library(library: Path) -> None:
     said = play(
         library,

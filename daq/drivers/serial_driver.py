@@ -22,7 +22,7 @@ from daq.drivers.frames.columns import STAMPS, Columns, PulseColumn
 from daq.drivers.frames.lines import LineCodec
 from daq.drivers.frames.records import MOST_CHANNELS, VERSION, Codec, Description, Tally
 from daq.drivers.frames.stream import Run, Stream, Trouble
-from daq.drivers.serial_link import Link
+from daq.drivers.serial_link import Link, ports_here
 
 RATE_TOLERANCE = 0.01
 """Relative; a digitizer that runs further off the rate in the stand file is refused."""
@@ -102,6 +102,10 @@ class SerialDriver(Driver[SerialOptions]):
         self._trouble: Trouble | None = None
         self._reported = (0.0, 0, 0)
 
+    @classmethod
+    def _connected(cls) -> list[tuple[str, str]]:
+        return ports_here()
+
     # --- source --------------------------------------------------------------------------------------
 
     def _open(self) -> SourceInfo:
@@ -116,7 +120,7 @@ class SerialDriver(Driver[SerialOptions]):
         info = self._accepted(told)
         self._take(early)
         self._heard = self.clock.monotonic(), self.tally.frames, self.tally.bytes
-        self._pace, self._slow = (self.clock.monotonic(), self.tally.bytes), False
+        self._pace, self._slow = (self.clock.monotonic(), self.tally.bytes), True
         self._reported = self.clock.monotonic(), self.tally.frames, self.tally.damaged
         return info
 

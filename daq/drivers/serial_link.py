@@ -29,6 +29,7 @@ if sys.platform != "win32":
 
     PORT_ERRORS = (*PORT_ERRORS, termios.error)
 
+BY_ID = Path("/dev/serial/by-id")
 MOST_BYTES = 65536
 WRITE_S = 1.0
 WINDOWS_BUFFER = 262144
@@ -164,9 +165,9 @@ def cannot_open(port: str, error: BaseException) -> DriverError:
             "take one connection only.",
             kind="gone",
         )
-    where = "There is no serial port" if code in GONE else "Nothing can be opened at"
+    missing, other = f"There is no serial port {port}.", f"Nothing can be opened at {port} ({_plain(error)})."
     return DriverError(
-        f"{where} {port} ({_plain(error)}).",
+        missing if code in GONE else other,
         f"Plug the digitizer in and check source.options.port. {_ports_here()}",
         kind="gone",
     )
@@ -251,11 +252,14 @@ def _program(pid: int) -> str:
 
 
 def ports_here() -> list[tuple[str, str]]:
-    """(device, what it says of itself) of the serial ports of this computer; nothing is opened."""
+    """(name for the stand file, what it says of itself) of this computer's serial ports; none is opened.
+
+    The name is the one that stays with the device where the system has one."""
     from serial.tools import list_ports
 
+    stays = {os.path.realpath(link): str(link) for link in sorted(BY_ID.glob("*"))}
     found = sorted(list_ports.comports())
-    return [(port.device, " ".join(_said(port))) for port in found]
+    return [(stays.get(port.device, port.device), " ".join(_said(port))) for port in found]
 
 
 def _said(port: Any) -> list[str]:

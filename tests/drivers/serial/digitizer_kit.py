@@ -333,6 +333,8 @@ class Sender:
         self.hold = threading.Event()
         self.spoil: Callable[[bytes], bytes] = lambda data: data
         self.failed: BaseException | None = None
+        self.drops = False
+        """What does not fit into the wire is lost, as in a receiver that nobody empties."""
         self._make = make or (lambda: b"".join(digitizer.frames(1)))
         self._lock = threading.Lock()
         self._stop = threading.Event()
@@ -355,7 +357,8 @@ class Sender:
                 if not self._plugged or self.hold.is_set():
                     begin_s, begun, left = now_s, self.digitizer.first, b""
                 elif left:
-                    left = left[self.wire.write(left) :]
+                    sent = self.wire.write(left)
+                    left = b"" if self.drops else left[sent:]
                 elif now_s >= begin_s + (self.digitizer.first - begun) / per_s:
                     left = self.spoil(self._make())
                     continue

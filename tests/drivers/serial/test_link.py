@@ -47,7 +47,7 @@ def opened(port, **more):
 def test_a_port_that_is_not_there(tmp_path):
     error = opened(str(tmp_path / "nothing"))
     assert (error.kind, error.retryable) == ("gone", True)
-    assert error.cause.startswith(f"There is no serial port {tmp_path / 'nothing'}")
+    assert error.cause == f"There is no serial port {tmp_path / 'nothing'}."
     assert "erial port" in error.remedy  # those there are, or that there is none
     assert isinstance(error.__cause__, serial.SerialException)
 
@@ -249,6 +249,28 @@ def test_a_socket_whose_peer_has_gone_leaves_nothing_open(recwarn):
         assert left.fileno() == -1
 
 
+def test_buffers_are_set_after_opening_where_there_are_any(monkeypatch):
+    """Windows forgets a buffer set before; Linux has none to set, a pseudo-terminal no latency either."""
+    done = []
+
+    class Port:
+        def open(self):
+            done.append("open")
+
+        def close(self):
+            done.append("close")
+
+        def set_buffer_size(self, size):
+            done.append(size)
+
+        def set_low_latency_mode(self, on):
+            raise ValueError("Failed to update ASYNC_LOW_LATENCY flag")
+
+    monkeypatch.setattr(serial_link.serial, "serial_for_url", lambda *_, **__: Port())
+    Link("COM3", 115_200, LOG).close()
+    assert done == ["open", 262_144, "close"]
+
+
 # --- other ways to a digitizer ---------------------------------------------------------------------------
 
 
@@ -356,6 +378,18 @@ def test_the_ports_here_are_listed_without_opening_one(monkeypatch):
         ("/dev/ttyUSB0", "bench digitizer works serial 0042"),
     ]
     assert "Serial ports here: /dev/ttyS0, /dev/ttyUSB0." in opened_remedy()
+
+
+def test_a_name_that_stays_with_the_device_is_offered(wire, tmp_path, monkeypatch):
+    """As udev's by-id does it: a link per device."""
+    from serial.tools import list_ports, list_ports_common
+
+    device = os.path.realpath(wire.url)
+    found = [list_ports_common.ListPortInfo(device, skip_link_detection=True)]
+    monkeypatch.setattr(list_ports, "comports", lambda: found)
+    monkeypatch.setattr(serial_link, "BY_ID", tmp_path)
+    assert [name for name, _ in serial_link.ports_here()] == [wire.url]
+    assert [name for name, _ in driver_class("serial").connected()] == [wire.url]
 
 
 def opened_remedy():

@@ -142,6 +142,57 @@ def test_loss_is_exact_and_starts_a_segment(send, driver):
     assert (source.tally.gaps, source.tally.lost_frames, source.tally.lost_samples) == (1, 3, 192)
 
 
+def test_a_reader_that_is_too_late_loses_exactly_what_did_not_fit(send, driver):
+    """Nobody reads for half a second and the receiver's 12 KB run over, cutting frames anywhere."""
+    sender = send()
+    source = driver(sender)
+    source.open()
+    before = blocks(source)[0]
+    sender.drops = True
+    time.sleep(0.5)
+    origin = None
+    until_s = time.monotonic() + 1.0
+    counts = sender.digitizer.counts(0, sender.digitizer.first + 30_000)
+    seen, segments = [before], {before.segment}
+    while time.monotonic() < until_s:
+        seen += blocks(source)
+        segments.add(seen[-1].segment)
+    for block in seen:
+        if origin is None:  # where the source's own numbers begin on the digitizer's counter
+            origin = next(
+                at
+                for at in range(0, len(counts), 64)
+                if (counts[at : at + len(block.counts)] == block.counts).all()
+            )
+        at = origin + block.first_sample
+        assert np.array_equal(block.counts, counts[at : at + len(block.counts)])
+    assert len(segments) > 1
+    assert source.counters.lost_samples == source.tally.lost_samples > 1000
+    assert source.tally.damaged > 0
+
+
+def test_a_slow_line_is_not_read_byte_by_byte(send, driver):
+    """A byte every half millisecond: gathered for 10 ms, so a hundred reads a second and not two thousand."""
+    digitizer = Digitizer(Rotor(rate_hz=200.0), scans=4, every_s=0.3)
+    kept = bytearray()
+
+    def drip():
+        if not kept:
+            kept.extend(b"".join(digitizer.frames(1)))
+        return bytes([kept.pop(0)])
+
+    source = driver(send(digitizer, make=drip))
+    source.open()
+    blocks(source, 3)
+    reads, receive = [], source._link.receive
+    source._link.receive = lambda timeout_s: reads.append(1) or receive(timeout_s)
+    until_s = time.monotonic() + 1.0
+    while time.monotonic() < until_s:
+        source.read(0.2)
+    assert source.tally.damaged == 0
+    assert 5 < len(reads) < 150
+
+
 def test_it_starts_anywhere_in_a_stream(send, driver):
     """The piece of a frame that comes first is dropped and no damage."""
     sender = send()

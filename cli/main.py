@@ -19,6 +19,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "coefficient": ("cli.coefficient:group", "Influence coefficients of past jobs."),
     "correction": ("cli.correction:command", "The correction weights, in real holes, and what they leave."),
     "demo": ("cli.demo:command", "A whole balance job by itself, on the simulated stand."),
+    "driver": ("cli.driver:group", "Drivers, what is connected, and the rules they keep."),
     "job": ("cli.job:group", "Jobs: one visit of one machine to the stand."),
     "machine": ("cli.machine:group", "Machines and their models."),
     "mark": ("cli.mark:command", "Label a run's reading: O, O+T, check, trim, slow-roll."),

@@ -42,9 +42,14 @@ def new(file: Path, template: str) -> None:
 
 @group.command("check")
 @click.argument("file", type=click.Path(path_type=Path), envvar="REVMARK_STAND")
+@click.option("--live", is_flag=True, help="Open the source and look at each channel for a few seconds.")
+@click.option("--seconds", type=click.FloatRange(1, 60), default=4, show_default=True, help="How long.")
 @json_option
-def check(file: Path, as_json: bool) -> None:  # noqa: FBT001 - click hands it over by name
-    """Name every mistake in FILE at once, or say that it is right."""
+def check(file: Path, *, live: bool, seconds: float, as_json: bool) -> int:
+    """Name every mistake in FILE at once, or say that it is right.
+
+    With --live the source is opened too (the daemon must not be using it) and each channel reported.
+    """
     from config.stand import check_stand
     from daq.drivers.registry import options_problems
 
@@ -55,10 +60,15 @@ def check(file: Path, as_json: bool) -> None:  # noqa: FBT001 - click hands it o
             raise
         print_json({"ok": False, "file": str(file), **error.as_dict()})
         raise click.exceptions.Exit(1) from error
+    if live:
+        from cli.livecheck import print_live
+
+        return print_live(stand, seconds, as_json=as_json)
     if as_json:
         print_json(_summary(stand))
     else:
         say(*_lines(stand))
+    return 0
 
 
 @group.command("schema")

@@ -108,7 +108,7 @@ class Analysis:
         self._floors = np.array([self._limits.change_floor(c.kind) for c in self._stand.channels])
         self._past: deque[NDArray[np.float64]] = deque(maxlen=max(1, round(QUIET_RMS_S / HOP_S)))
         self._turning_rms = np.zeros(len(channels))
-        self._recorder.set_up(info.rate_hz)
+        self._recorder.set_up(info)
         self._origin = Origin(info.origin)
         self._board.post(state=self._watch.state)
 

@@ -27,6 +27,7 @@ from daq.clockwatch import ClockWatch, step_text
 from daq.control import Identity, application, loopback_socket, serve_control
 from daq.drivers.registry import AnyDriver, make_driver
 from daq.interface import acts, questions, shows
+from daq.notify import Notifier
 from daq.pump import Pump
 from daq.recorder import Recorder
 from daq.runtime import Access, Runtime, access_of, closed_to_group, give
@@ -123,6 +124,7 @@ class Daemon:
         self._analysis = Analysis(stand, self._pump, self._recorder, self._board, clock)
         self._supervisor = Supervisor(clock)
         self._asked_to_stop = threading.Event()
+        self._notifier = Notifier()
 
     def run(self, ready: Callable[[str], None]) -> int:
         runtime = Runtime(runtime_folder_for_daemon(), self._stand.store_path, self._access)
@@ -135,8 +137,10 @@ class Daemon:
                         self._pump.opened.wait(5.0)
                 if self._pump.fatal is None:
                     ready(f"{self._stand.name}: marks are taken; store {self._stand.store_path}")
+                    self._notifier.ready()
                 code = self._watch(parts)
             finally:
+                self._notifier.stopping()
                 runtime.withdraw()
                 hung = self._take_down(parts)
             return TRY_AGAIN if hung and code == OK else code
@@ -177,17 +181,24 @@ class Daemon:
         while not self._asked_to_stop.is_set():
             if self._pump.fatal is not None:
                 log.error("%s", self._pump.fatal)
-                return CONFIGURATION
+                return TRY_AGAIN if self._pump.fatal.kind == "gone" else CONFIGURATION
             trouble = self._supervisor.trouble(parts)
             if trouble is not None:
                 log.error("%s The daemon ends; start it again.", trouble)
                 return TRY_AGAIN
             if (step_s := wall.look()) is not None:
                 self._recorder.event("clock_step", step_text(step_s))
+            self._notifier.alive(self._status())
             self._clock.wait(self._supervisor.ended, WATCH_EVERY_S)
             self._clock.wait(self._asked_to_stop, WATCH_EVERY_S)
         log.info("asked to stop")
         return OK
+
+    def _status(self) -> str:
+        """One line for the service manager; a source that is opened again and again is named."""
+        live = self._board.read()
+        store = "" if live.store == "ok" else f"; store {live.store}"
+        return f"{live.state}; {live.source}{store}"
 
     def _take_down(self, parts: list[Part]) -> bool:
         """Stop the parts in order; True when one hangs. One that holds the store ends us at once."""

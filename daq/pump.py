@@ -50,6 +50,9 @@ class Pump:
         self._clock = clock
         self._acts: queue.SimpleQueue[tuple[str, dict[str, Any], Future[Any]]] = queue.SimpleQueue()
         self._back_off_s = FIRST_BACK_OFF_S
+        self._trouble = ""
+        """Why the source is lost; empty = it is not."""
+        self._lost_s = 0.0
         self.notices: deque[Notice] = deque()
         self.opened = threading.Event()
         self.info: SourceInfo | None = None
@@ -94,14 +97,16 @@ class Pump:
             self.reader = self.ring.reader("analysis")
         elif self.info is not None and _stream(info) != _stream(self.info):
             self.fatal = DriverError(
-                "The source came back with another rate, scale or number of channels.",
+                "The source came back with another rate, scale, skew or number of channels.",
                 "Restart revmark serve so that the set-up is recorded anew.",
                 kind="config",
                 retryable=False,
             )
             raise self.fatal
         else:
-            self._note("back", info.description)
+            away_s = self._clock.monotonic() - self._lost_s
+            self._note("back", f"{info.description}, back after {away_s:.0f} s")
+        self._trouble = ""
         self.info = info
         self._board.post(source=info.description)
         log.info("source open: %s, %.10g samples/s", info.description, info.rate_hz)
@@ -142,9 +147,15 @@ class Pump:
                 future.set_exception(error)
 
     def _lost(self, error: DriverError) -> None:
-        log.error("source lost: %s", error)
         self._driver.close()
-        self._note("lost", error.cause)
+        if not self._trouble:
+            self._lost_s = self._clock.monotonic()
+        if str(error) != self._trouble:  # said once, however often it is tried
+            log.error("source lost: %s", error)
+            self._note("lost", error.cause)
+        self._trouble = str(error)
+        if error.kind == "gone":  # it may be plugged in any moment, and looking for it is cheap
+            self._back_off_s = FIRST_BACK_OFF_S
         self._board.post(
             state=StandState.SOURCE_LOST, detail=error.cause, source=f"lost: {error}", speed_hz=None
         )
@@ -154,10 +165,10 @@ class Pump:
     def _pause(self, stop: threading.Event, beat: Callable[[], None]) -> None:
         until = self._clock.monotonic() + self._back_off_s
         self._back_off_s = min(2 * self._back_off_s, LONGEST_BACK_OFF_S)
-        while self.fatal is None and self._clock.monotonic() < until:
+        while self.fatal is None and (left_s := until - self._clock.monotonic()) > 0:
             beat()
             self._refuse_acts()
-            if self._clock.wait(stop, min(READ_S, self._back_off_s)):
+            if self._clock.wait(stop, min(READ_S, left_s)):
                 return
 
     def _refuse_acts(self) -> None:
@@ -180,6 +191,6 @@ class Pump:
         self.notices.append(Notice(position, kind, text))
 
 
-def _stream(info: SourceInfo) -> tuple[float, str, tuple[float, ...]]:
+def _stream(info: SourceInfo) -> tuple[float, str, tuple[float, ...], tuple[float, ...]]:
     """What must stay the same when a source comes back, or its counts would mean something else."""
-    return info.rate_hz, info.dtype, info.volts_per_count
+    return info.rate_hz, info.dtype, info.volts_per_count, info.skew_s

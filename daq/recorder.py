@@ -12,6 +12,7 @@ from uuid import UUID
 from config.errors import StoreError
 from config.stand import Stand
 from daq.board import Board
+from daq.drivers.base import SourceInfo
 from daq.runs import Ended
 from daq.setup import set_up_draft
 from daq.writer import Writer
@@ -33,9 +34,9 @@ class Recorder:
         self._set_up: SetUp | None = None
         self._run: Run | None = None
 
-    def set_up(self, rate_hz: float) -> None:
-        """Record the measurement set-up with the source's true rate, before any run."""
-        draft = set_up_draft(self._stand, rate_hz)
+    def set_up(self, info: SourceInfo) -> None:
+        """Record the measurement set-up with the source's true rate and skew, before any run."""
+        draft = set_up_draft(self._stand, info.rate_hz, info.skew_s)
         self._set_up = self._writer.ask(lambda ledger: ledger.set_up(draft))
 
     @property

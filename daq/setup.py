@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 from config.stand import Channel, Stand
 from daq.drivers.base import ChannelPlan, ProbePlan, PulsePlan, SourceInfo
 from daq.signal.shapes import ChannelParams, PulseParams
@@ -32,15 +34,18 @@ def channel_plan(stand: Stand) -> ChannelPlan:
     return ChannelPlan(once, probes, stand.identity.angles_seen_from)
 
 
-def set_up_draft(stand: Stand, rate_hz: float) -> SetUpDraft:
-    """The set-up as it is recorded, with the source's true rate."""
+def set_up_draft(stand: Stand, rate_hz: float, skew_s: Sequence[float] = ()) -> SetUpDraft:
+    """The set-up as it is recorded, with the source's true rate and its skew (``SourceInfo.skew_s``)."""
     content = stand.set_up_content(rate_hz)
+    skews = _skews(stand, skew_s)
     return SetUpDraft(
         stand=content["stand"],
         ends=(content["ends"][0], content["ends"][1]),
         angles_seen_from=content["angles_seen_from"],
         zero=content["zero"],
-        channels=tuple(ChannelSetUp(**c) for c in content["channels"]),
+        channels=tuple(
+            ChannelSetUp(**{**c, "skew_s": s}) for c, s in zip(content["channels"], skews, strict=True)
+        ),
         pulse=PulseSetUp(**content["pulse"]),
         rate_hz=content["rate_hz"],
         driver=content["driver"],
@@ -57,7 +62,6 @@ def signal_params(stand: Stand, info: SourceInfo) -> tuple[PulseParams, tuple[Ch
         stand.pulse.hysteresis_v,
         name=stand.pulse.name,
     )
-    skews = info.skew_s or (0.0,) * len(info.volts_per_count)
     channels = tuple(
         ChannelParams(
             c.name,
@@ -66,8 +70,16 @@ def signal_params(stand: Stand, info: SourceInfo) -> tuple[PulseParams, tuple[Ch
             c.volts_per_unit,
             c.positive_sign,
             *_gap_limits(c),
-            c.skew_s + skew,
+            skew,
         )
-        for c, volts, skew in zip(stand.channels, info.volts_per_count[1:], skews[1:], strict=True)
+        for c, volts, skew in zip(
+            stand.channels, info.volts_per_count[1:], _skews(stand, info.skew_s), strict=True
+        )
     )
     return pulse, channels
+
+
+def _skews(stand: Stand, skew_s: Sequence[float]) -> tuple[float, ...]:
+    """By probe: the stand file's skew (filters, say) and the source's own (an input after the other)."""
+    own = tuple(skew_s)[1:] or (0.0,) * len(stand.channels)
+    return tuple(c.skew_s + s for c, s in zip(stand.channels, own, strict=True))

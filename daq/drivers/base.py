@@ -139,8 +139,9 @@ class Driver(ABC, Generic[OptionsT]):
 
     It MAY set ``verbs`` and override ``_act(verb, args)`` (called by ``act`` under ``_lock``, which
     ``_read`` must take around what both touch, never while it waits); MAY override ``_prepare()``
-    (called once, at the end of ``__init__``; no I/O); MAY set ``paces_itself`` (False = it delivers as
-    fast as it is read) and ``silence_limit_s``. It overrides no public method.
+    (called once, at the end of ``__init__``; no I/O) and the class method ``_connected()`` (called by
+    ``connected``; opens nothing); MAY set ``paces_itself`` (False = it delivers as fast as it is read) and
+    ``silence_limit_s``. It overrides no public method.
     """
 
     name: ClassVar[str]
@@ -255,6 +256,24 @@ class Driver(ABC, Generic[OptionsT]):
                     listed = "; ".join(f"{key}: {text}" for key, text in sentences(error))
                     raise Refusal(f"Source {self.name} cannot {verb} like that. {listed}") from error
 
+    @classmethod
+    def connected(cls) -> list[tuple[str, str]]:
+        """Sources of this kind found here: (what to write in the stand file, what it says of itself).
+
+        Raises DriverError when nothing can be found out (a library or a driver is missing).
+        """
+        try:
+            return cls._connected()
+        except DriverError:
+            raise
+        except Exception as error:
+            raise DriverError(
+                f"What is connected for the driver {cls.name} cannot be found out: "
+                f"{type(error).__name__}: {error}.",
+                "Look into the stand file's template for how a source is named.",
+                kind="no_driver",
+            ) from error
+
     # --- what a driver overrides ---------------------------------------------------------------------
 
     @abstractmethod
@@ -271,6 +290,10 @@ class Driver(ABC, Generic[OptionsT]):
 
     def _prepare(self) -> None:
         """Set up own attributes."""
+
+    @classmethod
+    def _connected(cls) -> list[tuple[str, str]]:
+        return []
 
     # --- what a driver uses --------------------------------------------------------------------------
 

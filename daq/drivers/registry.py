@@ -22,9 +22,13 @@ from daq.drivers.problems import did_you_mean, sentences
 
 GROUP = "revmark.drivers"
 BUILT_IN: dict[str, str] = {
+    "daqmx": "daq.drivers.daqmx:DaqmxDriver",
     "replay": "daq.drivers.replay:ReplayDriver",
+    "serial": "daq.drivers.serial_driver:SerialDriver",
     "simulated": "daq.drivers.simulated:SimulatedDriver",
 }
+PACKAGES = {"serial": "pyserial"}
+"""The package to install where it is not called like the module it brings."""
 AnyDriver = Driver[Any]
 
 
@@ -95,9 +99,10 @@ def _load(name: str, target: str) -> type[AnyDriver]:
     try:
         found = getattr(importlib.import_module(module), attribute)
     except ModuleNotFoundError as error:
+        package = PACKAGES.get(error.name or "", error.name)
         raise DriverError(
-            f"Driver {name!r} needs the library {error.name!r}, which is not installed.",
-            f"Install it in revmark's environment: python -m pip install {error.name}.",
+            f"Driver {name!r} needs the library {package!r}, which is not installed.",
+            f"Install it in revmark's environment: python -m pip install {package}.",
             kind="no_driver",
             retryable=False,
         ) from error

@@ -30,7 +30,9 @@ def keys(section: str) -> dict[str, list[str]]:
 @pytest.mark.parametrize(
     ("key", "value"),
     [
-        ("Type", "exec"),
+        ("Type", "notify"),  # issue 3, point 6
+        ("NotifyAccess", "main"),
+        ("WatchdogSec", "10"),
         ("RuntimeDirectory", "revmark"),
         ("RuntimeDirectoryMode", "2750"),  # issue 2, point 8
         ("StateDirectory", "revmark"),

@@ -19,17 +19,25 @@ def stand_of(name: str) -> Stand:
     return check_stand(FOLDER / f"{name}.toml", options_problems)
 
 
-def test_there_is_a_template_for_each_driver_of_ours() -> None:
-    assert set(template_names()) == {"replay", "simulated"} <= set(driver_names())
+def test_a_template_is_named_after_its_driver() -> None:
+    """``daqmx-usb``: driver and device; a driver may have several."""
+    drivers = {name: stand_of(name).source.driver for name in template_names()}
+    assert all(name.partition("-")[0] == driver for name, driver in drivers.items())
+    assert {"replay", "simulated", "daqmx"} <= set(drivers.values()) <= set(driver_names())
+
+
+@pytest.mark.parametrize("name", ["replay", "simulated"])
+def test_a_stand_without_a_device_is_quick_and_has_a_store_of_its_own(name: str) -> None:
+    stand = stand_of(name)
+    assert stand.steadiness_keys.preset == "small"
+    assert "pace" in stand.source.options
+    assert stand.store_path.name == f"{name}-{name}.sqlite"
 
 
 @pytest.mark.parametrize("name", template_names())
 def test_a_template_is_right_and_commented(name: str) -> None:
     stand = stand_of(name)
-    assert stand.source.driver == name
-    assert stand.steadiness_keys.preset == "small"
-    assert "pace" in stand.source.options
-    assert stand.store_path.name == f"{name}-{name}.sqlite"
+    assert stand.channels
     text = template_text(name)
     keys = [line for line in text.splitlines() if " = " in line and not line.startswith("#")]
     assert sum("#" in line for line in keys) > len(keys) / 2

@@ -2,12 +2,19 @@
 
 from __future__ import annotations
 
+import sys
 import threading
+from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
 
 from daq.drivers.base import ChannelPlan, ProbePlan, PulsePlan
+
+sys.path.insert(0, str(Path(__file__).parent / "ni"))  # for ni_kit
+sys.path.insert(0, str(Path(__file__).parent / "serial"))  # for digitizer_kit
+
+from ni_kit import DeviceServer, world
 
 
 class FakeClock:
@@ -42,3 +49,11 @@ def plan() -> ChannelPlan:
 @pytest.fixture
 def recordings() -> Path:
     return Path(__file__).parent.parent / "recordings"
+
+
+@pytest.fixture(scope="session")
+def device_server() -> Iterator[DeviceServer]:
+    """A device server of the daqmx driver, one for all that do not break it."""
+    server = DeviceServer(world())
+    yield server
+    server.close()

@@ -1,8 +1,11 @@
 """Every registered driver keeps every rule; and the rules catch a driver that does not."""
 
+import digitizer_kit
+import ni_kit
 import numpy as np
 import pytest
 
+from daq.clock import SystemClock
 from daq.drivers import conformance
 from daq.drivers.base import Chunk, Driver, DriverOptions, SourceInfo
 from daq.drivers.conformance import RULES, Finding, Subject
@@ -14,24 +17,62 @@ def lose_half_a_second(driver):
     return 6400  # 0.5 s at 12,800 samples a second
 
 
-def simulated(plan, clock, recordings):
-    return Subject(lambda: make_driver("simulated", {}, plan, clock=clock), lose=lose_half_a_second)
+def simulated(plan, clock, recordings, request):
+    return Subject(lambda: make_driver("simulated", {}, plan, clock=clock), lose=lose_half_a_second), clock
 
 
 def replay(pace):
     options = {"files": ["fan-O.wav"], "full_scale": "30 V", "pace": pace}
 
-    def subject(plan, clock, recordings):
-        return Subject(
+    def subject(plan, clock, recordings, request):
+        found = Subject(
             lambda: make_driver("replay", options, plan, clock=clock, folder=recordings),
             start=("next", {"file": "fan-O.wav"}),
             lose=None,  # a file has no gaps
         )
+        return found, clock
+
+    return subject
+
+
+def daqmx(plan, clock, recordings, request):
+    """Against the device server of tests/drivers/ni, on the real clock."""
+    server = request.getfixturevalue("device_server")
+    server.renew()
+
+    def lose(driver):
+        server.verb("short", 100)  # a read that comes back short is a loss
+        return 100
+
+    return Subject(lambda: ni_kit.driver(server), lose=lose), SystemClock()
+
+
+def serial(lines):
+    """A digitizer on a wire of tests/drivers/serial, in pieces of 0.07 s, on the real clock."""
+
+    def subject(plan, clock, recordings, request):
+        port = request.getfixturevalue("tmp_path") / "port"
+        wire = digitizer_kit.SocketWire() if lines else digitizer_kit.PtyWire(port)
+        rotor = digitizer_kit.Rotor(rate_hz=1000.0 if lines else 12_800.0)
+        scans = round(0.07 * rotor.rate_hz)
+        digitizer = digitizer_kit.Digitizer(rotor, scans=scans, lines=8 * lines, every_s=0.1)
+        sender = digitizer_kit.Sender(wire, digitizer)
+        request.addfinalizer(sender.close)
+        options = {"port": wire.url, "channels": 3, "codec": "lines" if lines else "binary"}
+        wires, clock = digitizer_kit.plan(), SystemClock()
+        found = Subject(
+            lambda: make_driver("serial", options, wires, clock=clock),
+            lose=lambda driver: sender.swallow(2) * digitizer.scans,
+        )
+        return found, clock
 
     return subject
 
 
 ENTRIES = {
+    ("serial", "frames on a pseudo-terminal"): serial(lines=False),
+    ("serial", "lines on a socket"): serial(lines=True),
+    ("daqmx", "device server"): daqmx,
     ("simulated", "real pace"): simulated,
     ("replay", "real pace"): replay("real"),
     ("replay", "fast"): replay("fast"),
@@ -46,8 +87,9 @@ def test_every_registered_driver_has_an_entry():
 
 @pytest.mark.parametrize("rule", RULES, ids=lambda rule: rule.__name__)
 @pytest.mark.parametrize("entry", ENTRIES, ids=" ".join)
-def test_rule_is_kept(entry, rule, plan, clock, recordings):
-    finding = conformance.check(rule, ENTRIES[entry](plan, clock, recordings), clock)
+def test_rule_is_kept(entry, rule, plan, clock, recordings, request):
+    subject, clock = ENTRIES[entry](plan, clock, recordings, request)
+    finding = conformance.check(rule, subject, clock)
     assert finding.kept, finding.problem
     assert bool(finding.note) == ((entry[0], rule.__name__) in UNSHOWN)
 

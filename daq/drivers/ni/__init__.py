@@ -1,0 +1,1 @@
+"""The parts of the ``daqmx`` driver: options, troubles in words, session, task, counts, watch."""

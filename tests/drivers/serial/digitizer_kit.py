@@ -96,12 +96,16 @@ class Rotor:
     speed_hz: float = 24.7
     begin_turn: float = 0.35
     noise_v: float = 0.0
+    turning: bool = True
+    """False: it stands still half a turn from the mark, probes at their gaps."""
 
     def turns(self, at: NDArray[np.float64]) -> NDArray[np.float64]:
         return at * self.speed_hz / self.rate_hz + self.begin_turn
 
     def edges(self, begin: float, end: float) -> list[float]:
         """Positions with begin < position <= end, in samples."""
+        if not self.turning:
+            return []
         first = int(np.floor(self.turns(np.array([begin]))[0])) + 1
         last = int(np.floor(self.turns(np.array([end]))[0]))
         per = self.rate_hz / self.speed_hz
@@ -110,7 +114,7 @@ class Rotor:
     def volts(self, first: int, scans: int) -> NDArray[np.float64]:
         """Pulse and two probes."""
         at = np.arange(first, first + scans, dtype=np.float64)
-        turns = self.turns(at)
+        turns = self.turns(at) if self.turning else np.full(scans, 0.5)
         per = self.rate_hz / self.speed_hz
         ramp = 3.0  # samples from high to low
         since = (turns - np.round(turns)) * per  # samples from the nearest edge
@@ -119,7 +123,8 @@ class Rotor:
         out = [-8.0 - 7.0 * down]
         for um, lag, gap in zip(UM_PK, LAG_DEG, GAP_V, strict=True):
             angle = 2 * np.pi * turns - np.radians(lag)
-            out.append(gap + VOLTS_PER_UM * (um * np.cos(angle) + 0.2 * um * np.cos(2 * angle + 1.0)))
+            moved = um * np.cos(angle) + 0.2 * um * np.cos(2 * angle + 1.0)
+            out.append(gap + VOLTS_PER_UM * moved * self.turning)
         volts = np.stack(out, axis=1)
         if self.noise_v:
             volts += np.random.default_rng(first + 1).normal(0, self.noise_v, volts.shape)

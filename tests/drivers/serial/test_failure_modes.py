@@ -41,6 +41,7 @@ ROWS: dict[str, tuple[str, ...] | str] = {
         "test_serial_driver.py::test_the_wrong_digitizer_after_a_replug_may_be_exchanged_again",
         "test_serial_driver.py::test_a_digitizer_started_anew_is_opened_anew",
         "test_link.py::test_a_name_that_stays_with_the_device_is_offered",
+        "test_daemon.py::test_a_job_through_the_driver_with_faults_in_the_middle",
     ),
     "7 driver or part missing, wrong build": (
         "test_link.py::test_without_pyserial_the_hint_names_the_right_package",

@@ -209,6 +209,7 @@ class _Workspace:
             self._tile = np.tile(reference, TILE)
         y = self._y[:padded]
         y[:frames] = counts
+        y[frames:] = 0.0  # fresh memory may hold infinities, and their difference warns
         tiles = y.reshape(-1, TILE * columns)
         tiles -= self._tile
         y[frames:] = 0.0

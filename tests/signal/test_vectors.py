@@ -218,3 +218,23 @@ def test_the_stated_covariance_covers_coloured_noise() -> None:
     rng = np.random.default_rng(12)
     noise = scipy.signal.lfilter([1], [1, -0.98], rng.normal(0, 1, (6096, 1500)), axis=0)[2000:]
     assert 0.92 <= coverage(np.asarray(noise)) <= 0.99
+
+
+def test_padding_of_fresh_memory_is_never_computed_with(monkeypatch):
+    """Rows beyond the samples come from fresh memory; an infinity there must not warn or reach a sum."""
+    real = np.empty
+
+    def soiled(shape, *rest, **more):
+        made = real(shape, *rest, **more)
+        if made.dtype == np.float64:
+            made.fill(np.inf)
+        return made
+
+    monkeypatch.setattr(np, "empty", soiled)
+    sums = Accumulator((1,))
+    fractions = np.arange(100) / 25 % 1.0
+    counts = np.round(1000 * np.cos(2 * np.pi * fractions)).astype(np.int16)[:, None]
+    sums.add(fractions, counts)
+    found = sums.solve()
+    assert found is not None
+    assert abs(found.value(1)[0]) == pytest.approx(1000.0, abs=0.5)

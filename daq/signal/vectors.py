@@ -209,7 +209,7 @@ class _Workspace:
             self._tile = np.tile(reference, TILE)
         y = self._y[:padded]
         y[:frames] = counts
-        y[frames:] = 0.0  # fresh memory may hold infinities, and their difference warns
+        y[frames:] = 0.0  # fresh memory may hold signalling NaNs, and arithmetic on them warns
         tiles = y.reshape(-1, TILE * columns)
         tiles -= self._tile
         y[frames:] = 0.0

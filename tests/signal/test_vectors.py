@@ -221,18 +221,18 @@ def test_the_stated_covariance_covers_coloured_noise() -> None:
 
 
 def test_padding_of_fresh_memory_is_never_computed_with(monkeypatch):
-    """Rows beyond the samples come from fresh memory; an infinity there must not warn or reach a sum."""
+    """Rows beyond the samples come from fresh memory; a signalling NaN there must not warn or reach a sum."""
     real = np.empty
 
     def soiled(shape, *rest, **more):
         made = real(shape, *rest, **more)
         if made.dtype == np.float64:
-            made.fill(np.inf)
+            made.view(np.uint64).fill(0x7FF0000000000001)
         return made
 
     monkeypatch.setattr(np, "empty", soiled)
     sums = Accumulator((1,))
-    fractions = np.arange(100) / 25 % 1.0
+    fractions = np.arange(101) / 25 % 1.0
     counts = np.round(1000 * np.cos(2 * np.pi * fractions)).astype(np.int16)[:, None]
     sums.add(fractions, counts)
     found = sums.solve()

@@ -65,7 +65,8 @@ def check(name: str, *, file: Path, never_silent: bool, as_json: bool) -> int:
     """Try every rule of the contributors' guide on the driver NAME.
 
     The source is opened, read and closed once for each rule. A loss is provoked only where the driver can be
-    asked for one.
+    asked for one (the verb fault); else losses that come by themselves are looked at. "not seen": the rule
+    had nothing to check. Ends with 1 when a rule is broken.
     """
     from config.stand import check_stand
     from daq.clock import SystemClock

@@ -2,19 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from typing import Any
 
 from config.errors import Refusal
 from config.stand import Stand
 from daq.clock import Clock
 from daq.drivers import conformance
+from daq.drivers.base import SourceInfo
 from daq.drivers.conformance import Finding, Subject
 from daq.drivers.registry import AnyDriver, driver_class, make_driver
 from daq.setup import channel_plan
 
 LOSS_S = 0.5
-"""Length of the loss that a driver with the verb ``fault`` is asked for."""
+"""Length of the loss that a driver with the verb ``fault`` is asked for (``kind="dropout"``)."""
 
 
 def check_driver(name: str, stand: Stand, clock: Clock, *, falls_silent: bool = True) -> list[Finding]:
@@ -28,17 +29,15 @@ def check_driver(name: str, stand: Stand, clock: Clock, *, falls_silent: bool = 
             f"The stand file {stand.file.name} uses the driver {stand.source.driver!r}, not {name!r}.",
             f"Name a stand file whose source has driver = {name!r}.",
         )
-    subject = subject_of(stand, clock, falls_silent=falls_silent)
-    driver = subject.make()
+    driver = _maker(stand, clock)()
     try:
-        driver.open()
+        info = driver.open()
     finally:
         driver.close()
-    return conformance.run(subject, clock)
+    return conformance.run(_subject(stand, clock, info, falls_silent=falls_silent), clock)
 
 
-def subject_of(stand: Stand, clock: Clock, *, falls_silent: bool = True) -> Subject:
-    """What the suite needs to know of a stand's driver, as far as its verbs tell it."""
+def _maker(stand: Stand, clock: Clock) -> Callable[[], AnyDriver]:
 
     def make() -> AnyDriver:
         source = stand.source
@@ -46,11 +45,16 @@ def subject_of(stand: Stand, clock: Clock, *, falls_silent: bool = True) -> Subj
             source.driver, source.options, channel_plan(stand), clock=clock, folder=stand.folder
         )
 
+    return make
+
+
+def _subject(stand: Stand, clock: Clock, info: SourceInfo, *, falls_silent: bool) -> Subject:
+    """What the suite needs to know of a stand's driver, as far as its verbs tell it."""
     verbs = driver_class(stand.source.driver).verbs
     return Subject(
-        make,
+        _maker(stand, clock),
         start=_start(verbs, stand.source.options),
-        lose=_lose if "fault" in verbs else None,
+        lose=_losing(info.rate_hz) if "fault" in verbs else None,
         falls_silent=falls_silent,
     )
 
@@ -63,6 +67,9 @@ def _start(verbs: tuple[str, ...], options: Mapping[str, Any]) -> tuple[str, Map
     return "next", {"file": files[0]}
 
 
-def _lose(driver: AnyDriver) -> int:
-    driver.act("fault", kind="dropout", seconds=LOSS_S)
-    return round(LOSS_S * float(driver.options.rate_hz))
+def _losing(rate_hz: float) -> Callable[[AnyDriver], int]:
+    def lose(driver: AnyDriver) -> int:
+        driver.act("fault", kind="dropout", seconds=LOSS_S)
+        return round(LOSS_S * rate_hz)
+
+    return lose

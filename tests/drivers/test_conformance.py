@@ -1,5 +1,7 @@
 """Every registered driver keeps every rule; and the rules catch a driver that does not."""
 
+import dataclasses
+
 import digitizer_kit
 import ni_kit
 import numpy as np
@@ -190,4 +192,121 @@ def test_a_driver_that_delivers_nonsense_is_caught(plan, clock):
 def test_a_loss_that_cannot_be_provoked_is_said_not_skipped(plan, clock):
     subject = Subject(lambda: Good(DriverOptions(), plan, clock=clock))
     finding = conformance.check(conformance.loss_is_counted, subject, clock)
-    assert finding == Finding("loss_is_counted", note="a loss cannot be provoked")
+    assert finding == Finding(
+        "loss_is_counted", note="a loss cannot be provoked, and none came by itself within 3 s"
+    )
+
+
+# --- streams: blocks as long as the rules' own time-out, and losses that come by themselves ------------
+
+
+class Stream(Good):
+    """A block every ``block_s`` seconds, of which every fifth follows a loss of ``own_loss`` samples."""
+
+    block_s = 0.05
+    own_loss = 0
+
+    def _open(self):
+        self.due_s = self.clock.monotonic() + self.block_s
+        return super()._open()
+
+    def _read(self, timeout_s):
+        wait_s = self.due_s - self.clock.monotonic()
+        if self._pause(min(wait_s, timeout_s)) or wait_s > timeout_s:
+            return None
+        return self.delivered()
+
+    def delivered(self):
+        self.due_s += self.block_s
+        self.begun += 1
+        lost = self.own_loss if self.begun % 5 == 0 else 0
+        return Chunk(np.zeros((self.frames, self.columns), "int16"), lost_before=lost)
+
+
+class AlwaysReady(Stream):
+    def _read(self, timeout_s):
+        self._pause(0.001)
+        return self.delivered()
+
+
+class WaitsForItsBlock(Stream):
+    def _read(self, timeout_s):
+        self._pause(self.due_s - self.clock.monotonic())
+        return self.delivered()
+
+
+class Loses(Stream):
+    own_loss = 25
+
+
+class LosesUncounted(Loses):
+    """Takes what the base has counted out of its counters again."""
+
+    def _read(self, timeout_s):
+        self._count.lost_samples = 0
+        return super()._read(timeout_s)
+
+    def _block(self, chunk):
+        block = super()._block(chunk)
+        self._count.lost_samples = 0
+        return block
+
+
+class LosesInOneSegment(Loses):
+    def _block(self, chunk):
+        block = super()._block(chunk)
+        return dataclasses.replace(block, segment=0)
+
+
+def tried(kind, rule, plan, clock):
+    begin_s = clock.monotonic()
+    finding = conformance.check(rule, Subject(lambda: kind(DriverOptions(), plan, clock=clock)), clock)
+    return finding, clock.monotonic() - begin_s
+
+
+@pytest.mark.parametrize("block_s", [0.02, 0.05, 0.1, 0.2])
+def test_a_block_as_long_as_the_time_out_keeps_the_time_out(block_s, plan, clock, monkeypatch):
+    monkeypatch.setattr(Stream, "block_s", block_s)
+    finding, took_s = tried(Stream, conformance.time_out_is_kept, plan, clock)
+    assert finding == Finding("time_out_is_kept")
+    assert took_s < 1.0
+
+
+def test_a_time_out_that_cannot_be_seen_is_said_in_seconds(plan, clock):
+    finding, took_s = tried(AlwaysReady, conformance.time_out_is_kept, plan, clock)
+    assert finding.kept
+    assert "no read of 0.01 s came back empty within 3 s" in finding.note
+    assert "--never-silent" in finding.note
+    assert took_s < 4.0
+
+
+def test_a_driver_that_waits_for_its_block_breaks_the_time_out(plan, clock):
+    finding, took_s = tried(WaitsForItsBlock, conformance.time_out_is_kept, plan, clock)
+    assert "wait for a block instead of coming back empty: 0.050 s each" in finding.problem
+    assert took_s < 4.0
+
+
+def test_a_source_without_samples_is_given_up_in_seconds(plan, clock, monkeypatch):
+    monkeypatch.setattr(Stream, "block_s", 1e6)
+    finding, took_s = tried(Stream, conformance.stops_in_time, plan, clock)
+    assert finding.problem == "only 0 blocks came within 20 s"
+    assert took_s < 21.0
+
+
+@pytest.mark.parametrize(
+    ("kind", "problem"),
+    [
+        (Loses, ""),
+        (LosesUncounted, "the sample numbers jump by 25 where the counters grow by 0"),
+        (LosesInOneSegment, "a loss of 25 samples started no segment"),
+    ],
+)
+def test_a_loss_that_comes_by_itself_is_looked_at(kind, problem, plan, clock):
+    finding, took_s = tried(kind, conformance.loss_is_counted, plan, clock)
+    assert finding == Finding("loss_is_counted", problem)
+    assert took_s < 1.0
+
+
+def test_a_check_for_losses_of_their_own_ends(plan, clock):
+    _, took_s = tried(Stream, conformance.loss_is_counted, plan, clock)
+    assert 3.0 <= took_s < 4.0

@@ -24,7 +24,12 @@ def group() -> None:
 @group.command("new")
 @click.argument("file", type=click.Path(path_type=Path))
 @click.option(
-    "--like", "template", required=True, type=click.Choice(template_names()), help="The stand to start from."
+    "--like",
+    "template",
+    required=True,
+    type=click.Choice(template_names()),
+    metavar="NAME",
+    help=f"The stand to start from: {', '.join(template_names())}.",
 )
 def new(file: Path, template: str) -> None:
     """Write a commented stand file to FILE. Nothing is ever overwritten."""

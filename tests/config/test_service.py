@@ -39,6 +39,7 @@ def keys(section: str) -> dict[str, list[str]]:
         ("StateDirectoryMode", "2770"),  # issue 2, point 8
         ("UMask", "0007"),
         ("Restart", "on-failure"),
+        ("RestartSec", "2"),  # with it a replugged device that needs a new process is back within 10 s
         ("RestartPreventExitStatus", "78"),  # HOUSE.md: 78 = configuration
         ("KillSignal", "SIGTERM"),
         ("User", "revmark"),

@@ -90,6 +90,9 @@ COMMANDS = (
 )  # fmt: skip
 
 
+RESTART_S = 2.0
+
+
 class Bay:
     """A stand on the device server, and its daemon."""
 
@@ -236,5 +239,16 @@ def test_a_device_that_needs_a_new_process_ends_the_daemon_to_get_one(tmp_path: 
     bay.server.verb("remove")
     bay.until(lambda: "is not connected" in bay.log, "the device to be missed")
     bay.server.verb("remove", "half")
+    replugged_s = time.monotonic()
     assert bay.daemon.wait(LIMIT_S) == 75, bay.log
     assert "does not answer this process" in bay.log
+    bay.server.verb("replug")  # a new process sees the device whole
+    time.sleep(RESTART_S)  # as the service manager waits (config/service/revmark.service)
+    (bay.folder / "serve.log").write_bytes(b"")
+    with (bay.folder / "serve.log").open("ab") as out:
+        bay.daemon = subprocess.Popen(
+            [sys.executable, "-c", code, "serve"], cwd=bay.folder, env=bay.env, stderr=out
+        )
+    bay.until(lambda: "\nready " in "\n" + bay.log, "the daemon to be ready again")
+    bay.until(lambda: bay.state() == "no pulses", "samples to flow again")
+    assert time.monotonic() - replugged_s < 10.0

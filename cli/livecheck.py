@@ -45,9 +45,17 @@ def _lines(found: LiveReport) -> Iterator[str]:
 
 def _pulse(found: LiveReport) -> str:
     p = found.pulse
+    if p.stamped:
+        rows = [
+            ("input", f"{p.input}: hardware edge stamps"),
+            ("pulses a minute", f"{p.pulses_per_minute:.1f}"),
+            ("missed, double", f"{p.missed}, {p.doubles}"),
+            ("samples a turn", finite(p.samples_per_turn, ".1f")),
+        ]
+        return table(rows, [p.channel, ""])
     rows = [
         ("input", p.input),
-        ("volts", f"{p.lowest_v:.2f} to {p.highest_v:.2f}"),
+        ("volts", f"{finite(p.lowest_v, '.2f')} to {finite(p.highest_v, '.2f')}"),
         ("pulses a minute", f"{p.pulses_per_minute:.1f}"),
         ("level chosen", f"{finite(p.level_v, '.2f')} V, pulse height {finite(p.height_v, '.2f')} V"),
         ("pulse width", f"{finite(p.width_deg, '.1f')} deg"),

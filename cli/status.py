@@ -44,6 +44,7 @@ def _lines(answer: Json, zone: tzinfo) -> list[str]:
     if answer.get("stand_file_changed"):
         lines += _below("the stand file has changed since the daemon read it; a restart takes it up")
     lines.append(f"source   {_word(live, 'source')}")
+    lines += [line for note in live.get("notes", ()) for line in _below(note)]
     lines.append(f"store    {_word(answer, 'store')}: {_word(live, 'store')}")
     if live.get("held_records"):
         lines += _below(f"held in memory until it writes again: {live['held_records']} records")

@@ -139,6 +139,9 @@ class Analysis:
         return heeded
 
     def _heed(self, notice: Notice) -> None:
+        if notice.kind == "remark":
+            self._recorder.event("source_remark", notice.text)
+            return
         if notice.kind == "ended":
             self._close(self._watch.source_ended(notice.text))
         elif notice.kind == "broken":

@@ -59,8 +59,10 @@ class PulseLook:
 
     channel: str
     input: str
-    lowest_v: float
-    highest_v: float
+    stamped: bool
+    """Edges stamped by hardware: volts, level, height, width and edge of the pulse are None then."""
+    lowest_v: float | None
+    highest_v: float | None
     pulses_per_minute: float
     level_v: float | None
     height_v: float | None
@@ -78,16 +80,23 @@ class LiveReport:
     rate_hz: float
     seconds: float
     lost_samples: int
+    left_out: int
+    """Of these: what the source left out itself."""
+    remarks: tuple[str, ...]
+    """What the driver found wrong with what came."""
     pulse: PulseLook
     channels: tuple[ChannelLook, ...]
 
     @property
     def trouble(self) -> tuple[str, ...]:
         """Everything that is wrong, a sentence each with what to do."""
-        found = [*self.pulse.trouble, *(t for c in self.channels for t in c.trouble)]
-        if self.lost_samples:
+        found = [*self.remarks, *self.pulse.trouble, *(t for c in self.channels for t in c.trouble)]
+        if lost := self.lost_samples - self.left_out:
+            found.append(f"{lost} samples were lost while looking. Lower the rate or free the PC.")
+        if self.left_out:
             found.append(
-                f"{self.lost_samples} samples were lost while looking. Lower the rate or free the PC."
+                f"The source itself left out {self.left_out} samples while looking: its buffer was full. "
+                "Lower its rate, or give it a faster line."
             )
         return tuple(found)
 
@@ -104,11 +113,11 @@ def look(driver: AnyDriver, stand: Stand, clock: Clock, seconds: float) -> LiveR
     try:
         wait_s = _set_going(driver)
         blocks = _longest_stretch(_read(driver, clock, wait_s + seconds), seconds * info.rate_hz)
-        lost = driver.counters.lost_samples
+        count, remarks = driver.counters, driver.remarks()
     finally:
         driver.close()
     counts = np.concatenate([b.counts for b in blocks])
-    return report(counts, stand, info, lost)
+    return report(counts, stand, info, count.lost_samples, count.left_out, remarks)
 
 
 def _set_going(driver: AnyDriver) -> float:
@@ -165,7 +174,14 @@ def _longest_stretch(blocks: Iterator[Block], most_samples: float) -> list[Block
 # --- what the samples say ------------------------------------------------------------------------------
 
 
-def report(counts: NDArray[Any], stand: Stand, info: SourceInfo, lost: int) -> LiveReport:
+def report(
+    counts: NDArray[Any],
+    stand: Stand,
+    info: SourceInfo,
+    lost: int,
+    left_out: int = 0,
+    remarks: tuple[str, ...] = (),
+) -> LiveReport:
     """The report of samples without a gap. ``counts`` has shape (frames, 1 + probes)."""
     pulse, channels = signal_params(stand, info)
     made = measure(counts, pulse, channels, info.rate_hz)
@@ -174,6 +190,8 @@ def report(counts: NDArray[Any], stand: Stand, info: SourceInfo, lost: int) -> L
         info.rate_hz,
         len(counts) / info.rate_hz,
         lost,
+        left_out,
+        remarks,
         _pulse(counts[:, 0], pulse, stand, info),
         tuple(_channels(counts, channels, stand, info, made)),
     )
@@ -184,12 +202,22 @@ def _pulse(column: NDArray[Any], params: PulseParams, stand: Stand, info: Source
     trigger = trigger_of(column, params)
     low, high = float(column.min()) * volts, float(column.max()) * volts
     name, wire = stand.pulse.name, stand.pulse.input
+    if trigger is None and info.stamped:
+        trouble = (
+            f"{name}: no edge stamps among what came. Turn the rotor; then check the sensor's gap at the "
+            "rotor mark, its supply, and the trigger level of the digitizer."
+        )
+        return PulseLook(
+            name, wire, info.stamped, None, None, 0.0, None, None, None, 0, 0, None, None, (trouble,)
+        )
     if trigger is None:
         trouble = (
             f"{name} shows no pulses between {low:.2f} V and {high:.2f} V. Turn the rotor; then check the "
             "sensor's gap at the rotor mark, its supply and its input."
         )
-        return PulseLook(name, wire, low, high, 0.0, None, None, None, 0, 0, None, None, (trouble,))
+        return PulseLook(
+            name, wire, info.stamped, low, high, 0.0, None, None, None, 0, 0, None, None, (trouble,)
+        )
     finder = EdgeFinder(params, info.rate_hz, trigger)
     edges = finder.feed(column, 0)
     return _pulses(column, edges, finder, trigger, stand, info)
@@ -206,23 +234,27 @@ def _pulses(
     volts, name = info.volts_per_count[0], stand.pulse.name
     turns = turns_of(edges)
     per_turn = float(np.median(turns.periods)) if len(edges) > 1 else None
-    width = None if per_turn is None else _width_deg(column, edges, trigger, stand.pulse.edge)
-    on_edge = _samples_on_edge(column, edges, finder, trigger) if len(edges) else None
+    seen = not info.stamped
+    width = _width_deg(column, edges, trigger, stand.pulse.edge) if seen and per_turn is not None else None
+    on_edge = _samples_on_edge(column, edges, finder, trigger) if seen and len(edges) else None
     minute = 60 * info.rate_hz / per_turn if per_turn else 60 * len(edges) * info.rate_hz / len(column)
     return PulseLook(
         name,
         stand.pulse.input,
-        float(column.min()) * volts,
-        float(column.max()) * volts,
+        info.stamped,
+        float(column.min()) * volts if seen else None,
+        float(column.max()) * volts if seen else None,
         minute,
-        trigger.level * volts,
-        abs(trigger.height * volts),
+        trigger.level * volts if seen else None,
+        abs(trigger.height * volts) if seen else None,
         width,
         turns.missed,
         turns.doubles,
         per_turn,
         on_edge,
-        tuple(_pulse_trouble(name, turns.missed, turns.doubles, per_turn, width, on_edge)),
+        tuple(
+            _pulse_trouble(name, turns.missed, turns.doubles, per_turn, width, on_edge, stamped=info.stamped)
+        ),
     )
 
 
@@ -252,10 +284,13 @@ def _pulse_trouble(
     per_turn: float | None,
     width_deg: float | None,
     on_edge: float | None,
+    *,
+    stamped: bool,
 ) -> Iterator[str]:
     if missed or doubles:
+        level = "the digitizer's trigger level" if stamped else "the level"
         yield (
-            f"{name}: {missed} pulses missed, {doubles} double. Set the level to the middle of the pulse and "
+            f"{name}: {missed} pulses missed, {doubles} double. Set {level} to the middle of the pulse and "
             "look for scratches or a loose sensor."
         )
     if per_turn is not None and per_turn < FEWEST_PER_TURN:

@@ -27,6 +27,8 @@ RING_S = 20.0
 FIRST_BACK_OFF_S, LONGEST_BACK_OFF_S = 0.5, 5.0
 ACT_WITHIN_S = 10.0
 ROOM_S = 0.2
+REMARK_S = 60.0
+"""A source that says what is wrong with what it delivers is heard so often."""
 
 log = logging.getLogger("revmark.driver")
 
@@ -37,7 +39,7 @@ class Notice:
 
     position: int
     kind: str
-    """``ended``, ``broken`` (ended early by a fault), ``lost`` or ``back``."""
+    """``ended``, ``broken`` (ended early by a fault), ``lost``, ``back`` or ``remark``."""
     text: str
 
 
@@ -53,6 +55,8 @@ class Pump:
         self._trouble = ""
         """Why the source is lost; empty = it is not."""
         self._lost_s = 0.0
+        self._remarks: tuple[str, ...] = ()
+        self._remark_due_s = 0.0
         self.notices: deque[Notice] = deque()
         self.opened = threading.Event()
         self.info: SourceInfo | None = None
@@ -108,7 +112,8 @@ class Pump:
             self._note("back", f"{info.description}, back after {away_s:.0f} s")
         self._trouble = ""
         self.info = info
-        self._board.post(source=info.description)
+        self._remarks, self._remark_due_s = (), 0.0
+        self._board.post(source=info.description, notes=())
         log.info("source open: %s, %.10g samples/s", info.description, info.rate_hz)
         self.opened.set()
 
@@ -122,6 +127,18 @@ class Pump:
             elif came is not None:
                 self._back_off_s = FIRST_BACK_OFF_S
                 self._write(came, stop, beat)
+            self._heed_remarks()
+
+    def _heed_remarks(self) -> None:
+        """What the driver finds wrong with what comes: an event and a note, at most once in ``REMARK_S``."""
+        now_s = self._clock.monotonic()
+        if now_s < self._remark_due_s:
+            return
+        found = self._driver.remarks()
+        if found and found != self._remarks:
+            self._remarks, self._remark_due_s = found, now_s + REMARK_S
+            self._note("remark", " ".join(found))
+            self._board.post(notes=found)
 
     def _write(self, block: Block, stop: threading.Event, beat: Callable[[], None]) -> None:
         assert self.ring is not None, "the ring is made when the source opens"

@@ -97,6 +97,8 @@ class SourceInfo:
     description: str
     skew_s: tuple[float, ...] = ()
     """Delay of each column's sampling after column 0; empty = all sampled together."""
+    stamped: bool = False
+    """Column 0 is drawn from edges that hardware stamped: only where they lie means anything."""
 
 
 @dataclass(slots=True)
@@ -110,6 +112,8 @@ class Counters:
     """Segments that started inside an open source, new files not counted."""
     lost_samples: int = 0
     """Known exactly; what passed while the source was lost is not in it."""
+    left_out: int = 0
+    """Of these: what the source says it left out itself, before anything was sent."""
     errors: int = 0
 
 
@@ -140,8 +144,9 @@ class Driver(ABC, Generic[OptionsT]):
     It MAY set ``verbs`` and override ``_act(verb, args)`` (called by ``act`` under ``_lock``, which
     ``_read`` must take around what both touch, never while it waits); MAY override ``_prepare()``
     (called once, at the end of ``__init__``; no I/O) and the class method ``_connected()`` (called by
-    ``connected``; opens nothing); MAY set ``paces_itself`` (False = it delivers as fast as it is read) and
-    ``silence_limit_s``. It overrides no public method.
+    ``connected``; opens nothing) and ``_remarks()`` (called by ``remarks``, after each read); MAY set
+    ``paces_itself`` (False = it delivers as fast as it is read) and ``silence_limit_s``. It overrides no
+    public method.
     """
 
     name: ClassVar[str]
@@ -219,6 +224,11 @@ class Driver(ABC, Generic[OptionsT]):
                 self.log.warning("source %s lost: %s", self.name, error)
                 raise
 
+    def remarks(self) -> tuple[str, ...]:
+        """What is wrong with what comes since ``open``, although it comes: sentences with what to do."""
+        with self._border("asked what is wrong"):
+            return tuple(self._remarks())
+
     def close(self) -> None:
         """Stop and release the source; again is harmless. Wakes a read in progress, from any thread."""
         self._stop.set()
@@ -290,6 +300,9 @@ class Driver(ABC, Generic[OptionsT]):
 
     def _prepare(self) -> None:
         """Set up own attributes."""
+
+    def _remarks(self) -> Iterator[str]:
+        yield from ()
 
     @classmethod
     def _connected(cls) -> list[tuple[str, str]]:

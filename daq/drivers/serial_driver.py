@@ -18,7 +18,7 @@ from pydantic import Field, ValidationInfo, field_validator
 from config.errors import DriverError
 from daq.drivers.base import ChannelPlan, Chunk, Driver, DriverOptions, EndOfSource, SourceInfo
 from daq.drivers.frames.binary import BinaryCodec
-from daq.drivers.frames.columns import STAMPS, Columns, PulseColumn
+from daq.drivers.frames.columns import LATE_S, STAMPS, Columns, PulseColumn
 from daq.drivers.frames.lines import LineCodec
 from daq.drivers.frames.records import MOST_CHANNELS, VERSION, Codec, Description, Tally
 from daq.drivers.frames.stream import Run, Stream, Trouble
@@ -37,6 +37,8 @@ PACE_S = 0.25
 """How long the line's pace is looked at."""
 REPORT_S = 60.0
 """Damage is logged at most so often."""
+PASSES_WITHIN_S = 1.8
+"""Bytes for so long without samples among them are told with the reason: sooner than mere silence is."""
 CODECS: dict[str, type[BinaryCodec] | type[LineCodec]] = {"binary": BinaryCodec, "lines": LineCodec}
 
 
@@ -99,7 +101,10 @@ class SerialDriver(Driver[SerialOptions]):
         """What came and what was damaged, over all openings."""
         self._link: Link | None = None
         self._ready: deque[Chunk] = deque()
-        self._trouble: Trouble | None = None
+        self._failed: DriverError | None = None
+        """Raised once all that came before it is delivered."""
+        self._before = self._tallied()
+        """What had been counted when the source was opened."""
         self._reported = (0.0, 0, 0)
 
     @classmethod
@@ -110,7 +115,8 @@ class SerialDriver(Driver[SerialOptions]):
 
     def _open(self) -> SourceInfo:
         self._ready.clear()
-        self._trouble = None
+        self._failed = None
+        self._before = self._tallied()
         self._link = self._opened()
         codec: Codec = CODECS[self.options.codec](self.tally)
         self._stream = Stream(codec, self.tally)
@@ -119,23 +125,35 @@ class SerialDriver(Driver[SerialOptions]):
         told, early = self._described(self._link)
         info = self._accepted(told)
         self._take(early)
-        self._heard = self.clock.monotonic(), self.tally.frames, self.tally.bytes
+        self._heard = self.clock.monotonic(), self._tallied()
         self._pace, self._slow = (self.clock.monotonic(), self.tally.bytes), True
         self._reported = self.clock.monotonic(), self.tally.frames, self.tally.damaged
         return info
 
     def _read(self, timeout_s: float) -> Chunk | EndOfSource | None:
-        if not self._ready and self._trouble is None and self._link is not None:
-            data = self._link.receive(timeout_s)
-            self._take(self._stream.feed(data))
-            self._gather(len(data))
-            self._watch_frames()
-            self._report()
+        if not self._ready and self._failed is None and self._link is not None:
+            try:
+                self._receive(self._link, timeout_s)
+            except DriverError as error:
+                self._fail(error)
         if self._ready:
-            return self._ready.popleft()
-        if self._trouble is not None:
-            raise DriverError(self._trouble.cause, self._trouble.remedy, kind=self._trouble.kind)
+            chunk = self._ready.popleft()
+            if chunk.mono_s is not None and chunk.mono_s < self._mono_s:
+                return replace(chunk, mono_s=self._mono_s)
+            return chunk
+        if self._failed is not None:
+            raise self._failed
         return None
+
+    def _receive(self, link: Link, timeout_s: float) -> None:
+        data = link.receive(timeout_s)
+        self._take(self._stream.feed(data))
+        self._gather(len(data))
+        self._watch_frames()
+        self._report()
+
+    def _remarks(self) -> Iterator[str]:
+        return remarks(self.tally, self._before)
 
     def _close(self) -> None:
         if self._link is not None:
@@ -146,9 +164,28 @@ class SerialDriver(Driver[SerialOptions]):
         """Keep what came until it is read; what follows a Trouble is dropped."""
         for item in came:
             if isinstance(item, Trouble):
-                self._trouble = item
+                self._fail(DriverError(item.cause, item.remedy, kind=item.kind))
                 return
-            self._ready.extend(self._columns.chunks(item))
+            self._keep(self._columns.chunks(item))
+            self._heard = self.clock.monotonic(), self._tallied()
+        self._count.left_out = self.tally.left_out
+
+    def _keep(self, chunks: list[Chunk]) -> None:
+        """Chunks wait to be read; those held back for stamps are that much older than now."""
+        if not (held := self._columns.held):
+            self._ready.extend(chunks)
+            return
+        at_s = self.clock.monotonic() - held / self._rate_hz
+        self._ready.extend(replace(chunk, mono_s=at_s) for chunk in chunks)
+
+    def _fail(self, error: DriverError) -> None:
+        """Deliver what was held back, then raise."""
+        self._failed = error
+        self._keep(self._columns.rest())
+
+    def _tallied(self) -> Tally:
+        """A copy of the counts."""
+        return replace(self.tally, reasons=dict(self.tally.reasons))
 
     # --- opening -------------------------------------------------------------------------------------
 
@@ -167,7 +204,7 @@ class SerialDriver(Driver[SerialOptions]):
 
     def _described(self, link: Link) -> tuple[Description, list[Run | Trouble]]:
         """The digitizer's description, and what came after it. Raises DriverError when none comes."""
-        before, until_s = replace(self.tally), self.clock.monotonic() + DESCRIPTION_S
+        before, until_s = self._before, self.clock.monotonic() + DESCRIPTION_S
         while not self._stop.is_set() and self.clock.monotonic() < until_s:
             came = self._stream.feed(link.receive(WAIT_S))
             if self._stream.description is not None:
@@ -194,21 +231,34 @@ class SerialDriver(Driver[SerialOptions]):
                 kind="config",
                 retryable=self._count.opens > 0,
             )
-        if tally.frames == before.frames:
-            return self._garbage(came, tally.damaged - before.damaged, DESCRIPTION_S)
+        if tally.frames == before.frames and tally.undescribed == before.undescribed:
+            return self._garbage(before, DESCRIPTION_S)
         return DriverError(
-            f"The digitizer on {port} sends frames, but no description within {DESCRIPTION_S:g} s.",
+            f"The digitizer on {port} sends {self._pieces}, but no description within {DESCRIPTION_S:g} s"
+            f"{refusals(tally, before)}.",
             "Its program must send one twice a second; see the page of the frame format.",
             kind="protocol",
         )
 
-    def _garbage(self, came: int, damaged: int, seconds: float) -> DriverError:
-        options = self.options
-        return DriverError(
-            f"{options.port} brought {came} bytes in {seconds:.1f} s, but no whole frame among them "
-            f"({damaged} damaged).",
+    @property
+    def _pieces(self) -> str:
+        return "lines" if self.options.codec == "lines" else "frames"
+
+    def _garbage(self, before: Tally, seconds: float) -> DriverError:
+        """Bytes came since ``before``, and no samples passed."""
+        options, tally = self.options, self.tally
+        came, damaged = tally.bytes - before.bytes, tally.damaged - before.damaged
+        what = "no whole frame" if tally.frames == before.frames else "no samples that pass"
+        remedy = (
             f"Check source.options.baud (now {options.baud}) and codec (now {options.codec!r}), and whether "
-            "another program reads the port or probes it (ModemManager, brltty).",
+            "another program reads the port or probes it (ModemManager, brltty)."
+        )
+        if content_refused(tally, before):
+            remedy = "This is a fault in the digitizer's program; see the page of the frame format."
+        return DriverError(
+            f"{options.port} brought {came} bytes in {seconds:.1f} s, but {what} among them "
+            f"({damaged} {self._pieces} refused){refusals(tally, before)}.",
+            remedy,
             kind="protocol",
         )
 
@@ -224,6 +274,7 @@ class SerialDriver(Driver[SerialOptions]):
                 retryable=self._count.opens > 0,
             )
         self._columns, scales = wanted.columns(told, self.tally)
+        self._rate_hz = told.rate_hz
         full = 1 << (told.bits - 1)
         return SourceInfo(
             rate_hz=told.rate_hz,
@@ -232,6 +283,7 @@ class SerialDriver(Driver[SerialOptions]):
             full_scale_counts=(-full, full - 1),
             origin="live",
             description=f"digitizer {told.device or 'without a name'} on {self.options.port}",
+            stamped=wanted.stamped,
         )
 
     # --- watching ------------------------------------------------------------------------------------
@@ -246,13 +298,11 @@ class SerialDriver(Driver[SerialOptions]):
             self._pause(GATHER_S)
 
     def _watch_frames(self) -> None:
-        """Raises DriverError when bytes have come for too long without a whole frame among them."""
-        tally, now_s = self.tally, self.clock.monotonic()
-        heard_s, frames, came = self._heard
-        if tally.frames > frames:
-            self._heard = now_s, tally.frames, tally.bytes
-        elif now_s - heard_s > self.silence_limit_s and tally.bytes > came:
-            raise self._garbage(tally.bytes - came, tally.damaged, now_s - heard_s)
+        """Raises DriverError when bytes have come for too long without samples among them."""
+        heard_s, before = self._heard
+        silent_s = self.clock.monotonic() - heard_s
+        if silent_s > PASSES_WITHIN_S and self.tally.bytes > before.bytes:
+            raise self._garbage(before, silent_s)
 
     def _report(self) -> None:
         """Once a minute: how much was damaged in it."""
@@ -271,14 +321,52 @@ class SerialDriver(Driver[SerialOptions]):
         self._reported = now_s, tally.frames, tally.damaged
 
 
+def content_refused(tally: Tally, before: Tally) -> bool:
+    """True when pieces came whole and were refused for what they say."""
+    whole = tally.malformed + tally.other_version - before.malformed - before.other_version
+    return 2 * whole > tally.damaged + tally.other_version - before.damaged - before.other_version
+
+
+def refusals(tally: Tally, before: Tally) -> str:
+    """The commonest reason why pieces were refused since ``before``, with its count, to end a sentence."""
+    counts = {why: n - before.reasons.get(why, 0) for why, n in tally.reasons.items()}
+    if not any(counts.values()):
+        return ""
+    why = max(counts, key=lambda reason: counts[reason])
+    first = f"; the first was {tally.example!r}" if tally.example and content_refused(tally, before) else ""
+    return f"; most often: {why} ({counts[why]} times){first}"
+
+
+def remarks(tally: Tally, before: Tally) -> Iterator[str]:
+    """What has been wrong since ``before`` with a stream that can be followed, in sentences."""
+    page = "This is a fault in the digitizer's program; see the page of the frame format."
+    if (late := tally.late_stamps - before.late_stamps) > 0:
+        yield (
+            f"{late} once-per-rev stamps came more than {LATE_S:g} s of samples too late and "
+            f"were left out: pulses are missing and the speed may be wrong. {page}"
+        )
+    if (early := tally.early_stamps - before.early_stamps) > 0:
+        yield (
+            f"{early} once-per-rev stamps came more than {LATE_S:g} s of samples too early "
+            f"and were left out: pulses are missing and the speed may be wrong. {page}"
+        )
+    if (close := tally.close_stamps - before.close_stamps) > 0:
+        yield (
+            f"{close} once-per-rev stamps came within a few scans of the one before and were left out. Look "
+            "for scratches, a loose sensor or a trigger level near the noise."
+        )
+    if (refused := tally.malformed - before.malformed) > 0:
+        yield f"{refused} pieces of the stream came whole and were refused{refusals(tally, before)}. {page}"
+
+
 class Wanted:
     """What the stand file wants of a digitizer."""
 
     def __init__(self, options: SerialOptions, channels: ChannelPlan) -> None:
         self._options = options
         self._channels = channels
-        self._stamped = channels.once_per_rev.input == STAMPS
-        self._inputs = channels.inputs[1:] if self._stamped else channels.inputs
+        self.stamped = channels.once_per_rev.input == STAMPS
+        self._inputs = channels.inputs[1:] if self.stamped else channels.inputs
 
     def problems(self, told: Description) -> Iterator[str]:
         """What does not fit, in words."""
@@ -299,7 +387,7 @@ class Wanted:
 
     def _stamp_problems(self, told: Description) -> Iterator[str]:
         pulse = self._channels.once_per_rev
-        if not self._stamped:
+        if not self.stamped:
             return
         if told.edge == "none":
             yield f"the once-per-rev input is {STAMPS!r}, and it stamps no edges"
@@ -314,8 +402,8 @@ class Wanted:
         wired = [self._options.inputs.get(text, InputOptions()) for text in self._inputs]
         scales = [told.volts_per_count[k] * w.divider for k, w in zip(picked, wired, strict=True)]
         pulse = None
-        if self._stamped:
+        if self.stamped:
             falling = told.edge == "falling"
             pulse = PulseColumn(1 << (told.bits - 1), told.rate_hz, falling=falling, tally=tally)
             scales.insert(0, pulse.volts_per_count)
-        return Columns(picked, told, pulse), tuple(scales)
+        return Columns(picked, told, pulse, tally), tuple(scales)

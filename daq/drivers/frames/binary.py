@@ -25,7 +25,7 @@ from daq.drivers.frames.records import (
 )
 
 LONGEST = 8192
-"""Bytes between two delimiters."""
+"""Bytes between two delimiters, which do not count."""
 HEAD = struct.Struct("<BBH")
 DESCRIPTION = struct.Struct("<BBBBd")
 SAMPLES = struct.Struct("<BBHQfHH")
@@ -54,9 +54,11 @@ class BinaryCodec:
             raw = decode(piece)
         except DecodeError:
             self._tally.bad_cobs += 1
+            self._tally.refused("no valid COBS")
             return None
         if len(raw) < SHORTEST or zlib.crc32(raw) != WHOLE:
             self._tally.bad_check += 1
+            self._tally.refused("a wrong CRC-32")
             return None
         return self._checked(raw)
 
@@ -64,6 +66,7 @@ class BinaryCodec:
         version, kind, sequence = HEAD.unpack_from(raw)
         if version != VERSION:
             self._tally.other_version += 1
+            self._tally.refused(f"version {version} of the format")
             return None
         body: Description | Samples | None = None
         if kind == KIND_SAMPLES:
@@ -75,6 +78,8 @@ class BinaryCodec:
             return Frame(sequence, None)
         if body is None:
             self._tally.malformed += 1
+            what = "samples" if kind == KIND_SAMPLES else "a description"
+            self._tally.refused(f"{what} whose lengths or figures are impossible")
             return None
         return Frame(sequence, body)
 

@@ -8,8 +8,10 @@ and what is stored can be measured again. The sample before the edge is ``height
 
 from __future__ import annotations
 
+import math
+from bisect import bisect_left
 from collections import deque
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -28,6 +30,11 @@ PULSE_SAMPLES, PULSE_S = 4, 0.1
 """... at least so many samples, at most so many seconds."""
 PULSE_VOLTS = 5.0
 """The drawn pulse goes from +5 V to -5 V, or back for rising edges."""
+LATE_S = 0.25
+"""Scans are held back so long for stamps that come later than they; FORMAT.md promises it. It is as
+long as a frame may be, so a stamp may come with the frame after its own."""
+MOST_WAITING = 4096
+"""Stamps that wait for their scans."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,7 +75,7 @@ class PulseColumn:
         for edge in edges:
             before, part = divmod(edge, EDGE_UNITS)
             if self._pulses and before <= self._pulses[-1].end:
-                self._tally.bad_edges += 1
+                self._tally.close_stamps += 1
                 continue
             low = PULSE_SAMPLES
             if self._last is not None:
@@ -94,42 +101,87 @@ class PulseColumn:
 class Columns:
     """Picks the channels that the stand file names and draws column 0 where it comes as stamps."""
 
-    def __init__(self, picked: Sequence[int], told: Description, pulse: PulseColumn | None) -> None:
+    def __init__(
+        self, picked: Sequence[int], told: Description, pulse: PulseColumn | None, tally: Tally
+    ) -> None:
         """``picked``: index of each column's channel; without column 0 when ``pulse`` draws it."""
         self._picked = list(picked)
         self._as_sent = self._picked == list(range(told.channels))
         self._pulse = pulse
-        self._held: NDArray[Any] | None = None
+        self._tally = tally
+        self._patience = math.ceil(LATE_S * told.rate_hz) + 1
+        self._held: deque[NDArray[Any]] = deque()
+        self._first, self._begin, self._end = 0, 0, 0
+        """Counters: of the segment's first scan, of the first one held, and behind the newest."""
+        self._waiting: list[int] = []
+        """Stamps of scans not drawn yet, ascending."""
         self._lost = 0
 
+    @property
+    def held(self) -> int:
+        """Scans that wait for late stamps."""
+        return sum(map(len, self._held))
+
     def chunks(self, run: Run) -> list[Chunk]:
-        """The chunks that ``run`` completes: none or one, two where a scan held back lies before a gap."""
+        """The chunks that ``run`` completes; what was held back comes out before a gap."""
         counts: Any = run.counts if self._as_sent else np.take(run.counts, self._picked, axis=1)
         if self._pulse is None:
             return [Chunk(counts, lost_before=run.lost_before)]
-        return self._drawn(run, counts, self._pulse)
-
-    def _drawn(self, run: Run, counts: NDArray[Any], pulse: PulseColumn) -> list[Chunk]:
-        """With column 0 drawn. The last scan is held back: an edge just after it comes with the next run."""
         done: list[Chunk] = []
-        if run.lost_before and self._held is not None:
-            done += self._chunk(pulse, run.first - run.lost_before - 1, self._held)
-            self._held = None
+        edges: Iterable[int] = run.edges
         if run.lost_before:
-            pulse.restart()
+            last = (self._end - 1) * EDGE_UNITS
+            self._wait_for(edge for edge in edges if edge <= last)
+            edges = [edge for edge in edges if edge > last]
+            done += self.rest()
             self._lost = run.lost_before
-        pulse.add(run.edges)
-        whole, first = counts, run.first
-        if self._held is not None:
-            whole, first = np.concatenate((self._held, counts)), first - 1
-        self._held = whole[-1:].copy()
-        return done + self._chunk(pulse, first, whole[:-1])
+        overdue = (run.first - 1 - self._patience) * EDGE_UNITS
+        if run.lost_before or not self._end:
+            self._pulse.restart()
+            self._first = self._begin = run.first
+            overdue = 0  # stamps may come for all that was left out
+        self._end = run.first + len(counts)
+        self._held.append(counts)
+        early, self._waiting = self._waiting, []
+        self._wait_for([*early, *edges], overdue)
+        ready = []
+        while self.held - len(self._held[0]) >= self._patience:
+            ready.append(self._held.popleft())
+        return done + self._drawn(self._pulse, ready)
 
-    def _chunk(self, pulse: PulseColumn, first: int, probes: NDArray[Any]) -> list[Chunk]:
-        if not len(probes):
+    def rest(self) -> list[Chunk]:
+        """What is held back, at the end of a segment or of the stream."""
+        ready = list(self._held)
+        self._held.clear()
+        return self._drawn(self._pulse, ready) if self._pulse is not None else []
+
+    def _wait_for(self, edges: Iterable[int], overdue: int = 0) -> None:
+        """Keep the stamps whose scans are still to be drawn; count the others."""
+        tally, waiting = self._tally, self._waiting
+        before = (self._first - 1) * EDGE_UNITS
+        drawn = self._begin * EDGE_UNITS if self._begin > self._first else before + 1
+        for edge in edges:
+            if edge < drawn and overdue <= edge <= before:
+                tally.gap_stamps += 1
+            elif edge < drawn:
+                tally.late_stamps += 1
+            elif edge > (self._end - 1 + self._patience) * EDGE_UNITS or len(waiting) >= MOST_WAITING:
+                tally.early_stamps += 1
+            else:
+                waiting.append(edge)
+        waiting.sort()
+
+    def _drawn(self, pulse: PulseColumn, parts: Sequence[NDArray[Any]]) -> list[Chunk]:
+        """The scans of ``parts``, the oldest held, with their pulses."""
+        if not parts:
             return []
-        counts = np.empty((len(probes), 1 + probes.shape[1]), probes.dtype)
-        counts[:, 1:] = probes
+        scans, first = sum(map(len, parts)), self._begin
+        counts = np.empty((scans, 1 + parts[0].shape[1]), parts[0].dtype)
+        np.concatenate(parts, out=counts[:, 1:])
+        due = bisect_left(self._waiting, (first + scans) * EDGE_UNITS)
+        pulse.add(self._waiting[:due])
+        del self._waiting[:due]
         pulse.draw(first, counts[:, 0])
+        self._begin = first + scans
         lost, self._lost = self._lost, 0
         return [Chunk(counts, lost_before=lost)]

@@ -16,15 +16,15 @@ from daq.drivers.frames.binary import COUNTER_END
 from daq.drivers.frames.records import EDGE_UNITS, EDGES, VERSION, Description, Frame, Pieces, Samples, Tally
 
 LONGEST = 1024
-"""Characters of a line."""
+"""Characters of a line, star and check included, its end not."""
 CHECKED = re.compile(rb"([ -)+-~]+)\*([0-9A-Fa-f]{8}|[0-9A-Fa-f]{2})")
 SCAN = re.compile(rb"S,(\d{1,20})((?:,-?\d{1,10})+)")
-EDGE = re.compile(rb"E,(\d{1,20})(?:\.(\d{1,6}))?")
+EDGE = re.compile(rb"E,(\d{1,20})(?:\.(\d{1,20}))?")
 NUMBER = re.compile(r"[+-]?[0-9]{1,20}(\.[0-9]{1,20})?([eE][+-]?[0-9]{1,2})?")
 FORMATS = {2: "h", 4: "i"}
 FEWEST_FIELDS = 6
 MOST_EDGES = 64
-"""Edges kept for the scan they belong to."""
+"""Edges kept until the next scan line."""
 
 
 class LineCodec:
@@ -45,6 +45,7 @@ class LineCodec:
         text = self._checked(line)
         if text is None:
             self._tally.bad_check += 1
+            self._tally.refused(self._why(line))
             return None
         if text.startswith(b"S,"):
             return self._scan(text)
@@ -63,14 +64,24 @@ class LineCodec:
         check = zlib.crc32(found[1]) if len(found[2]) == 8 else functools.reduce(operator.xor, found[1])
         return found[1] if check == int(found[2], 16) else None
 
-    def _malformed(self) -> Frame | None:
+    def _why(self, line: bytes) -> str:
+        """What is wrong with a line whose check does not pass."""
+        found = CHECKED.fullmatch(line)
+        if found is None:
+            return "no check of two or eight hex digits at the end, or other than printable ASCII"
+        if self._digits not in (0, len(found[2])):
+            return f"a check of {len(found[2])} digits where the description's has {self._digits}"
+        return "a wrong check"
+
+    def _malformed(self, text: bytes, reason: str) -> Frame | None:
         self._tally.malformed += 1
+        self._tally.refused(reason + (", and blanks in it" if b" " in text else ""), text.decode("ascii"))
         return None
 
     def _scan(self, text: bytes) -> Frame | None:
         found = SCAN.fullmatch(text)
         if found is None:
-            return self._malformed()
+            return self._malformed(text, "an S line that is not whole counts between commas")
         if self._told is None:
             self._tally.undescribed += 1
             self._edges.clear()
@@ -79,16 +90,18 @@ class LineCodec:
         try:
             data = struct.pack(f"<{len(values)}{FORMATS[self._told.width]}", *values)
         except struct.error:
-            return self._malformed()
+            return self._malformed(text, "an S line with counts beyond the bits described")
         if first >= COUNTER_END:
-            return self._malformed()
+            return self._malformed(text, "an S line with a counter beyond 64 bits")
         edges, self._edges = tuple(self._edges), []
         return Frame(None, Samples(first, 1, len(values), self._told.width, 0.0, data, edges))
 
     def _edge(self, text: bytes) -> Frame | None:
         found = EDGE.fullmatch(text)
-        if found is None or len(self._edges) >= MOST_EDGES:
-            return self._malformed()
+        if found is None:
+            return self._malformed(text, "an E line that is not a position with a decimal point")
+        if len(self._edges) >= MOST_EDGES:
+            return self._malformed(text, f"more than {MOST_EDGES} E lines without an S line")
         self._edges.append(EDGE_UNITS * int(found[1]) + _part(found[2] or b"0"))
         return Frame(None, None)
 
@@ -96,10 +109,11 @@ class LineCodec:
         version, _, rest = text[2:].partition(b",")
         if version.isdigit() and version != b"%d" % VERSION:
             self._tally.other_version += 1
+            self._tally.refused(f"version {version[:8].decode()} of the format")
             return None
         told = description(rest.decode("ascii"))
         if told is None:
-            return self._malformed()
+            return self._malformed(text, "a D line with other fields or impossible figures")
         self._told = told
         self._digits = len(line) - len(text) - 1
         return Frame(None, told)

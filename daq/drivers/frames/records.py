@@ -4,17 +4,19 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal, Protocol
 
 VERSION = 1
 MOST_CHANNELS = 64
-MOST_SCANS = 4096
+MOST_SCANS = 4065
+"""Of one channel with 2 bytes, which just fit into the longest frame."""
 MOST_RATE_HZ = 10e6
 WIDTHS = (2, 3, 4)
 """Bytes per sample."""
 EDGE_UNITS = 65536
 """Positions of edges count in this part of a sample."""
+MOST_EXAMPLE = 60
 MOST_DEVICE = 64
 """Characters of a device's name."""
 
@@ -70,7 +72,7 @@ class Samples:
     data: bytes
     """Little-endian, scan by scan."""
     edges: tuple[int, ...]
-    """Positions of once-per-rev edges on the digitizer's counter, in ``EDGE_UNITS``; rising."""
+    """Positions of once-per-rev edges on the digitizer's counter, in ``EDGE_UNITS``, as they were sent."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -103,13 +105,36 @@ class Tally:
     undescribed: int = 0
     """Samples that came before the first description."""
     repeated: int = 0
-    bad_edges: int = 0
-    """Edge stamps outside their frame, or too close to the one before."""
+    late_stamps: int = 0
+    """Edge stamps of scans that were handed on already; left out, as all of the following are."""
+    early_stamps: int = 0
+    """Further ahead of the scans than is waited for."""
+    close_stamps: int = 0
+    """Too close to the one before: a bounce, or the same edge twice."""
+    gap_stamps: int = 0
+    """Of scans that did not come, or before the first one: no fault."""
     gaps: int = 0
     lost_frames: int = 0
     """Between whole frames, by the sequence number; exact below 65536 in a row."""
     lost_samples: int = 0
     """Scans between whole frames, by the sample counter; exact."""
+    left_out: int = 0
+    """Of these: between frames whose sequence numbers follow on, so the digitizer itself left them out."""
+    reasons: dict[str, int] = field(default_factory=dict, compare=False)
+    """Why pieces were refused, and how often."""
+    example: str = field(default="", compare=False)
+    """The first piece whose check was right and whose content was refused, where it is text."""
+
+    def refused(self, reason: str, example: str = "") -> None:
+        """Note why a piece was dropped; the counters by kind are the caller's."""
+        self.reasons[reason] = self.reasons.get(reason, 0) + 1
+        if not self.example:
+            self.example = example[:MOST_EXAMPLE]
+
+    @property
+    def bad_stamps(self) -> int:
+        """Stamps that the page forbids, late ones apart."""
+        return self.early_stamps + self.close_stamps
 
     @property
     def damaged(self) -> int:
@@ -141,8 +166,14 @@ class Pieces:
             del parts[0]
             self._skipping = False
         whole = [part for part in parts if 0 < len(part) <= self._longest]
-        self._tally.overlong += sum(len(part) > self._longest for part in parts)
+        for _ in range(sum(len(part) > self._longest for part in parts)):
+            self._overlong()
         if len(self._tail) > self._longest:
-            self._tally.overlong += not self._skipping
+            if not self._skipping:
+                self._overlong()
             self._tail, self._skipping = b"", True
         return whole
+
+    def _overlong(self) -> None:
+        self._tally.overlong += 1
+        self._tally.refused("longer than the format allows")

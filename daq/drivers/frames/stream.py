@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
 
 from config.errors import DriverTrouble
 from daq.drivers.base import Samples as Counts
-from daq.drivers.frames.records import EDGE_UNITS, Codec, Description, Frame, Samples, Tally
+from daq.drivers.frames.records import Codec, Description, Frame, Samples, Tally
 
 LONGEST_GAP_S = 3600.0
 """A counter that jumps further has not counted on: the digitizer has been started anew."""
@@ -26,8 +25,8 @@ class Run:
     """The digitizer's counter at the first scan."""
     lost_before: int
     edges: tuple[int, ...]
-    """Stamped once-per-rev edges on the digitizer's counter, in ``EDGE_UNITS``, ascending: after the scan
-    before ``first``, not after the last one."""
+    """Stamped once-per-rev edges on the digitizer's counter, in ``EDGE_UNITS``, that came with these scans:
+    in any order, and of scans before or after them too."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,6 +68,8 @@ class Stream:
         self._first, self._next = -1, -1
         self._group: list[Samples] = []
         self._lost = 0
+        self._whole = True
+        """No frame is known to be lost since the last samples."""
 
     def feed(self, data: bytes) -> list[Run | Trouble]:
         """What ``data`` completes; what follows a Trouble means nothing."""
@@ -106,6 +107,7 @@ class Stream:
             return 0
         step = (sequence - before) % SEQUENCES
         self._tally.lost_frames += max(step - 1, 0)
+        self._whole = self._whole and step == 1
         return step
 
     def _place(
@@ -123,6 +125,8 @@ class Stream:
             self._tally.gaps += 1
             self._tally.lost_samples += lost
             self._tally.lost_frames += lost if self._sequence is None else 0
+            self._tally.left_out += lost if self._whole and step == 1 else 0
+        self._whole = True
         self._group.append(samples)
         self._first, self._next = samples.first, samples.first + samples.scans
         return None
@@ -138,19 +142,8 @@ class Stream:
         if _beyond(counts, self.description):
             out.append(BEYOND)
             return
-        out.append(Run(counts, group[0].first, lost, tuple(self._edges(group))))
-
-    def _edges(self, group: Iterable[Samples]) -> Iterator[int]:
-        """The stamps that lie where they may."""
-        for samples in group:
-            begin = (samples.first - 1) * EDGE_UNITS
-            end = begin + samples.scans * EDGE_UNITS
-            for edge in samples.edges:
-                if begin < edge <= end:
-                    begin = edge
-                    yield edge
-                else:
-                    self._tally.bad_edges += 1
+        edges = tuple(edge for samples in group for edge in samples.edges)
+        out.append(Run(counts, group[0].first, lost, edges))
 
 
 def _fits(samples: Samples, told: Description) -> bool:

@@ -151,6 +151,8 @@ class Digitizer:
     sequence: int = 0
     first: int = 0
     every_s: float = 0.1
+    late: int = 0
+    """Stamps are sent so many scans after their own."""
     _due: float = 0.0
 
     @property
@@ -185,7 +187,8 @@ class Digitizer:
         begin, self.first = self.first, self.first + self.scans
         if self.lines:
             return b"".join(self._lines(begin, counts))
-        edges = self.rotor.edges(begin - 1, begin + self.scans - 1) if self.stamped else []
+        then = begin - 1 - self.late
+        edges = self.rotor.edges(then, then + self.scans) if self.stamped else []
         body = samples_body(self.sequence, begin, counts, self.width, self.scale, edges)
         self.sequence += 1
         return sealed(body)

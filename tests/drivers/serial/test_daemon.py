@@ -220,3 +220,18 @@ def test_the_wrong_digitizer_ends_the_daemon_as_a_mistake(bay: Bay) -> None:
         bay.daemon = subprocess.Popen([REVMARK, "serve"], cwd=bay.folder, env=bay.env, stderr=out)
     assert bay.daemon.wait(LIMIT_S) == 78, bay.log
     assert "takes 12800 samples a second where rate_hz says 10000" in bay.log
+
+
+@pytest.mark.parametrize("bay", [("socket", True)], indirect=True)
+def test_late_stamps_are_an_event_and_stand_in_the_status(bay: Bay) -> None:
+    bay.sender.digitizer.late = 6400
+    bay.sender.digitizer.rotor.turning = True
+    bay.serve()
+    notes = bay.until(lambda: json.loads(bay.type("status", "--json"))["live"]["notes"], "the note")
+    assert "too late" in notes[0]
+    assert "too late" in bay.type("status")
+    with History.open(bay.folder / "bay.sqlite") as history:
+        said = bay.until(lambda: events(history, "source_remark"), "the event")
+        assert len(said) == 1  # once a minute at most
+        assert "once-per-rev stamps came more than 0.25 s of samples too late" in said[0].text
+    bay.stop()

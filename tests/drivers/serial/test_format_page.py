@@ -104,6 +104,29 @@ def test_vectors_6_and_7_lines(number, digits):
         assert run.counts.tolist() == [[-9730, -10922, -11005], [-9729, -10915, -11002]]
 
 
+@pytest.mark.parametrize(("number", "sequence", "first", "scans"), [(8, 9, 2000, 130), (9, 10, 2130, 125)])
+def test_vectors_8_and_9_hold_full_blocks(number, sequence, first, scans):
+    """As the ``cobs`` library makes them; there is a block of code FF, and `01` after it is read."""
+    frame, tally, wire = decoded(number)
+    body = frame.body
+    assert (frame.sequence, body.first, body.scans, tally.damaged) == (sequence, first, scans, 0)
+    assert counts_of(body.data, 2, 1)[:, 0].tolist() == list(range(257, 257 + scans))
+    assert cobs.encode(cobs.decode(wire[:-1])) + b"\0" == wire
+    at = wire.index(b"\xff")
+    assert (len(wire) == at + 255 + 1) is (number == 9)
+    if number == 9:
+        assert BinaryCodec(tally).feed(b"\0" + wire[:-1] + b"\1\0") == [frame]
+
+
+def test_the_longest_frame_is_as_the_page_says():
+    """28 + s n b + 4 m = 8159 passes, two bytes more do not."""
+    assert "28 + s n b + 4 m <= 8159" in PAGE
+    for m, scans, good in ((0, 4065, 1), (0, 4066, 0), (1, 4063, 1), (1, 4064, 0)):
+        body = samples_body(1, 5, np.full((scans, 1), 257), 2, 1.0, [5.5] * m)
+        assert (len(body) + 4 <= 8159) is bool(good)
+        assert len(BinaryCodec(Tally()).feed(b"\0" + sealed(body))) == good
+
+
 def test_the_check_values_that_the_page_names():
     """CRC-32 of "123456789" is in every catalogue of CRCs; COBS against the kept library."""
     assert "CBF43926" in PAGE
@@ -141,11 +164,13 @@ def test_what_fits_is_reckoned_right(baud):
 
 
 def test_the_page_fits_the_limits_of_the_code():
-    from daq.drivers.frames import binary, lines, records
+    from daq.drivers.frames import binary, columns, lines, records
 
     assert f"at most {binary.LONGEST} bytes" in PAGE
     assert f"at most {lines.LONGEST} characters" in PAGE
     assert f"scans s in this frame, 1 to {records.MOST_SCANS}" in PAGE
+    assert columns.LATE_S == 0.25
+    assert "until the scan a quarter of a second after it has come" in " ".join(PAGE.split())
     assert f"channels n, 1 to {records.MOST_CHANNELS}" in PAGE
     assert f"1/{records.EDGE_UNITS} of a sample" in PAGE
     assert list(binary.VECTOR_KINDS) == list(range(16, 32))

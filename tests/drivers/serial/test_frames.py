@@ -145,7 +145,14 @@ def test_losses_are_counted_from_the_counters():
 def test_scans_that_the_digitizer_left_out_are_lost_too():
     runs, tally = read(TOLD, samples(1, 10), samples(2, 500))
     assert seen(runs) == [(10, 2, 0), (500, 2, 488)]
-    assert (tally.gaps, tally.lost_frames, tally.lost_samples) == (1, 0, 488)
+    assert (tally.gaps, tally.lost_frames, tally.lost_samples, tally.left_out) == (1, 0, 488, 488)
+
+
+def test_scans_lost_with_a_frame_are_not_called_left_out():
+    """The frame before a description is lost: its number is missing one step before the samples."""
+    told = sealed(description_body(3, 1000.0, 2, 16, 0, [SCALE] * 2, "unit"))
+    _, tally = read(TOLD, samples(1, 10), told, samples(4, 14))
+    assert (tally.lost_samples, tally.left_out) == (2, 0)
 
 
 def test_a_lost_description_is_a_lost_frame_but_no_gap():
@@ -226,12 +233,12 @@ def test_every_width_keeps_every_value(width):
     assert got.dtype == (np.int16 if width == 2 else np.int32)
 
 
-def test_stamps_outside_their_frame_are_left_out():
-    """In samples from the first scan of two: after -1, not after 1, and ascending."""
+def test_stamps_are_handed_on_as_they_came():
+    """Wherever they lie and in any order: what becomes of them is decided where they are drawn."""
     edges = [-1.0, -0.99, 0.5, 0.5, 0.25, 1.0, 1.01]
     (run,), tally = read(TOLD, samples(1, 10, edges=[10 + e for e in edges]))
-    assert [round(e / 65536 - 10, 2) for e in run.edges] == [-0.99, 0.5, 1.0]
-    assert tally.bad_edges == 4
+    assert [round(e / 65536 - 10, 2) for e in run.edges] == edges
+    assert tally.damaged == 0
 
 
 # --- lines -----------------------------------------------------------------------------------------------
@@ -320,14 +327,19 @@ def test_stamps_go_with_the_scan_that_follows():
     ]
     (run,), tally = read(*data, codec=LineCodec, lead=b"\n")
     assert [edge / 65536 for edge in run.edges] == [10.25, 12.0]
-    assert tally.bad_edges == 0
+    assert tally.damaged == 0
 
 
-def test_a_stamp_whose_scan_is_lost_is_left_out():
-    data = [LINE_TOLD, scan_line(10), checked_line("E,10.25"), scan_line(12)]
-    runs, tally = read(*data, codec=LineCodec, lead=b"\n")
-    assert [run.edges for run in runs] == [(), ()]
-    assert tally.bad_edges == 1
+def test_a_stamp_has_as_many_decimals_as_it_likes():
+    """1/3 of 65536 is 21845.33; the last one rounds up to the next scan."""
+    data = [
+        LINE_TOLD,
+        *(checked_line(f"E,{at}") for at in ("10.333333333", "10.5", "10.9999999")),
+        scan_line(10),
+    ]
+    (run,), tally = read(*data, codec=LineCodec, lead=b"\n")
+    assert [edge - 10 * 65536 for edge in run.edges] == [21845, 32768, 65536]
+    assert tally.malformed == 0
 
 
 def test_stamps_without_scans_take_no_memory():

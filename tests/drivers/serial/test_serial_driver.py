@@ -18,11 +18,16 @@ from digitizer_kit import (
     plan,
     samples_body,
     sealed,
+    stuffed,
 )
 
 from config.errors import DriverError
+from config.stand import check_stand
+from config.templates import FOLDER
+from daq.clock import SystemClock
 from daq.drivers import serial_driver
 from daq.drivers.base import ChannelPlan, DriverState, ProbePlan, PulsePlan
+from daq.livecheck import look
 from daq.signal.measure import measure
 from daq.signal.shapes import ChannelParams, PulseParams
 
@@ -218,6 +223,48 @@ def test_damage_is_told_once_a_minute(send, driver, caplog, monkeypatch):
     assert str(sender.wire.url) in said[0]
 
 
+@pytest.mark.parametrize("late_s", [0.2, 0.5])
+def test_late_stamps_are_waited_for_as_promised_and_then_told(send, driver, late_s):
+    """Found and silent up to a quarter of a second; beyond it, every one is named."""
+    source = driver(send(Digitizer(stamped=True, late=round(late_s * 12_800)), speed=4.0))
+    assert source.open().stamped
+    counts = samples(source, 3 * 12_800)
+    pulses = int((np.diff(np.sign(counts[:, 0])) < 0).sum())
+    said = source.remarks()
+    if late_s < 0.25:
+        assert pulses == pytest.approx(3 * 24.7, abs=8)  # those of before the opening never came
+        assert said == ()
+    else:
+        assert pulses == 0
+        assert "once-per-rev stamps came more than 0.25 s of samples too late" in said[0]
+
+
+def test_the_live_check_names_late_stamps(send, driver):
+    stand = check_stand(FOLDER / "simulated.toml", lambda *_: ())
+    source = driver(send(Digitizer(stamped=True, late=6400), speed=4.0))
+    found = look(source, stand, SystemClock(), 2.0)
+    assert "stamps came more than 0.25 s of samples too late" in found.trouble[0]
+    assert "no edge stamps among what came" in found.trouble[1]
+
+
+def test_what_the_digitizer_left_out_is_not_blamed_on_the_pc(send, driver):
+    stand = check_stand(FOLDER / "simulated.toml", lambda *_: ())
+    sender = send(speed=4.0)
+    source = driver(sender)
+
+    def skip():
+        with sender._lock:
+            sender.digitizer.first += 1280
+
+    timer = threading.Timer(0.2, skip)
+    timer.start()
+    found = look(source, stand, SystemClock(), 2.0)
+    timer.join()
+    assert (found.lost_samples, found.left_out) == (1280, 1280)
+    assert any("itself left out 1280 samples" in t for t in found.trouble)
+    assert not any("free the PC" in t for t in found.trouble)
+
+
 # --- gone and back ---------------------------------------------------------------------------------------
 
 
@@ -380,6 +427,92 @@ def test_garbage_in_the_middle_ends_in_the_same_words(send, driver):
     error = lost(source)
     assert (error.kind, error.retryable) == ("protocol", True)
     assert "no whole frame among them" in error.cause
+
+
+def each_line(change):
+    """Spoils the lines of scans, and gives them a right check again; descriptions pass."""
+
+    def spoil(data):
+        lines = data.split(b"\r\n")
+        return b"\r\n".join(change(line) if line.startswith(b"S") else line for line in lines)
+
+    return spoil
+
+
+def with_blanks(line):
+    return checked_line(line.decode().partition("*")[0].replace(",", ", "))[:-2]
+
+
+def with_short_check(line):
+    return checked_line(line.decode().partition("*")[0], 2)[:-2]
+
+
+REFUSED = [
+    (
+        with_blanks,
+        "an S line that is not whole counts between commas, and blanks in it",
+        "digitizer's program",
+    ),
+    (with_short_check, "a check of 2 digits where the description's has 8", "baud"),
+]
+
+
+@pytest.mark.parametrize(("change", "why", "remedy"), REFUSED)
+def test_lines_refused_for_their_content_are_not_called_silence(send, driver, change, why, remedy):
+    """They come, and descriptions pass among them: nobody shall look for the power switch."""
+    sender = send(Digitizer(Rotor(rate_hz=500.0), lines=8, scans=8))
+    source = driver(sender)
+    source.open()
+    blocks(source)
+    sender.spoil = each_line(change)
+    error = lost(source)
+    assert error.kind == "protocol"
+    assert "no samples that pass among them" in error.cause
+    assert f"most often: {why} (" in error.cause
+    assert remedy in error.remedy
+    if change is with_blanks:
+        assert "the first was 'S, " in error.cause
+        assert any("came whole and were refused; most often: an S line" in said for said in source.remarks())
+
+
+def test_a_description_refused_for_its_content_is_told_with_the_reason(send, driver, soon):
+    wrong = checked_line("D, 1, 1000, 3, 16, none, unit, 1, 1, 1")
+    error = refused(driver(send(Digitizer(lines=8), make=lambda: wrong)))
+    assert "most often: a D line with other fields or impossible figures, and blanks in it (" in error.cause
+    assert "the first was 'D, 1, 1000" in error.cause
+
+
+BAD_FRAMES = [
+    (lambda data: data.count(0) * stuffed(b"a frame\0\1\2\3"), "a wrong CRC-32"),
+    (lambda data: data.count(0) * b"\xf0frame\0", "no valid COBS"),
+    (
+        lambda data: data.count(0) * sealed(b"\1\2\0\0short"),
+        "samples whose lengths or figures are impossible",
+    ),
+]
+
+
+@pytest.mark.parametrize(("spoil", "why"), BAD_FRAMES)
+def test_frames_that_all_fail_are_told_with_the_reason(send, driver, spoil, why):
+    sender = send()
+    source = driver(sender)
+    source.open()
+    blocks(source)
+    sender.spoil = spoil
+    error = lost(source)
+    assert "no whole frame among them" in error.cause
+    assert f"most often: {why} (" in error.cause
+
+
+def test_another_version_in_the_middle_is_told(send, driver):
+    sender = send()
+    source = driver(sender)
+    source.open()
+    blocks(source)
+    sender.spoil = lambda data: sealed(b"\2\2\0\0whatever is new") * data.count(0)
+    error = lost(source)
+    assert "version 2 of the format" in error.cause
+    assert "digitizer's program" in error.remedy
 
 
 def test_a_silent_port_is_told(send, driver, soon):

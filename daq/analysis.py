@@ -39,6 +39,8 @@ IDLE_HOPS, IDLE_BLOCKS = 100, 3
 LONGEST_TURN_S = 2.5
 """Waited for at most between two pulses, or this many turns at the minimum speed where that is longer."""
 READ_S = 0.25
+QUIET_STEP = 4
+"""Every so many samples are enough for an rms."""
 QUIET_RMS_S = 1.0
 """Rms of the probes is taken over this much of the past."""
 
@@ -64,6 +66,7 @@ class Analysis:
         """Added to the source's sample index, so that indices grow over re-openings of the source."""
         self._segment = -1
         self._taken = 0
+        self._speed_hz: float | None = None
 
     def want_fresh(self, from_sample: int) -> None:
         """Take a reading whose samples all lie at or after ``from_sample``, as soon as it is steady."""
@@ -193,17 +196,18 @@ class Analysis:
 
     def _hop_of(self, chunk: Chunk, *, vibrating: bool) -> Hop:
         turning = self._fitter.clock
+        self._speed_hz = turning.speed_hz
         return Hop(
             chunk.next_sample / chunk.rate_hz,
             chunk.first_sample,
             turning.since_edge_s,
             turning.patience_s,
-            turning.speed_hz,
+            self._speed_hz,
             vibrating,
         )
 
     def _vibrating(self, chunk: Chunk) -> bool:
-        self._past.append(ac_rms(chunk.counts[:, 1:]) * np.abs(self._units))
+        self._past.append(ac_rms(chunk.counts[::QUIET_STEP, 1:]) * np.abs(self._units))
         now = np.sqrt(np.mean(np.square(np.stack(self._past)), axis=0))
         if self._watch.state is StandState.TURNING and self._fits:
             self._turning_rms = self._fits[-1].ac_rms
@@ -273,7 +277,7 @@ class Analysis:
         self._board.post(
             state=self._watch.state,
             detail="",
-            speed_hz=self._fitter.clock.speed_hz if turning else None,
+            speed_hz=self._speed_hz if turning else None,
             sample=self._taken,
             segment=self._segment,
             steady=bool(verdict and verdict.steady),

@@ -19,7 +19,7 @@ from config.errors import DriverError
 from daq.drivers.base import ChannelPlan, Chunk, Driver, DriverOptions, EndOfSource, SourceInfo
 from daq.drivers.frames.binary import BinaryCodec
 from daq.drivers.frames.columns import LATE_S, STAMPS, Columns, PulseColumn
-from daq.drivers.frames.lines import LineCodec
+from daq.drivers.frames.lines import OTHER_CHECK, LineCodec
 from daq.drivers.frames.records import MOST_CHANNELS, VERSION, Codec, Description, Tally
 from daq.drivers.frames.stream import Run, Stream, Trouble
 from daq.drivers.serial_link import Link, ports_here
@@ -253,7 +253,7 @@ class SerialDriver(Driver[SerialOptions]):
             f"Check source.options.baud (now {options.baud}) and codec (now {options.codec!r}), and whether "
             "another program reads the port or probes it (ModemManager, brltty)."
         )
-        if content_refused(tally, before):
+        if content_refused(tally, before) or OTHER_CHECK in refusals(tally, before):
             remedy = "This is a fault in the digitizer's program; see the page of the frame format."
         return DriverError(
             f"{options.port} brought {came} bytes in {seconds:.1f} s, but {what} among them "

@@ -135,11 +135,11 @@ class Columns:
             edges = [edge for edge in edges if edge > last]
             done += self.rest()
             self._lost = run.lost_before
-        overdue = (run.first - 1 - self._patience) * EDGE_UNITS
+        overdue: float = (run.first - 1 - self._patience) * EDGE_UNITS
         if run.lost_before or not self._end:
             self._pulse.restart()
             self._first = self._begin = run.first
-            overdue = 0  # stamps may come for all that was left out
+            overdue = -math.inf  # stamps may come for all that was left out
         self._end = run.first + len(counts)
         self._held.append(counts)
         early, self._waiting = self._waiting, []
@@ -155,7 +155,7 @@ class Columns:
         self._held.clear()
         return self._drawn(self._pulse, ready) if self._pulse is not None else []
 
-    def _wait_for(self, edges: Iterable[int], overdue: int = 0) -> None:
+    def _wait_for(self, edges: Iterable[int], overdue: float = -math.inf) -> None:
         """Keep the stamps whose scans are still to be drawn; count the others."""
         tally, waiting = self._tally, self._waiting
         before = (self._first - 1) * EDGE_UNITS

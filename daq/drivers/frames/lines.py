@@ -23,6 +23,7 @@ EDGE = re.compile(rb"E,(\d{1,20})(?:\.(\d{1,20}))?")
 NUMBER = re.compile(r"[+-]?[0-9]{1,20}(\.[0-9]{1,20})?([eE][+-]?[0-9]{1,2})?")
 FORMATS = {2: "h", 4: "i"}
 FEWEST_FIELDS = 6
+OTHER_CHECK = "where the description's has"
 MOST_EDGES = 64
 """Edges kept until the next scan line."""
 
@@ -70,7 +71,7 @@ class LineCodec:
         if found is None:
             return "no check of two or eight hex digits at the end, or other than printable ASCII"
         if self._digits not in (0, len(found[2])):
-            return f"a check of {len(found[2])} digits where the description's has {self._digits}"
+            return f"a check of {len(found[2])} digits {OTHER_CHECK} {self._digits}"
         return "a wrong check"
 
     def _malformed(self, text: bytes, reason: str) -> Frame | None:

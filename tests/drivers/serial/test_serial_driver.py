@@ -453,7 +453,7 @@ REFUSED = [
         "an S line that is not whole counts between commas, and blanks in it",
         "digitizer's program",
     ),
-    (with_short_check, "a check of 2 digits where the description's has 8", "baud"),
+    (with_short_check, "a check of 2 digits where the description's has 8", "digitizer's program"),
 ]
 
 

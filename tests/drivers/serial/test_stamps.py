@@ -260,6 +260,14 @@ def test_stamps_between_scans_left_out_are_no_fault():
     assert (tally.gap_stamps, tally.late_stamps, tally.bad_stamps) == (2, 0, 0)
 
 
+def test_stamps_of_scans_before_the_first_are_no_fault():
+    """Late ones, before the counter's 0 too: the digitizer has just started."""
+    tally = Tally()
+    made, _ = columns(Digitizer(stamped=True), tally=tally)
+    made.chunks(run_of(64, 64, edges=(-2000.5, 10.5)))
+    assert (tally.gap_stamps, tally.late_stamps, tally.bad_stamps) == (2, 0, 0)
+
+
 def test_lines_whose_stamps_come_after_their_scans_are_read():
     """The firmware that prints E when the capture interrupt has run."""
     tally = Tally()

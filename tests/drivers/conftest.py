@@ -11,6 +11,7 @@ import pytest
 
 from daq.drivers.base import ChannelPlan, ProbePlan, PulsePlan
 
+sys.path.insert(0, str(Path(__file__).parent))  # for served
 sys.path.insert(0, str(Path(__file__).parent / "ni"))  # for ni_kit
 sys.path.insert(0, str(Path(__file__).parent / "serial"))  # for digitizer_kit
 

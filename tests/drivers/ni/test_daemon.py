@@ -5,13 +5,9 @@ Nothing stored is lost, the run says what happened, and the next run works.
 
 from __future__ import annotations
 
-import json
 import math
-import os
-import signal
 import subprocess
 import sys
-import sysconfig
 import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -19,15 +15,13 @@ from typing import Any
 
 import pytest
 from ni_kit import DIVIDER, PROBES, DeviceServer, world
+from served import LIMIT_S, REVMARK, ServedStand
 
 from store.history import History
 
 pytestmark = [pytest.mark.slow, pytest.mark.timeout(180)]
 
-REVMARK = Path(sysconfig.get_path("scripts")) / "revmark"
-ROOT = Path(__file__).resolve().parents[3]
 STEP_S = 14e-6
-LIMIT_S = 30.0
 STAND = """
 [stand]
 name = "bay-1"
@@ -93,64 +87,16 @@ COMMANDS = (
 RESTART_S = 2.0
 
 
-class Bay:
+class Bay(ServedStand):
     """A stand on the device server, and its daemon."""
 
     def __init__(self, folder: Path, server: DeviceServer) -> None:
-        self.folder, self.server = folder, server
+        self.server = server
         inputs = "".join(
             f'[source.options.inputs."{name}"]\ndivider = {DIVIDER}\n'
             for name in ("Dev1/ai0", "Dev1/ai1", "Dev1/ai2")
         )
-        self.stand = folder / "bay.toml"
-        self.stand.write_text(STAND.format(server=server.address, inputs=inputs))
-        self.env = {k: v for k, v in os.environ.items() if not k.startswith("REVMARK_")}
-        self.env |= {"REVMARK_RUNTIME": str(folder / "run"), "REVMARK_STAND": str(self.stand)}
-        self.env["PYTHONPATH"] = os.pathsep.join([str(ROOT), self.env.get("PYTHONPATH", "")])
-        self.daemon: subprocess.Popen[bytes] | None = None
-
-    @property
-    def log(self) -> str:
-        return (self.folder / "serve.log").read_text()
-
-    def serve(self) -> None:
-        with (self.folder / "serve.log").open("ab") as out:
-            self.daemon = subprocess.Popen([REVMARK, "serve"], cwd=self.folder, env=self.env, stderr=out)
-        self.until(lambda: "\nready " in "\n" + self.log, "the daemon to be ready")
-
-    def stop(self) -> None:
-        assert self.daemon is not None
-        self.daemon.send_signal(signal.SIGTERM)
-        assert self.daemon.wait(LIMIT_S) == 0, self.log
-
-    def type(self, *words: str) -> str:
-        done = subprocess.run(
-            [REVMARK, *words],
-            cwd=self.folder,
-            env=self.env,
-            capture_output=True,
-            text=True,
-            timeout=60,
-            stdin=subprocess.DEVNULL,
-        )
-        assert done.returncode == 0, f"{words}: {done.stderr}\n{self.log}"
-        return done.stdout
-
-    def until(self, true: Callable[[], Any], what: str) -> Any:
-        end_s = time.monotonic() + LIMIT_S
-        while not (found := true()):
-            assert time.monotonic() < end_s, f"waited in vain for {what}\n{self.log}"
-            time.sleep(0.05)
-        return found
-
-    def state(self) -> str:
-        state: str = json.loads(self.type("status", "--json"))["live"]["state"]
-        return state
-
-    def end(self) -> None:
-        if self.daemon is not None and self.daemon.poll() is None:
-            self.daemon.kill()
-            self.daemon.wait()
+        super().__init__(folder, STAND.format(server=server.address, inputs=inputs))
 
 
 @pytest.fixture

@@ -7,10 +7,7 @@ from __future__ import annotations
 
 import json
 import math
-import os
-import signal
 import subprocess
-import sysconfig
 import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -18,14 +15,12 @@ from typing import Any
 
 import pytest
 from digitizer_kit import LAG_DEG, UM_PK, Damage, Digitizer, Rotor, Sender
+from served import LIMIT_S, REVMARK, ServedStand
 
 from store.history import History
 
 pytestmark = [pytest.mark.slow, pytest.mark.timeout(180)]
 
-REVMARK = Path(sysconfig.get_path("scripts")) / "revmark"
-ROOT = Path(__file__).resolve().parents[3]
-LIMIT_S = 30.0
 STAND = """
 [stand]
 name = "bay-4"
@@ -86,68 +81,21 @@ COMMANDS = (
 )  # fmt: skip
 
 
-class Bay:
+class Bay(ServedStand):
     """A stand on a digitizer, and its daemon."""
 
     def __init__(self, folder: Path, sender: Sender) -> None:
-        self.folder, self.sender = folder, sender
+        self.sender = sender
         of = sender.digitizer
-        self.stand = folder / "bay.toml"
-        self.stand.write_text(
+        super().__init__(
+            folder,
             STAND.format(
                 port=sender.wire.url,
                 channels=of.channels,
                 pulse="stamps" if of.stamped else "1",
                 inputs=("1", "2") if of.stamped else ("2", "3"),
-            )
+            ),
         )
-        self.env = {k: v for k, v in os.environ.items() if not k.startswith("REVMARK_")}
-        self.env |= {"REVMARK_RUNTIME": str(folder / "run"), "REVMARK_STAND": str(self.stand)}
-        self.env["PYTHONPATH"] = os.pathsep.join([str(ROOT), self.env.get("PYTHONPATH", "")])
-        self.daemon: subprocess.Popen[bytes] | None = None
-
-    @property
-    def log(self) -> str:
-        return (self.folder / "serve.log").read_text()
-
-    def serve(self) -> None:
-        with (self.folder / "serve.log").open("ab") as out:
-            self.daemon = subprocess.Popen([REVMARK, "serve"], cwd=self.folder, env=self.env, stderr=out)
-        self.until(lambda: "\nready " in "\n" + self.log, "the daemon to be ready")
-
-    def stop(self) -> None:
-        assert self.daemon is not None
-        self.daemon.send_signal(signal.SIGTERM)
-        assert self.daemon.wait(LIMIT_S) == 0, self.log
-
-    def type(self, *words: str) -> str:
-        done = subprocess.run(
-            [REVMARK, *words],
-            cwd=self.folder,
-            env=self.env,
-            capture_output=True,
-            text=True,
-            timeout=60,
-            stdin=subprocess.DEVNULL,
-        )
-        assert done.returncode == 0, f"{words}: {done.stderr}\n{self.log}"
-        return done.stdout
-
-    def until(self, true: Callable[[], Any], what: str) -> Any:
-        end_s = time.monotonic() + LIMIT_S
-        while not (found := true()):
-            assert time.monotonic() < end_s, f"waited in vain for {what}\n{self.log}"
-            time.sleep(0.05)
-        return found
-
-    def state(self) -> str:
-        state: str = json.loads(self.type("status", "--json"))["live"]["state"]
-        return state
-
-    def end(self) -> None:
-        if self.daemon is not None and self.daemon.poll() is None:
-            self.daemon.kill()
-            self.daemon.wait()
 
 
 @pytest.fixture

@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import platform
+from collections.abc import Mapping, Sequence
+
+import numpy as np
 
 from config.stand import Stand
+from config.version import __version__
 from daq.clock import Clock
 from daq.drivers.base import SourceInfo
 from daq.raw_window import RawWindow
-from daq.signal.measure import measure
+from daq.signal.setting import Setting
 from daq.signal.shapes import BlockFit, ChannelParams, Measurement, PulseParams
 from daq.signal.steadiness import Verdict
-from store.records import RawSamples, ReadingDraft, Vector
+from store.records import Level, Measured, RawSamples, ReadingDraft, Vector
 
 MARGIN_TURNS = 0.5
 """Part of a turn kept on either side of the window, so that the edges that bound it lie inside."""
@@ -32,9 +36,10 @@ class ReadingMaker:
     ) -> None:
         self._stand = stand
         self._info = info
-        self._pulse = pulse
-        self._channels = channels
         self._clock = clock
+        self._setting = Setting(
+            pulse, channels, info.rate_hz, min_signal_to_noise=stand.steadiness.min_signal_to_noise
+        )
         self._units = {c.name: c.unit for c in stand.channels}
 
     def margin(self, fit: BlockFit) -> int:
@@ -49,15 +54,10 @@ class ReadingMaker:
         """The reading of the window covered by ``used``, measured from the counts that go with it."""
         margin = self.margin(used[0])
         counts, first = raw.cut(used[0].first_sample - margin, used[-1].stop_sample + margin)
-        made = measure(
-            counts,
-            self._pulse,
-            self._channels,
-            self._info.rate_hz,
-            min_signal_to_noise=self._stand.steadiness.min_signal_to_noise,
-        )
+        made = self._setting.measured(counts)
         mono_s = raw.mono_of(used[0].first_sample)
         kept = counts.nbytes <= self._stand.raw.per_reading_mib * MIB
+        flags = made.flags if kept else (*made.flags, RAW_TOO_LARGE)
         return ReadingDraft(
             at_us=self.utc_of(mono_s),
             duration_s=made.duration_s,
@@ -70,22 +70,40 @@ class ReadingMaker:
                 **verdict.as_dict(),
                 "limits": self._stand.steadiness.to_dict(),
             },
-            flags=made.flags if kept else (*made.flags, RAW_TOO_LARGE),
-            vectors=self._vectors(made),
+            flags=flags,
+            vectors=vectors_of(made, self._units),
             raw=RawSamples(counts, self._info.volts_per_count, self._info.rate_hz, first) if kept else None,
+            measured=measured_record(made, self._setting, self._units, "live", flags),
         )
 
-    def _vectors(self, made: Measurement) -> tuple[Vector, ...]:
-        return tuple(
-            Vector(
-                v.channel,
-                v.order,
-                v.value,
-                v.var_re,
-                v.var_im,
-                v.cov,
-                v.noise_floor,
-                self._units[v.channel],
-            )
-            for v in made.vectors
-        )
+
+def measured_record(
+    made: Measurement, setting: Setting, units: Mapping[str, str], why: str, flags: tuple[str, ...]
+) -> Measured:
+    """A measurement as it is recorded: with its setting and the build that made it."""
+    return Measured(
+        why=why,
+        set_up_id=None,
+        speed_hz=made.speed_hz,
+        revolutions=made.revolutions,
+        duration_s=made.duration_s,
+        flags=flags,
+        figures=made.figures,
+        setting=setting.to_json(),
+        software=__version__,
+        numpy=np.__version__,
+        processor=platform.processor() or platform.machine(),
+        vectors=vectors_of(made, units),
+        levels=tuple(
+            Level(v.channel, v.gap_v, v.residual_sd, v.peak_to_peak, v.ac_rms, units[v.channel])
+            for v in made.levels
+        ),
+    )
+
+
+def vectors_of(made: Measurement, units: Mapping[str, str]) -> tuple[Vector, ...]:
+    """The vectors as records; ``units`` by channel."""
+    return tuple(
+        Vector(v.channel, v.order, v.value, v.var_re, v.var_im, v.cov, v.noise_floor, units[v.channel])
+        for v in made.vectors
+    )

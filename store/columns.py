@@ -121,5 +121,5 @@ def whole(name: str, *, optional: bool = False, primary: bool = False) -> Column
     return Column(name, Whole(name), nullable=optional, primary_key=primary)
 
 
-def json_text(name: str) -> Column[Any]:
-    return Column(name, Json(name), nullable=False)
+def json_text(name: str, *, optional: bool = False) -> Column[Any]:
+    return Column(name, Json(name), nullable=optional)

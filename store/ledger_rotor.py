@@ -53,10 +53,20 @@ MOST_PLANES = 2
 
 def keep_set_up(w: Writer, draft: SetUpDraft) -> SetUp:
     """The stored revision with exactly this content, or a new one."""
-    digest = hashlib.sha256(json.dumps(asdict(draft), sort_keys=True).encode()).hexdigest()
+    digest = hashlib.sha256(json.dumps(_content(draft), sort_keys=True).encode()).hexdigest()
     same = select(set_up.c.id).where(set_up.c.stand == draft.stand, set_up.c.digest == digest)
     found = w.c.execute(same).scalar()
     return recall.set_up_by_id(w.c, found or _new_set_up(w, draft, digest))
+
+
+def _content(draft: SetUpDraft) -> dict[str, Any]:
+    """What makes two set-ups the same; keys of later schemas count only where they say something."""
+    told = asdict(draft)
+    for part in (told["pulse"], *told["channels"]):
+        for key in ("pattern", "pair"):
+            if part.get(key, "") is None:
+                del part[key]
+    return told
 
 
 def _new_set_up(w: Writer, draft: SetUpDraft, digest: str) -> UUID:
@@ -77,6 +87,7 @@ def _new_set_up(w: Writer, draft: SetUpDraft, digest: str) -> UUID:
         pulse_level_v=draft.pulse.level_v,
         pulse_angle_deg=draft.pulse.angle_deg,
         pulse_count=draft.pulse.pulses,
+        pulse_pattern=None if draft.pulse.pattern is None else dict(draft.pulse.pattern),
         rate_hz=draft.rate_hz,
         driver=draft.driver,
         digest=digest,

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from dataclasses import asdict
 from typing import Any
 from uuid import UUID
 
@@ -11,9 +13,22 @@ from config.errors import Refusal
 from store import ledger_coefficients, ledger_marks, recall, recall_runs
 from store.names import check_name, check_text
 from store.rawcodec import encode
-from store.records import Mark, RawSamples, Reading, ReadingDraft, Run, RunDraft, RunState
+from store.records import (
+    Mark,
+    Measured,
+    RawSamples,
+    Reading,
+    ReadingDraft,
+    Run,
+    RunDraft,
+    RunState,
+    Vector,
+)
 from store.tables import (
     label,
+    level,
+    measured,
+    measured_vector,
     mount,
     raw,
     raw_aged,
@@ -95,7 +110,9 @@ def add_reading(
         steadiness=dict(draft.steadiness),
         flags=list(draft.flags),
     )
-    _add_vectors(w, reading_id, draft)
+    w.add_all(vector, [{"reading_id": reading_id, **v} for v in vector_rows(draft.vectors)])
+    if draft.measured is not None:
+        add_measured(w, reading_id, 1, draft.measured, of.set_up_id)
     if draft.raw is not None:
         _add_raw(w, reading_id, draft.raw)
     found = recall_runs.reading_by_id(w.c, reading_id)
@@ -103,26 +120,49 @@ def add_reading(
     return (found if ended is None else recall_runs.reading_by_id(w.c, reading_id)), ended
 
 
-def _add_vectors(w: Writer, reading_id: UUID, draft: ReadingDraft) -> None:
-    w.add_all(
-        vector,
-        [
-            {
-                "reading_id": reading_id,
-                "place": place,
-                "channel": v.channel,
-                "harmonic": v.order,
-                "re": v.value.real,
-                "im": v.value.imag,
-                "var_re": v.var_re,
-                "var_im": v.var_im,
-                "cov": v.cov,
-                "noise_floor": v.noise_floor,
-                "unit": v.unit,
-            }
-            for place, v in enumerate(draft.vectors)
-        ],
+def vector_rows(vectors: Sequence[Vector]) -> list[dict[str, Any]]:
+    """Vectors as columns, without the reading they belong to."""
+    return [
+        {
+            "place": place,
+            "channel": v.channel,
+            "harmonic": v.order,
+            "re": v.value.real,
+            "im": v.value.imag,
+            "var_re": v.var_re,
+            "var_im": v.var_im,
+            "cov": v.cov,
+            "noise_floor": v.noise_floor,
+            "unit": v.unit,
+        }
+        for place, v in enumerate(vectors)
+    ]
+
+
+def add_measured(w: Writer, reading_id: UUID, version: int, draft: Measured, set_up_id: UUID) -> None:
+    """How a reading was measured, with its levels; vectors of version 2 and later beside them."""
+    w.add(
+        measured,
+        reading_id=reading_id,
+        version=version,
+        set_up_id=draft.set_up_id or set_up_id,
+        why=draft.why,
+        speed_hz=draft.speed_hz,
+        revolutions=draft.revolutions,
+        duration_s=draft.duration_s,
+        flags=list(draft.flags),
+        figures=dict(draft.figures),
+        setting=dict(draft.setting),
+        software=draft.software,
+        numpy=draft.numpy,
+        processor=draft.processor,
+        at_us=w.now_us(),
+        who=draft.who,
     )
+    own = {"reading_id": reading_id, "version": version}
+    w.add_all(level, [{**own, "place": i, **asdict(v)} for i, v in enumerate(draft.levels)])
+    if version > 1:
+        w.add_all(measured_vector, [{**own, **v} for v in vector_rows(draft.vectors)])
 
 
 def _add_raw(w: Writer, reading_id: UUID, samples: RawSamples) -> None:

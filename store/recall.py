@@ -169,6 +169,7 @@ def _set_up(c: Connection, row: Row[Any]) -> SetUp:
             level_v=row.pulse_level_v,
             angle_deg=row.pulse_angle_deg,
             pulses=row.pulse_count,
+            pattern=row.pulse_pattern,
         ),
         rate_hz=row.rate_hz,
         driver=row.driver,
@@ -187,6 +188,7 @@ def _channel(row: Row[Any]) -> ChannelSetUp:
         coupling=row.coupling,
         filter=row.filter,
         skew_s=row.skew_s,
+        pair=row.pair,
         gap_low_v=row.gap_low_v,
         gap_high_v=row.gap_high_v,
     )

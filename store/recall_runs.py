@@ -16,6 +16,7 @@ from store.rawcodec import Packed, decode
 from store.records import (
     JobStory,
     Label,
+    Level,
     Mark,
     MarkState,
     Origin,
@@ -26,7 +27,18 @@ from store.records import (
     Vector,
     WeightEvent,
 )
-from store.tables import job, mark_now, mount, raw, raw_aged, reading_now, run_assign, run_now, vector
+from store.tables import (
+    job,
+    level_now,
+    mark_now,
+    mount,
+    raw,
+    raw_aged,
+    reading_now,
+    run_assign,
+    run_now,
+    vector_now,
+)
 from store.tables import run as run_table
 
 # --- runs --------------------------------------------------------------------------------------------
@@ -172,15 +184,20 @@ def _readings(c: Connection, condition: Any) -> dict[UUID, list[Reading]]:
     rows = c.execute(select(reading_now).where(condition).order_by(reading_now.c.seq)).all()
     ids = select(reading_now.c.id).where(condition)
     vectors: dict[UUID, list[Vector]] = defaultdict(list)
-    for v in c.execute(select(vector).where(vector.c.reading_id.in_(ids)).order_by(vector.c.place)):
+    for v in c.execute(
+        select(vector_now).where(vector_now.c.reading_id.in_(ids)).order_by(vector_now.c.place)
+    ):
         vectors[v.reading_id].append(_vector(v))
+    levels: dict[UUID, list[Level]] = defaultdict(list)
+    for v in c.execute(select(level_now).where(level_now.c.reading_id.in_(ids)).order_by(level_now.c.place)):
+        levels[v.reading_id].append(_level(v))
     found: dict[UUID, list[Reading]] = defaultdict(list)
     for row in rows:
-        found[row.run_id].append(_reading(row, vectors[row.id]))
+        found[row.run_id].append(_reading(row, vectors[row.id], levels[row.id]))
     return found
 
 
-def _reading(row: Row[Any], vectors: Sequence[Vector]) -> Reading:
+def _reading(row: Row[Any], vectors: Sequence[Vector], levels: Sequence[Level]) -> Reading:
     return Reading(
         id=row.id,
         run_id=row.run_id,
@@ -194,7 +211,14 @@ def _reading(row: Row[Any], vectors: Sequence[Vector]) -> Reading:
         vectors=tuple(vectors),
         label=None if row.label is None else Label(row.label),
         labelled_by=row.labelled_by,
+        levels=tuple(levels),
+        figures=row.figures,
+        version=row.version,
     )
+
+
+def _level(row: Row[Any]) -> Level:
+    return Level(row.channel, row.gap_v, row.residual_sd, row.peak_to_peak, row.ac_rms, row.unit)
 
 
 def _vector(row: Row[Any]) -> Vector:

@@ -135,6 +135,8 @@ class ChannelSetUp:
     skew_s: float = 0.0
     gap_low_v: float | None = None
     gap_high_v: float | None = None
+    pair: str | None = None
+    """Name shared by the two probes of an XY pair; None = it has no partner."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,6 +150,8 @@ class PulseSetUp:
     """Trigger level; None = automatic (middle of the pulse)."""
     angle_deg: float
     pulses: int = 1
+    pattern: Mapping[str, Any] | None = None
+    """How the one pulse that counts is told from the others of a turn; None = there is one pulse a turn."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -251,6 +255,79 @@ class Vector:
     unit: str
 
 
+@dataclass(frozen=True, slots=True)
+class Level:
+    """What one channel's samples look like beside its vectors; amplitudes in base unit, not 0-peak."""
+
+    channel: str
+    gap_v: float
+    residual_sd: float
+    """Standard deviation of what offset and orders leave."""
+    peak_to_peak: float
+    """Overall, median over the parts of the window."""
+    ac_rms: float
+    unit: str
+
+
+@dataclass(frozen=True, slots=True)
+class Measured:
+    """A reading's arithmetic done once: what came out, with which set-up, setting and build.
+
+    ``figures`` and ``setting`` are plain JSON (``daq.signal.shapes.Measurement.figures``,
+    ``daq.signal.setting.Setting.to_json``); the same setting, counts and build give the same bits."""
+
+    why: str
+    """``live``, ``recompute`` or the reason of a revision."""
+    set_up_id: UUID | None
+    """None in a draft = the run's own."""
+    speed_hz: float
+    revolutions: int
+    duration_s: float
+    flags: tuple[str, ...]
+    figures: Mapping[str, Any]
+    setting: Mapping[str, Any]
+    software: str
+    numpy: str
+    processor: str
+    vectors: tuple[Vector, ...]
+    levels: tuple[Level, ...]
+    version: int = 0
+    """1 = live; 0 in a draft = the next."""
+    at_us: int = 0
+    who: str = ""
+
+
+Direction = Literal["up", "down"]
+
+
+@dataclass(frozen=True, slots=True)
+class TracePoint:
+    """1X of all channels over one step of a run-up or coast-down."""
+
+    t_s: float
+    """From the start of the trace to the middle of the step."""
+    speed_hz: float
+    revolutions: int
+    vectors: tuple[complex, ...]
+    """By channel of the trace, 0-peak, base unit, raw (no slow roll taken off)."""
+    se: tuple[float, ...]
+    gap_v: tuple[float, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Trace:
+    """One stretch of a run in which the speed went one way; up and down are never averaged."""
+
+    direction: Direction
+    channels: tuple[str, ...]
+    units: tuple[str, ...]
+    started_us: int
+    duration_s: float
+    points: tuple[TracePoint, ...]
+    number: int = 0
+    """Within the run, from 1; 0 in a draft."""
+
+
 def flags_of(flags: Iterable[str], channel: str) -> tuple[str, ...]:
     """Of a reading's health flags (``code``, or ``code:channel``) those that concern a channel."""
     return tuple(f for f in flags if f.partition(":")[2] in ("", channel))
@@ -275,6 +352,15 @@ class Reading:
     label: Label | None = None
     """The newest label; earlier ones stay in the store."""
     labelled_by: str = ""
+    levels: tuple[Level, ...] = ()
+    """By channel; empty for readings made before they were kept."""
+    figures: Mapping[str, Any] = field(default_factory=dict)
+    """Of the newest arithmetic: see ``Measured``."""
+    version: int = 1
+    """Of the arithmetic that stands: 1 = live, later ones recomputed or revised."""
+
+    def level(self, channel: str) -> Level | None:
+        return next((v for v in self.levels if v.channel == channel), None)
 
     def vector(self, channel: str, order: int = 1) -> Vector | None:
         return next((v for v in self.vectors if v.channel == channel and v.order == order), None)
@@ -405,6 +491,8 @@ class ReadingDraft:
     flags: tuple[str, ...]
     vectors: tuple[Vector, ...]
     raw: RawSamples | None
+    measured: Measured | None = None
+    """How it was measured; None (typed or made by tests) leaves no such row."""
 
 
 @dataclass(frozen=True, slots=True)

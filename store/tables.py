@@ -103,6 +103,7 @@ set_up = Table(
     real("pulse_level_v", optional=True),
     real("pulse_angle_deg"),
     whole("pulse_count"),
+    json_text("pulse_pattern", optional=True),
     real("rate_hz"),
     text("driver"),
     text("digest"),
@@ -129,6 +130,7 @@ set_up_channel = Table(
     real("skew_s"),
     real("gap_low_v", optional=True),
     real("gap_high_v", optional=True),
+    text("pair", optional=True),
 )
 
 # --- jobs, mounts, weights ---------------------------------------------------------------------------
@@ -357,6 +359,91 @@ vector = Table(
     sqlite_with_rowid=False,
 )
 
+# one row each time a reading's arithmetic was done: version 1 live, the newest stands
+measured = Table(
+    "measured",
+    metadata,
+    seq(),
+    ref("reading_id", "reading.id"),
+    whole("version"),
+    ref("set_up_id", "set_up.id"),
+    text("why"),
+    real("speed_hz"),
+    whole("revolutions"),
+    real("duration_s"),
+    json_text("flags"),
+    json_text("figures"),
+    json_text("setting"),
+    text("software"),
+    text("numpy"),
+    text("processor"),
+    whole("at_us"),
+    text("who"),
+    UniqueConstraint("reading_id", "version"),
+)
+
+_VECTOR = ("re", "im", "var_re", "var_im", "cov", "noise_floor")
+
+# vectors of versions 2 and later; those of version 1 are in vector
+measured_vector = Table(
+    "measured_vector",
+    metadata,
+    ref("reading_id", "reading.id", primary=True),
+    whole("version", primary=True),
+    whole("place", primary=True),
+    text("channel"),
+    whole("harmonic"),
+    *(real(name) for name in _VECTOR),
+    text("unit"),
+    sqlite_with_rowid=False,
+)
+
+_LEVEL = ("gap_v", "residual_sd", "peak_to_peak", "ac_rms")
+
+level = Table(
+    "level",
+    metadata,
+    ref("reading_id", "reading.id", primary=True),
+    whole("version", primary=True),
+    whole("place", primary=True),
+    text("channel"),
+    *(real(name) for name in _LEVEL),
+    text("unit"),
+    sqlite_with_rowid=False,
+)
+
+# one stretch of a run in which the speed went one way, and 1X of each channel at each of its steps
+trace = Table(
+    "trace",
+    metadata,
+    seq(),
+    ref("run_id", "run.id"),
+    whole("number"),
+    text("direction"),
+    whole("started_us"),
+    real("duration_s"),
+    UniqueConstraint("run_id", "number"),
+    CheckConstraint("direction IN ('up', 'down')", name="direction"),
+)
+
+trace_vector = Table(
+    "trace_vector",
+    metadata,
+    Column("trace_seq", Integer, ForeignKey("trace.seq"), primary_key=True),
+    whole("step", primary=True),
+    whole("place", primary=True),
+    text("channel"),
+    real("t_s"),
+    real("speed_hz"),
+    whole("revolutions"),
+    real("re"),
+    real("im"),
+    real("se"),
+    real("gap_v"),
+    text("unit"),
+    sqlite_with_rowid=False,
+)
+
 raw = Table(
     "raw",
     metadata,
@@ -547,8 +634,33 @@ reading_now = Table(
     whole("first_sample"),
     json_text("steadiness"),
     json_text("flags"),
+    json_text("figures"),
+    whole("version"),
     text("label"),
     text("labelled_by"),
+)
+
+vector_now = Table(
+    "vector_now",
+    views,
+    Column("reading_id", Uuid16),
+    whole("version"),
+    whole("place"),
+    text("channel"),
+    whole("harmonic"),
+    *(real(name) for name in _VECTOR),
+    text("unit"),
+)
+
+level_now = Table(
+    "level_now",
+    views,
+    Column("reading_id", Uuid16),
+    whole("version"),
+    whole("place"),
+    text("channel"),
+    *(real(name) for name in _LEVEL),
+    text("unit"),
 )
 
 mount_now = Table(

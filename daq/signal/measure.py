@@ -18,6 +18,7 @@ from daq.signal.blocks import usable_orders
 from daq.signal.edges import EdgeFinder, trigger_of
 from daq.signal.revolutions import Turns, turns_of
 from daq.signal.shapes import (
+    NOWHERE,
     ChannelLevel,
     ChannelParams,
     Complexes,
@@ -25,6 +26,7 @@ from daq.signal.shapes import (
     Measurement,
     OrderVector,
     PulseParams,
+    Surroundings,
     check_columns,
     noise_floor,
 )
@@ -59,6 +61,7 @@ def measure(
     stop: int | None = None,
     orders: Sequence[int] = (1, 2, 3),
     min_signal_to_noise: float = 3.0,
+    surroundings: Surroundings = NOWHERE,  # noqa: ARG001 - what is built on it comes next
     breaks: Sequence[int] = (),
 ) -> Measurement:
     """Vectors of all probes over the whole turns in ``counts[start:stop]``, with their uncertainty.

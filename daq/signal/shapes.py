@@ -7,7 +7,7 @@ A vector is ``A e^{+j lag}``, 0-peak, in the probe's base unit (um, mm/s or m/s2
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from typing import Any, Literal
 
 import numpy as np
@@ -58,6 +58,31 @@ class ChannelParams:
     def units_per_count(self) -> float:
         """Base units per count, with the sense of positive."""
         return self.volts_per_count / self.volts_per_unit * self.positive
+
+
+@dataclass(frozen=True, slots=True)
+class Surroundings:
+    """What else vibrates near the machine at frequencies known beforehand."""
+
+    mains_hz: float | None = None
+    """Frequency of the supply, whose multiples hum; None = not watched."""
+    neighbours_hz: tuple[float, ...] = ()
+    """Running speeds of machines nearby."""
+
+
+NOWHERE = Surroundings()
+"""Nothing known."""
+
+
+@dataclass(frozen=True, slots=True)
+class Line:
+    """A line that is no multiple of the speed, found in one probe and modelled beside the orders."""
+
+    channel: str
+    order: float
+    """Its frequency over the speed."""
+    amplitude: float
+    """0-peak, base units."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -147,6 +172,25 @@ class Measurement:
     vectors: tuple[OrderVector, ...]
     levels: tuple[ChannelLevel, ...]
     flags: tuple[str, ...]
+    edge_deg: float = 0.0
+    """Part of every phase's uncertainty that the once-per-rev sampling leaves and no averaging lessens."""
+    pulse_share: float = 0.0
+    """Share of a turn that the side of the pulse lasts which the triggering edge begins."""
+    speed_sd_hz: float = 0.0
+    """Standard deviation of the speed within the window, over steps of a tenth of a second or more."""
+    lines: tuple[Line, ...] = ()
+
+    @property
+    def figures(self) -> dict[str, Any]:
+        """What is kept with a reading beside vectors, levels and flags, as plain JSON."""
+        return {
+            "missed": self.missed,
+            "doubles": self.doubles,
+            "edge_deg": self.edge_deg,
+            "pulse_share": self.pulse_share,
+            "speed_sd_hz": self.speed_sd_hz,
+            "lines": [asdict(line) for line in self.lines],
+        }
 
     def vector(self, channel: str, order: int = 1) -> OrderVector | None:
         return next((v for v in self.vectors if v.channel == channel and v.order == order), None)

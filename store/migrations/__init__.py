@@ -10,7 +10,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-KNOWN = ("0001",)
+KNOWN = ("0001", "0002")
 """Revisions in order; the last is what this software reads and writes."""
 HEAD = KNOWN[-1]
 SCRIPTS = Path(__file__).parent

@@ -191,7 +191,7 @@ def test_unknown_things_are_refused(stand: Stand) -> None:
 
 def test_info(stand: Stand) -> None:
     info = stand.history.info()
-    assert (info.schema, info.made_by, info.made_us % 1000) == ("0001", "revmark test", 0)
+    assert (info.schema, info.made_by, info.made_us % 1000) == ("0002", "revmark test", 0)
     assert info.store_id.version == 7
     assert info.file_bytes == stand.path.stat().st_size
     assert info.wal_bytes > 0
@@ -220,4 +220,4 @@ def test_reading_makes_no_store_and_needs_no_daemon(store_path: Path) -> None:
     with History.open(store_path) as history:
         assert history.machines() == ()
     assert store_path.read_bytes() == before
-    assert database.read_header(store_path).user_version == 1
+    assert database.read_header(store_path).user_version == 2

@@ -45,7 +45,7 @@ def _damage_page(path: Path) -> None:
 
 def test_sound_store(used: Stand) -> None:
     report = check(used.path)
-    assert (report.problems, report.schema, report.raw_checked) == ((), "0001", 1)
+    assert (report.problems, report.schema, report.raw_checked) == ((), "0002", 1)
     assert report.rows == sum(used.history.counts().values())
     assert check(used.path, with_raw=False).raw_checked == 0
 
@@ -188,7 +188,7 @@ def _type(*words: str | Path, env: dict[str, str] | None = None) -> Result:
 def test_check_command(used: Stand) -> None:
     done = _type("check", "--store", used.path)
     assert done.exit_code == 0
-    assert "is sound: schema 0001" in " ".join(done.output.split())
+    assert "is sound: schema 0002" in " ".join(done.output.split())
     assert "Raw samples of 1 readings checked." in done.output
     told = json.loads(_type("check", "--quick", "--json", "--store", used.path).output)
     assert (told["sound"], told["problems"], told["raw_checked"]) == (True, [], 0)
@@ -212,7 +212,7 @@ def test_backup_and_restore_commands(used: Stand, tmp_path: Path) -> None:
 
 def test_migrate_command(used: Stand) -> None:
     told = json.loads(_type("migrate", "--list", "--json", "--store", used.path).output)
-    assert [(s["revision"], s["done"]) for s in told] == [("0001", True)]
+    assert [(s["revision"], s["done"]) for s in told] == [("0001", True), ("0002", True)]
     assert "0001  done  The record" in _type("migrate", "--list", "--store", used.path).output
     locked = _type("migrate", "--store", used.path)
     assert isinstance(locked.exception, StoreError)

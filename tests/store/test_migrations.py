@@ -23,8 +23,8 @@ NEXT = '''"""A later step, for the tests."""
 import os, signal
 from alembic import op
 
-revision = "0002"
-down_revision = "0001"
+revision = "0003"
+down_revision = "0002"
 
 
 def upgrade():
@@ -32,7 +32,7 @@ def upgrade():
     op.get_bind().exec_driver_sql("CREATE TABLE weather (seq INTEGER PRIMARY KEY, text TEXT)")
     {crash}
     op.get_bind().exec_driver_sql("INSERT INTO weather VALUES (1, 'fine')")
-    op.get_bind().exec_driver_sql("PRAGMA user_version = 2")
+    op.get_bind().exec_driver_sql("PRAGMA user_version = 3")
 '''
 
 
@@ -44,7 +44,7 @@ def scripts(tmp_path: Path) -> Path:
 
 
 def _next(scripts: Path, crash: str = "") -> None:
-    (scripts / "versions" / "0002_weather.py").write_text(NEXT.format(crash=crash))
+    (scripts / "versions" / "0003_weather.py").write_text(NEXT.format(crash=crash))
     shutil.rmtree(scripts / "versions" / "__pycache__", ignore_errors=True)
 
 
@@ -68,14 +68,15 @@ def test_migrate(store_path: Path, scripts: Path) -> None:
     _next(scripts)
     assert [(s.revision, s.done) for s in list_migrations(store_path, scripts=scripts)] == [
         ("0001", True),
-        ("0002", False),
+        ("0002", True),
+        ("0003", False),
     ]
     before = _schema(store_path)
     report = migrate(store_path, clock=FakeClock(), scripts=scripts)
-    assert [s.revision for s in report.done] == ["0002"]
+    assert [s.revision for s in report.done] == ["0003"]
     assert _weather(store_path) == [("fine",)]
     # 1 700 000 000 s after 1970 is 14 November 2023, 22:13:20 UTC
-    assert report.backup == store_path.with_name("bay.sqlite.before-0002-20231114T221320Z")
+    assert report.backup == store_path.with_name("bay.sqlite.before-0003-20231114T221320Z")
     assert report.backup is not None
     assert _schema(report.backup) == before
     again = migrate(store_path, clock=FakeClock(), scripts=scripts)

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from daq.signal import health
 from daq.signal.blocks import usable_orders
+from daq.signal.covariance import stated_covariance
 from daq.signal.edges import EdgeFinder, trigger_of
 from daq.signal.revolutions import Turns, turns_of
 from daq.signal.shapes import (
@@ -30,7 +31,7 @@ from daq.signal.shapes import (
     check_columns,
     noise_floor,
 )
-from daq.signal.vectors import Accumulator, Fit, stated_covariance, turn_pieces
+from daq.signal.vectors import Accumulator, Fit, turn_pieces
 
 PARTS = 16
 """A window is cut into so many parts, or one a turn, whose vectors give the scatter."""

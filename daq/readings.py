@@ -12,6 +12,7 @@ from config.version import __version__
 from daq.clock import Clock
 from daq.drivers.base import SourceInfo
 from daq.raw_window import RawWindow
+from daq.signal.health import RAW_TOO_LARGE
 from daq.signal.setting import Setting
 from daq.signal.shapes import BlockFit, ChannelParams, Measurement, PulseParams
 from daq.signal.steadiness import Verdict
@@ -20,7 +21,6 @@ from store.records import Level, Measured, RawSamples, ReadingDraft, Vector
 MARGIN_TURNS = 0.5
 """Part of a turn kept on either side of the window, so that the edges that bound it lie inside."""
 MIB = 1024 * 1024
-RAW_TOO_LARGE = "raw_not_kept"
 
 
 class ReadingMaker:

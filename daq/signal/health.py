@@ -35,12 +35,26 @@ CLIPPED = "clipped"
 FLAT = "flat"
 GAP = "gap_voltage"
 WEAK = "weak_1x"
+LEVEL = "level_marginal"
+WRONG_EDGE = "wrong_edge"
+NOISE = "noisy"
+HUNTING = "speed_hunting"
+BELOW_FLOOR = "below_floor"
+SUBSYNC = "subsynchronous"
+MAINS = "near_mains"
+NEIGHBOUR = "near_neighbour"
+RUNOUT = "mostly_runout"
+PRECESSION = "backward_precession"
+RAW_TOO_LARGE = "raw_not_kept"
 
 SENTENCES: dict[str, str] = {
     NO_PULSES: "No once-per-rev pulses stand out, so there is no speed and no phase.",
     LOST_PULSES: "The once-per-rev signal is lost while the probes still vibrate.",
-    MISSED: "Some once-per-rev pulses were missed; the turns they belong to are left out.",
-    DOUBLES: "Some once-per-rev pulses came twice; the turns they cut are left out.",
+    MISSED: "Some once-per-rev pulses were missed; where they belong is taken from their neighbours.",
+    DOUBLES: "Some once-per-rev pulses came twice; the extra ones are taken out.",
+    LEVEL: "The once-per-rev level is marginal: the pulses hardly stand out, so some may be missed or doubled.",
+    WRONG_EDGE: "The once-per-rev pulse fills more than half a turn, so the other edge may be meant; it shifts "
+    "every phase by the width of the mark.",
     FEW_SAMPLES: "The pulse or the turn has too few samples: the sampling rate is too low for this speed.",
     SAMPLES_LOST: "Samples were lost inside the window; nothing is computed across the gap.",
     CLIPPED: "{channel} is clipped: its voltage reaches the end of the input's range.",
@@ -48,6 +62,19 @@ SENTENCES: dict[str, str] = {
     GAP: "{channel} has its gap voltage outside the limits of the stand file.",
     WEAK: "{channel}: its 1X is less than 3 times the noise of single samples (or the stand file's "
     "min_signal_to_noise; marine practice 3:1); the averaged vector's own +- stands beside it.",
+    NOISE: "{channel} is noisy: what is left beside the harmonics is above its noise_limit.",
+    HUNTING: "The speed hunts inside the window, so amplitude and phase are averages over changing speeds.",
+    BELOW_FLOOR: "{channel}: its 1X is below its own 95 % noise floor, so it has no phase.",
+    SUBSYNC: "{channel} shows strong vibration below running speed; it is taken out of the vector.",
+    MAINS: "{channel}: mains hum lies too near 1X or a harmonic to be told apart in this window; the +- is "
+    "wider for it.",
+    NEIGHBOUR: "{channel}: a neighbour machine turns too near 1X or a harmonic to be told apart in this "
+    "window; the +- is wider for it.",
+    RUNOUT: "{channel}: its 1X is mostly runout, much like the slow-roll vector of this job.",
+    PRECESSION: "{channel}: the shaft whirls against the declared rotation; check rotation, probe angles "
+    "and wiring.",
+    RAW_TOO_LARGE: "The samples of this reading were too many to keep (per_reading_mib), so it cannot be "
+    "recomputed.",
 }
 """Codes and what they mean."""
 SHORT: dict[str, str] = {
@@ -61,6 +88,17 @@ SHORT: dict[str, str] = {
     FLAT: "flat",
     GAP: "gap V",
     WEAK: "weak",
+    LEVEL: "level",
+    WRONG_EDGE: "edge?",
+    NOISE: "noisy",
+    HUNTING: "hunting",
+    BELOW_FLOOR: "floor",
+    SUBSYNC: "sub",
+    MAINS: "mains",
+    NEIGHBOUR: "neighbour",
+    RUNOUT: "runout",
+    PRECESSION: "backward",
+    RAW_TOO_LARGE: "no raw",
 }
 """One word for a column of a table."""
 

@@ -52,9 +52,10 @@ SENTENCES: dict[str, str] = {
     LOST_PULSES: "The once-per-rev signal is lost while the probes still vibrate.",
     MISSED: "Some once-per-rev pulses were missed; where they belong is taken from their neighbours.",
     DOUBLES: "Some once-per-rev pulses came twice; the extra ones are taken out.",
-    LEVEL: "The once-per-rev level is marginal: the pulses hardly stand out, so some may be missed or doubled.",
-    WRONG_EDGE: "The once-per-rev pulse fills more than half a turn, so the other edge may be meant; it shifts "
-    "every phase by the width of the mark.",
+    LEVEL: "The once-per-rev level is marginal: the pulses hardly stand out, so some may be missed "
+    "or doubled.",
+    WRONG_EDGE: "The once-per-rev pulse fills more than half a turn, so the other edge may be meant; it "
+    "shifts every phase by the width of the mark.",
     FEW_SAMPLES: "The pulse or the turn has too few samples: the sampling rate is too low for this speed.",
     SAMPLES_LOST: "Samples were lost inside the window; nothing is computed across the gap.",
     CLIPPED: "{channel} is clipped: its voltage reaches the end of the input's range.",

@@ -2,13 +2,9 @@
 
 from __future__ import annotations
 
-from datetime import tzinfo
-from typing import Any
-
 import click
 
 from cli.client import Client, find, new_key
-from cli.marked import vector_table
 from cli.output import (
     clean,
     finite,
@@ -21,10 +17,14 @@ from cli.output import (
     table,
     times,
 )
+from cli.runshow import show
 
 
 @click.group(help="Runs and their readings.")
 def group() -> None: ...
+
+
+group.add_command(show)
 
 
 @group.command(name="list", context_settings={"max_content_width": 80})
@@ -54,48 +54,6 @@ def list_(stand: str | None, job: str | None, machine: str | None, limit: int, *
     ]  # fmt: skip
     headers = ["run", "machine", "started", "r/min", "readings", "labels", "state"]
     say(table(rows, headers, "lllrrll"), times(zone))
-
-
-@group.command(context_settings={"max_content_width": 80})
-@click.argument("run")
-@stand_option
-@json_option
-def show(run: str, stand: str | None, *, as_json: bool) -> None:
-    """One run with its readings and vectors."""
-    from cli.place import manner, reading
-    from daq.signal.health import sentence
-    from store import asjson
-
-    with reading(stand) as history:
-        told = asjson.run_json(history.run(run))
-    if as_json:
-        print_json(told)
-        return
-    how = manner(stand)
-    say(*_described(told, how.zone))
-    for one in told["readings"]:
-        label = f" {one['label']}" if one["label"] else ""
-        say(
-            "",
-            f"reading {one['number']}{label}: {one['speed_rpm']:.1f} r/min, {one['revolutions']} revolutions "
-            f"in {one['duration_s']:.1f} s",
-            vector_table(one["vectors"], how.show),
-            *(f"flag: {clean(sentence(f))}" for f in one["flags"]),
-        )
-
-
-def _described(run: dict[str, Any], zone: tzinfo) -> list[str]:
-    also = f" (also {run['unassigned']})" if run["unassigned"] and run["job"] else ""
-    lines = [
-        f"run {clean(run['run'])}{also}: {run['origin']}, {run['state']}"
-        + (f", {clean(run['reason'])}" if run["reason"] else ""),
-        f"started {local(run['started_utc'], zone)}, ended {local(run['ended_utc'], zone)}; {times(zone)}",
-    ]
-    if run["operator"]:
-        lines.append(f"operator {clean(run['operator'])}")
-    if run["void"]:
-        lines.append(f"VOID: {clean(run['void'])}")
-    return lines
 
 
 @group.command()

@@ -94,6 +94,7 @@ def _summary(stand: Stand) -> Mapping[str, Any]:
         "once_per_rev": stand.pulse.model_dump(),
         "channels": [c.model_dump(exclude={"shown"}) | {"show": c.display.name} for c in stand.channels],
         "steadiness": {"preset": stand.steadiness_keys.preset, **stand.steadiness.to_dict()},
+        "surroundings": stand.surroundings.model_dump(),
         "run": stand.run.model_dump(),
     }
 
@@ -107,8 +108,21 @@ def _lines(stand: Stand) -> list[str]:
         f"Zero is {clean(stand.identity.zero)}.",
         table(_rows(stand), ("channel", "input", "sensitivity or edge", "deg", "shown"), "lllrl"),
         f"Steady ({preset}): {steady}, lookback {limits.lookback_s:g} s, hold {limits.hold_s:g} s.",
+        *_around(stand),
         f"Store: {clean(stand.store_path)}",
     ]
+
+
+def _around(stand: Stand) -> list[str]:
+    """XY pairs, and what else vibrates nearby."""
+    near, pairs = stand.surroundings, dict.fromkeys(c.pair for c in stand.channels if c.pair)
+    lines = [
+        f"XY pair {clean(name)}: {' and '.join(clean(c.name) for c in stand.channels if c.pair == name)}."
+        for name in pairs
+    ]
+    mains = "not watched ([surroundings] mains)" if near.mains_hz is None else f"{near.mains_hz:g} Hz"
+    others = ", ".join(f"{hz * 60:g} rpm" for hz in near.neighbours_hz)
+    return [*lines, f"Mains hum: {mains}." + (f" Neighbours: {others}." if others else "")]
 
 
 def _rows(stand: Stand) -> list[tuple[str, ...]]:

@@ -92,20 +92,21 @@ def percent(example: str) -> BeforeValidator:
     return reading(parse, example)
 
 
+def parse_amplitude(text: str, kind: str, example: str) -> float:
+    """``1 um pp`` as 0-peak in the base unit of ``kind``. Raises BadQuantity."""
+    number, _, shown = text.strip().partition(" ")
+    try:
+        value = float(number)
+    except ValueError:
+        value = -1.0
+    if not 0 < value < 1e6:
+        raise BadQuantity(f"{text!r} is not an amplitude above zero.", f'Write it as "{example}".')
+    return value / parse_display(shown, kind).factor
+
+
 def amplitude(kind: str, example: str) -> BeforeValidator:
     """``1 um pp`` as 0-peak in the base unit of ``kind``."""
-
-    def parse(text: str) -> float:
-        number, _, shown = text.strip().partition(" ")
-        try:
-            value = float(number)
-        except ValueError:
-            value = -1.0
-        if not 0 < value < 1e6:
-            raise BadQuantity(f"{text!r} is not an amplitude above zero.", f'Write it as "{example}".')
-        return value / parse_display(shown, kind).factor
-
-    return reading(parse, example)
+    return reading(lambda text: parse_amplitude(text, kind, example), example)
 
 
 def _printable(text: str) -> str:

@@ -24,6 +24,7 @@ from config.fields import (
     Volts,
     amplitude,
     as_text,
+    parse_amplitude,
     percent,
     quantity,
     typed,
@@ -150,6 +151,11 @@ class Channel(Section):
         default=typed("0 s"), alias="skew", validate_default=True
     )
     """How much later than the once-per-rev channel this one is sampled; -1 s to 1 s."""
+    pair: Name | None = Field(default=None, examples=["drive bearing"])
+    """Name shared by the two displacement probes of an XY pair: 90 deg apart (5 deg slack) at one place."""
+    noise_limit_pk: Annotated[float | None, as_text("2 um rms")] = Field(default=None, alias="noise_limit")
+    """What may be left beside the harmonics, an amplitude with unit and detector (held as the 0-peak of a
+    sine of the same rms); more is flagged. Left out = not watched."""
     shown: Annotated[InstanceOf[Display] | None, as_text("um pp")] = Field(default=None, alias="show")
     """How its amplitudes are shown, unit and detector; left out = um pp, mm/s rms or m/s2 rms by kind."""
 
@@ -178,6 +184,18 @@ class Channel(Section):
             raise wrong("an ac-coupled input shows no gap voltage; leave gap_limits out.")
         return limits
 
+    @field_validator("noise_limit_pk", mode="before")
+    @classmethod
+    def _noise_limit(cls, text: object, info: ValidationInfo) -> float | None:
+        kind = info.data.get("kind")
+        example = f"2 {SHOWN_BY_DEFAULT[kind].split()[0]} rms" if kind else "2 um rms"
+        if not isinstance(text, str):
+            raise wrong(f'{text!r} has no unit: write it in quotes with one, for example "{example}".')
+        try:
+            return parse_amplitude(text, kind, example) if kind else None
+        except BadQuantity as error:
+            raise wrong(str(error)) from error
+
     @field_validator("shown", mode="before")
     @classmethod
     def _shown(cls, text: object, info: ValidationInfo) -> Display | None:
@@ -203,6 +221,17 @@ class Channel(Section):
     def positive_sign(self) -> int:
         """+1 when a rising voltage is positive motion, -1 when it is negative."""
         return 1 if self.positive == "rising" else -1
+
+
+class Surroundings(Section):
+    """``[surroundings]``: what else vibrates near the machine, at frequencies known beforehand."""
+
+    mains_hz: SpeedHz | None = Field(default=None, alias="mains", examples=["50 Hz"])
+    """Frequency of the supply, "50 Hz" or "60 Hz": it hums, multiples too. Left out = hum is not watched."""
+    neighbours_hz: tuple[SpeedHz, ...] = Field(
+        default=(), alias="neighbours", strict=False, max_length=16, examples=[["1480 rpm"]]
+    )
+    """Running speeds of machines nearby, at most 16."""
 
 
 class ChangeFloor(Section):

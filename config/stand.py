@@ -18,6 +18,7 @@ from pydantic import Field, PrivateAttr, ValidationError
 
 from config.errors import StandFileError
 from config.fields import Section
+from config.pairs import pair_problems
 from config.problems import Problem, sentences
 from config.sections import (
     Access,
@@ -29,6 +30,7 @@ from config.sections import (
     Source,
     Steadiness,
     StoreFile,
+    Surroundings,
 )
 from config.steadiness import SteadinessLimits
 
@@ -63,6 +65,8 @@ class Stand(Section):
     """The probes, one [[channel]] each."""
     steadiness_keys: Steadiness = Field(default_factory=Steadiness, alias="steadiness")
     """When a reading is steady."""
+    surroundings: Surroundings = Field(default_factory=Surroundings)
+    """What else vibrates near the machine."""
     run: RunRules = Field(default_factory=RunRules)
     """What counts as a run."""
     raw: RawBudget = Field(default_factory=RawBudget)
@@ -134,7 +138,7 @@ class Stand(Section):
 
 def _channel_content(channel: Channel) -> dict[str, Any]:
     low_v, high_v = channel.gap_limits_v or (None, None)
-    same = ("name", "kind", "input", "volts_per_unit", "angle_deg", "coupling", "filter", "skew_s")
+    same = ("name", "kind", "input", "volts_per_unit", "angle_deg", "coupling", "filter", "skew_s", "pair")
     return {
         **channel.model_dump(include=set(same)),
         "unit": channel.unit,
@@ -184,7 +188,7 @@ def check_stand(path: str | os.PathLike[str], options_check: OptionsCheck) -> St
         stand = Stand.model_validate(raw)
     except ValidationError as error:
         problems += sentences(error, Stand)
-    problems += _shared(raw) + _of_options(raw, options_check)
+    problems += _shared(raw) + pair_problems(raw) + _of_options(raw, options_check)
     if problems or stand is None:
         raise _trouble(file, problems)
     stand._file = file

@@ -12,6 +12,7 @@ from config.version import __version__
 from daq.clock import Clock
 from daq.drivers.base import SourceInfo
 from daq.raw_window import RawWindow
+from daq.setup import surroundings
 from daq.signal.health import RAW_TOO_LARGE
 from daq.signal.setting import Setting
 from daq.signal.shapes import BlockFit, ChannelParams, Measurement, PulseParams
@@ -38,7 +39,11 @@ class ReadingMaker:
         self._info = info
         self._clock = clock
         self._setting = Setting(
-            pulse, channels, info.rate_hz, min_signal_to_noise=stand.steadiness.min_signal_to_noise
+            pulse,
+            channels,
+            info.rate_hz,
+            min_signal_to_noise=stand.steadiness.min_signal_to_noise,
+            surroundings=surroundings(stand),
         )
         self._units = {c.name: c.unit for c in stand.channels}
 

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 from config.stand import Channel, Stand
 from daq.drivers.base import ChannelPlan, ProbePlan, PulsePlan, SourceInfo
-from daq.signal.shapes import ChannelParams, PulseParams
+from daq.signal.shapes import ChannelParams, PulseParams, Surroundings
 from store.records import ChannelSetUp, PulseSetUp, SetUpDraft
 
 
@@ -71,12 +71,18 @@ def signal_params(stand: Stand, info: SourceInfo) -> tuple[PulseParams, tuple[Ch
             c.positive_sign,
             *_gap_limits(c),
             skew,
+            c.noise_limit_pk,
         )
         for c, volts, skew in zip(
             stand.channels, info.volts_per_count[1:], _skews(stand, info.skew_s), strict=True
         )
     )
     return pulse, channels
+
+
+def surroundings(stand: Stand) -> Surroundings:
+    """What else vibrates nearby, as the stand file says."""
+    return Surroundings(stand.surroundings.mains_hz, stand.surroundings.neighbours_hz)
 
 
 def _skews(stand: Stand, skew_s: Sequence[float]) -> tuple[float, ...]:

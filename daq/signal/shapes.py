@@ -53,6 +53,8 @@ class ChannelParams:
     gap_high_v: float | None = None
     skew_s: float = 0.0
     """How much later than the once-per-rev channel this one is sampled."""
+    noise_limit: float | None = None
+    """What may be left beside the orders, as the 0-peak of a sine of the same rms, base units; None = any."""
 
     @property
     def units_per_count(self) -> float:

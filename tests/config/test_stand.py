@@ -430,6 +430,7 @@ def test_the_set_up_content_fits_the_stores_records(tmp_path: Path) -> None:
         "skew_s": 2e-5,
         "gap_low_v": None,
         "gap_high_v": None,
+        "pair": None,
     }
 
 
@@ -465,6 +466,7 @@ def test_a_number_in_base_units_says_which_in_its_name() -> None:
         "_v",
         "_pct",
         "_pct_per_min",
+        "_pk",  # of a channel, in the base unit of its kind
         "_mib",
         "_um_pk",
         "_mm_s_pk",
@@ -481,3 +483,95 @@ def test_a_number_in_base_units_says_which_in_its_name() -> None:
                 seen += 1
                 assert name in plain or name.endswith(units), name
     assert seen > 20
+
+
+# --- XY pairs, noise limits, surroundings --------------------------------------------------------------
+
+PAIRED = GOOD.replace('angle = "45 deg"', 'angle = "45 deg"\npair = "drive"').replace(
+    """kind = "velocity"
+sensitivity = "4 mV/(mm/s)"
+positive = "falling"
+angle = "-45 deg"
+""",
+    """kind = "displacement"
+sensitivity = "200 mV/mil"
+positive = "falling"
+angle = "-45 deg"
+pair = "drive"
+""",
+)
+
+
+@pytest.mark.parametrize("angle", ["-45 deg", "135 deg", "-40 deg", "-50 deg"])
+def test_two_probes_90_deg_apart_are_a_pair(tmp_path: Path, angle: str) -> None:
+    stand = load_stand(write(tmp_path, PAIRED.replace("-45 deg", angle)))
+    assert [c["pair"] for c in stand.set_up_content(1000)["channels"]] == ["drive", "drive"]
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "key", "said"),
+    [
+        ('angle = "-45 deg"', 'angle = "-39 deg"', "channel.2.pair", "its probes stand 84 deg apart"),
+        ('angle = "-45 deg"', 'angle = "225 deg"', "channel.2.pair", "its probes stand 180 deg apart"),
+        ('pair = "drive"\n', "", "channel.2.pair", "'drive' has this channel only"),
+        ('pair = "drive"\n', 'pair = "Drive"\n', "channel.1.pair", "'Drive' has this channel only"),
+        ('pair = "drive"', 'pair = ""', "channel.1.pair", "must not be empty"),
+        ('pair = "drive"', "pair = 1", "channel.1.pair", "must be text in quotes, not 1"),
+    ],
+)
+def test_what_is_no_pair_is_refused(tmp_path: Path, old: str, new: str, key: str, said: str) -> None:
+    assert said in problems(tmp_path, PAIRED.replace(old, new, 1))[key]
+
+
+def test_all_that_is_wrong_with_pairs_is_said_at_once(tmp_path: Path) -> None:
+    third = """
+[[channel]]
+name = "probe 3"
+input = "3"
+kind = "velocity"
+sensitivity = "4 mV/(mm/s)"
+positive = "rising"
+angle = "0 deg"
+pair = "drive"
+
+[[channel]]
+name = "probe 4"
+input = "3"
+kind = "displacement"
+sensitivity = "200 mV/mil"
+positive = "rising"
+angle = "0 deg"
+pair = "free"
+"""
+    with pytest.raises(StandFileError) as caught:
+        load_stand(write(tmp_path, PAIRED + third))
+    told = "\n".join(f"{key}: {text}" for key, text in caught.value.problems)
+    assert "channel.3.pair: 'drive' is the pair of channel.1, channel.2 already" in told
+    assert "channel.3.pair: an XY pair takes displacement probes, and this channel's kind is" in told
+    assert "channel.4.pair: 'free' has this channel only" in told
+    assert "channel.4.input: '3' is wired to channel.3 already" in told
+
+
+def test_a_noise_limit_is_an_amplitude_of_the_channels_kind(tmp_path: Path) -> None:
+    with_limits = changed('show = "mil pp"', 'show = "mil pp"\nnoise_limit = "0.1 mil rms"').replace(
+        'coupling = "ac"', 'coupling = "ac"\nnoise_limit = "0.3 mm/s pk"'
+    )
+    first, second = load_stand(write(tmp_path, with_limits)).channels
+    assert first.noise_limit_pk == pytest.approx(0.1 * 25.4 * 2**0.5, rel=1e-14)
+    assert second.noise_limit_pk == 0.3
+    for text, said in (('"2 um"', "is no way to show"), ("2", "has no unit"), ('"-1 um rms"', "above zero")):
+        wrong = changed('show = "mil pp"', f"noise_limit = {text}")
+        assert said in problems(tmp_path, wrong)["channel.1.noise_limit"]
+
+
+def test_surroundings_in_hz(tmp_path: Path) -> None:
+    near = load_stand(write(tmp_path, GOOD)).surroundings
+    assert (near.mains_hz, near.neighbours_hz) == (None, ())
+    told = '[surroundings]\nmains = "60 Hz"\nneighbours = ["1480 rpm", "24.5 Hz"]\n'
+    near = load_stand(write(tmp_path, GOOD + told)).surroundings
+    assert near.mains_hz == 60.0
+    assert near.neighbours_hz == (pytest.approx(1480 / 60), 24.5)
+    found = problems(tmp_path, GOOD + '[surroundings]\nmains = 50\nneighbours = ["fast"]\nmain = 1\n')
+    assert "has no unit" in found["surroundings.mains"]
+    assert "is not a speed" in found["surroundings.neighbours.1"]
+    assert "did you mean mains?" in found["surroundings.main"]

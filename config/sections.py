@@ -260,12 +260,22 @@ class Steadiness(Section):
         default=None, alias="window"
     )
     """Shortest averaging window, 0.1 s to 1 h."""
+    longest_window_s: Annotated[float, quantity("time", "600 s", 0.1, 14_400), as_text("600 s")] | None = (
+        Field(default=None, alias="longest_window")
+    )
+    """Longest averaging window, up to 4 h; left out = ten shortest ones."""
     min_revolutions: int | None = Field(default=None, ge=6, le=100_000)
     """Fewest whole turns in the window; at least one for each block."""
     blocks: int | None = Field(default=None, ge=6, le=64)
     """Equal parts of the window, 6 to 64."""
+    amplitude_target_pct: Percent | None = Field(default=None, alias="amplitude_target")
+    """Averaging ends when the standard error of each 1X amplitude is down to this."""
+    phase_target_deg: Annotated[float, quantity("angle", "0.3 deg", 0.001, 30), as_text("0.3 deg")] | None = (
+        Field(default=None, alias="phase_target")
+    )
+    """The same for each 1X phase."""
     speed_band_pct: Percent | None = Field(default=None, alias="speed_band")
-    """Largest distance from the speed wanted."""
+    """Largest distance of the speed from its mean while it counts as held."""
     speed_sd_pct: Percent | None = Field(default=None, alias="speed_sd")
     """Largest standard deviation of the speed in the window."""
     speed_drift_pct_per_min: Annotated[float, percent("0.1 %/min"), as_text("0.1 %/min")] | None = Field(
@@ -282,6 +292,8 @@ class Steadiness(Section):
     """How far back the vectors are compared; "0 s" = within the window itself."""
     hold_s: Seconds | None = Field(default=None, alias="hold")
     """Time at speed before a reading counts."""
+    thermal_time_constant_s: Seconds | None = Field(default=None, alias="thermal_time_constant")
+    """Of what warms up slowest; a shorter quiet stretch than 0.7 of it is told with the reading."""
     min_signal_to_noise: float | None = Field(default=None, gt=0, le=1000)
     """1X amplitude over noise; below it a reading is flagged."""
 
@@ -292,6 +304,11 @@ class Steadiness(Section):
             raise wrong(
                 f"{limits.min_revolutions} turns do not fill {limits.blocks} blocks; ask for more turns."
             )
+        if limits.longest_window_s < limits.window_s:
+            raise wrong(
+                f"longest_window ({limits.longest_window_s:g} s) is shorter than window "
+                f"({limits.window_s:g} s); write {limits.window_s:g} s or more."
+            )
         return self
 
     def limits(self) -> SteadinessLimits:
@@ -299,6 +316,8 @@ class Steadiness(Section):
         given = self.model_dump(exclude={"preset", "change_floor"}, exclude_none=True)
         floors = self.change_floor.model_dump(exclude_none=True)
         given.update({"change_floor_" + name.partition("_")[2]: value for name, value in floors.items()})
+        if self.window_s is not None:
+            given.setdefault("longest_window_s", 10 * self.window_s)
         return replace(PRESETS[self.preset], **given)
 
 

@@ -170,6 +170,13 @@ WRONG: list[tuple[str, str, str, str]] = [
     ('preset = "small"', 'preset = "tiny"', "steadiness.preset", "must be 'standard' or 'small'"),
     ('preset = "small"', "window = 60", "steadiness.window", 'for example "60 s"'),
     ('preset = "small"', 'window = "0 s"', "steadiness.window", "is too small"),
+    (
+        'preset = "small"',
+        'window = "90 s"\nlongest_window = "60 s"',
+        "steadiness",
+        "longest_window (60 s) is shorter than window (90 s)",
+    ),
+    ('preset = "small"', 'phase_target = "0 deg"', "steadiness.phase_target", "is too small"),
     ('preset = "small"', "blocks = 5", "steadiness.blocks", "must be at least 6, not 5"),
     ('preset = "small"', "min_revolutions = 5", "steadiness.min_revolutions", "must be at least 6"),
     ('preset = "small"', 'preset = "small"\nblocks = 12', "steadiness", "10 turns do not fill 12 blocks"),
@@ -332,6 +339,9 @@ def test_the_standard_limits(tmp_path: Path) -> None:
     assert (limits.speed_band_pct, limits.speed_sd_pct, limits.speed_drift_pct_per_min) == (0.5, 0.1, 0.1)
     assert (limits.change_pct, limits.lookback_s, limits.hold_s) == (5, 300, 300)
     assert limits.min_signal_to_noise == 3
+    assert (limits.amplitude_target_pct, limits.phase_target_deg) == (0.5, 0.3)
+    assert (limits.longest_window_s, limits.thermal_time_constant_s) == (600, 1800)
+    assert limits.target_floor("displacement") == pytest.approx(0.05)
     assert limits.change_floor("displacement") == 0.5  # 1 um pk-pk
     assert limits.change_floor("velocity") == pytest.approx(0.05 * 2**0.5, rel=1e-3)  # 0.05 mm/s rms
     assert limits.change_floor("acceleration") == 0.02  # judged
@@ -342,7 +352,14 @@ def test_the_small_preset_differs_in_time_alone(tmp_path: Path) -> None:
     assert (limits.window_s, limits.min_revolutions, limits.lookback_s, limits.hold_s) == (3, 10, 0, 0)
     assert limits.speed_drift_pct_per_min * limits.window_s / 60 == pytest.approx(0.1)
     same = dataclasses.replace(
-        limits, window_s=60, min_revolutions=100, lookback_s=300, hold_s=300, speed_drift_pct_per_min=0.1
+        limits,
+        window_s=60,
+        longest_window_s=600,
+        min_revolutions=100,
+        lookback_s=300,
+        hold_s=300,
+        speed_drift_pct_per_min=0.1,
+        thermal_time_constant_s=1800,
     )
     assert same == SteadinessLimits()
 
@@ -360,12 +377,19 @@ change_floor = { displacement = "2 um pp", velocity = "0.1 mm/s rms", accelerati
 scatter = "7 %"
 lookback = "5 min"
 hold = "15 min"
+amplitude_target = "1 %"
+phase_target = "0.5 deg"
+thermal_time_constant = "45 min"
 min_signal_to_noise = 4.5
 """
     limits = load_stand(write(tmp_path, changed('preset = "small"', keys))).steadiness
     assert limits.to_dict() == pytest.approx(
         {
             "window_s": 90.0,
+            "longest_window_s": 900.0,
+            "amplitude_target_pct": 1.0,
+            "phase_target_deg": 0.5,
+            "thermal_time_constant_s": 2700.0,
             "min_revolutions": 20,
             "blocks": 10,
             "speed_band_pct": 0.2,

@@ -4,18 +4,21 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import replace
 from pathlib import Path
 from uuid import UUID
 
 from sqlalchemy import Connection, Engine, func, select
 
-from store import database, recall, recall_lists, recall_runs
+from config.errors import Refusal
+from store import database, recall, recall_lists, recall_measured, recall_runs, recall_traces
 from store.records import (
     Coefficient,
     Job,
     JobStory,
     Machine,
     Mark,
+    Measured,
     Model,
     Mount,
     RawSamples,
@@ -25,6 +28,7 @@ from store.records import (
     SetUp,
     StoreEvent,
     StoreInfo,
+    Trace,
     WeightEvent,
 )
 from store.tables import event, metadata
@@ -146,6 +150,24 @@ class History:
         with self._read() as c:
             return recall_runs.run_named(c, name)
 
+    def run_as(self, name: str, version: int) -> Run:
+        """The run with its readings as a version of the arithmetic has them (1 = live), those that have it.
+
+        Refusal when none has."""
+        with self._read() as c:
+            run = recall_runs.run_named(c, name)
+            found = [recall_measured.reading_as(c, r.id, version) for r in run.readings]
+        readings = tuple(r for r in found if r is not None)
+        if not readings:
+            newest = max((r.version for r in run.readings), default=0)
+            raise Refusal(f"Run {run.name} has no version {version} of any reading.", f"Newest: {newest}.")
+        return replace(run, readings=readings)
+
+    def measured(self, reading_id: UUID) -> tuple[Measured, ...]:
+        """How a reading was measured, oldest version first; empty when that was not recorded."""
+        with self._read() as c:
+            return recall_measured.versions(c, reading_id)
+
     def open_run(self) -> Run | None:
         """The run that has begun and not ended, with its readings so far."""
         with self._read() as c:
@@ -160,6 +182,11 @@ class History:
         """The samples of a reading, proven by their checksum. Refusal when they were not kept or let go."""
         with self._read() as c:
             return recall_runs.reading_raw(c, reading_id)
+
+    def traces(self, run_id: UUID) -> tuple[Trace, ...]:
+        """The run's run-ups and coast-downs, each apart, in order; empty when it has none."""
+        with self._read() as c:
+            return recall_traces.traces_of_run(c, run_id)
 
     def weights(self, mount_id: UUID) -> tuple[WeightEvent, ...]:
         """What is on the rotor now: fitted and not removed, and drilled."""

@@ -7,7 +7,7 @@ import json
 import logging
 import sqlite3
 import threading
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -16,7 +16,17 @@ from uuid import UUID
 from sqlalchemy import Connection, Engine, select
 
 from config.errors import Refusal, StoreError
-from store import database, ledger_coefficients, ledger_marks, ledger_rotor, ledger_runs, ledger_weights
+from store import (
+    database,
+    ledger_again,
+    ledger_coefficients,
+    ledger_marks,
+    ledger_rotor,
+    ledger_runs,
+    ledger_traces,
+    ledger_weights,
+)
+from store.again import RunAgain
 from store.copies import copy_store
 from store.database import StoreClock
 from store.identity import Identities
@@ -38,6 +48,7 @@ from store.records import (
     RunState,
     SetUp,
     SetUpDraft,
+    Trace,
     WeightEvent,
 )
 from store.tables import request, session
@@ -327,6 +338,11 @@ class Ledger:
         with self._write() as w:
             return ledger_runs.add_reading(w, run_id, draft, slow_roll_limit_hz)
 
+    def add_trace(self, run_id: UUID, draft: Trace) -> int:
+        """A run-up or coast-down with all its steps; returns its number within the run."""
+        with self._write() as w:
+            return ledger_traces.add(w, run_id, draft)
+
     def close_run(
         self,
         run_id: UUID,
@@ -358,6 +374,12 @@ class Ledger:
         with self._write() as w:
             return ledger_runs.revise(w, name, set_up_id, why, _who(who))
 
+    def keep_again(self, again: Sequence[RunAgain], why: str, who: str) -> tuple[Run, ...]:
+        """Runs measured again: new versions of their readings, and their corrected set-up where one is given.
+        All of them or none; what was there stays."""
+        with self._write() as w:
+            return ledger_again.keep(w, again, why, _who(who))
+
     def recover(self) -> tuple[Run, ...]:
         """Close runs a daemon left open, as interrupted; marks stay pending. For the start of a daemon."""
         with self._write() as w:
@@ -376,16 +398,19 @@ class Ledger:
         """
         digest = _digest(verb, body)
         with self._write() as w:
-            known = w.c.execute(
-                select(request).where(request.c.key == check_name("The request's key", key))
-            ).first()
-            if known is not None and known.body_sha256 != digest:
-                raise Refusal("This request's key was used for another request.", "Ask again with a new key.")
+            known = _known(w, key, digest)
             if known is not None:
-                return dict(known.answer)
+                return known
             answer = dict(fn())
             w.add(request, key=key, verb=verb, body_sha256=digest, answer=answer, at_us=w.now_us())
             return dict(json.loads(json.dumps(answer)))
+
+    def answered(self, key: str, verb: str, body: Mapping[str, Any]) -> dict[str, Any] | None:
+        """The answer ``once`` kept under the key, so that a retry need not prepare anything; else None.
+
+        Another verb or body under the key: Refusal."""
+        with self._write() as w:
+            return _known(w, key, _digest(verb, body))
 
     def rebuild_coefficients(self, job: str | None = None) -> int:
         """Derive the coefficients anew, of one job or of all; returns how many there are."""
@@ -422,6 +447,13 @@ class Ledger:
 
 def _who(who: str) -> str:
     return check_text("Who does this:", who)
+
+
+def _known(w: Writer, key: str, digest: str) -> dict[str, Any] | None:
+    found = w.c.execute(select(request).where(request.c.key == check_name("The request's key", key))).first()
+    if found is not None and found.body_sha256 != digest:
+        raise Refusal("This request's key was used for another request.", "Ask again with a new key.")
+    return None if found is None else dict(found.answer)
 
 
 def _digest(verb: str, body: Mapping[str, Any]) -> str:

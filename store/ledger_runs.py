@@ -279,16 +279,14 @@ def revise(w: Writer, name: str, set_up_id: UUID, why: str, who: str) -> Run:
     """Say that a run was measured with another revision of the set-up than was thought."""
     of = _closed(w, name)
     recall.set_up_by_id(w.c, set_up_id)
-    w.add(
-        run_revise,
-        run_id=of.id,
-        set_up_id=set_up_id,
-        why=check_text("The reason", why),
-        at_us=w.now_us(),
-        who=who,
-    )
+    add_revision(w, of.id, set_up_id, check_text("The reason", why), who)
     _rebuild(w, of)
     return recall_runs.run_by_id(w.c, of.id)
+
+
+def add_revision(w: Writer, run_id: UUID, set_up_id: UUID, why: str, who: str) -> None:
+    """The row that gives a run another set-up."""
+    w.add(run_revise, run_id=run_id, set_up_id=set_up_id, why=why, at_us=w.now_us(), who=who)
 
 
 def _closed(w: Writer, name: str) -> Run:

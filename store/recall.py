@@ -33,6 +33,7 @@ from store.tables import (
     model,
     mount_mark_now,
     mount_now,
+    run_revise,
     set_up,
     set_up_channel,
     weight,
@@ -145,8 +146,13 @@ def set_up_by_id(c: Connection, set_up_id: UUID) -> SetUp:
 
 
 def newest_set_up(c: Connection) -> SetUp | None:
-    """The set-up entered last; None in a store that never measured."""
-    row = c.execute(select(set_up).order_by(set_up.c.seq.desc()).limit(1)).first()
+    """The stand's set-up entered last; None in a store that never measured.
+
+    One that only corrects runs of the past (and measured none) is not the stand's."""
+    corrects = select(run_revise.c.seq).where(run_revise.c.set_up_id == set_up.c.id).exists()
+    measured = select(run_table.c.seq).where(run_table.c.set_up_id == set_up.c.id).exists()
+    newest = select(set_up).where(~corrects | measured).order_by(set_up.c.seq.desc()).limit(1)
+    row = c.execute(newest).first()
     return None if row is None else _set_up(c, row)
 
 

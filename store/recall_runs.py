@@ -187,10 +187,10 @@ def _readings(c: Connection, condition: Any) -> dict[UUID, list[Reading]]:
     for v in c.execute(
         select(vector_now).where(vector_now.c.reading_id.in_(ids)).order_by(vector_now.c.place)
     ):
-        vectors[v.reading_id].append(_vector(v))
+        vectors[v.reading_id].append(to_vector(v))
     levels: dict[UUID, list[Level]] = defaultdict(list)
     for v in c.execute(select(level_now).where(level_now.c.reading_id.in_(ids)).order_by(level_now.c.place)):
-        levels[v.reading_id].append(_level(v))
+        levels[v.reading_id].append(to_level(v))
     found: dict[UUID, list[Reading]] = defaultdict(list)
     for row in rows:
         found[row.run_id].append(_reading(row, vectors[row.id], levels[row.id]))
@@ -217,11 +217,13 @@ def _reading(row: Row[Any], vectors: Sequence[Vector], levels: Sequence[Level]) 
     )
 
 
-def _level(row: Row[Any]) -> Level:
+def to_level(row: Row[Any]) -> Level:
+    """A row of ``level`` or ``level_now``."""
     return Level(row.channel, row.gap_v, row.residual_sd, row.peak_to_peak, row.ac_rms, row.unit)
 
 
-def _vector(row: Row[Any]) -> Vector:
+def to_vector(row: Row[Any]) -> Vector:
+    """A row of ``vector``, ``measured_vector`` or ``vector_now``."""
     return Vector(
         channel=row.channel,
         order=row.harmonic,

@@ -9,7 +9,7 @@ Base units: um, mm/s, m/s2 by the channel's kind; g.mm; Hz; degrees; microsecond
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from enum import StrEnum
 from typing import Any, Literal
 from uuid import UUID
@@ -172,6 +172,11 @@ class SetUp:
 
     def channel(self, name: str) -> ChannelSetUp | None:
         return next((c for c in self.channels if c.name == name), None)
+
+    def draft(self) -> SetUpDraft:
+        """The same content without identity, to be kept with something changed."""
+        same = {f.name: getattr(self, f.name) for f in fields(SetUpDraft)}
+        return SetUpDraft(**same)
 
 
 # --- a job and how the machine stands there ----------------------------------------------------------

@@ -9,14 +9,17 @@ from uuid import UUID
 
 import numpy as np
 
+from store.again import Remeasured, RunAgain
 from store.history import History
 from store.ledger import Ledger
 from store.records import (
     ChannelSetUp,
     Label,
+    Level,
     MachineDraft,
     Mark,
     MarkPosition,
+    Measured,
     Mount,
     MountDraft,
     Origin,
@@ -119,6 +122,26 @@ def reading(value: complex = 10 + 0j, speed_hz: float = 25.0, **other: Any) -> R
     return replace(draft, **other)
 
 
+def measured(value: complex = 10 + 0j, **other: Any) -> Measured:
+    """How such a reading was measured, with a level for each probe."""
+    draft = Measured(
+        why="live",
+        set_up_id=None,
+        speed_hz=25.0,
+        revolutions=100,
+        duration_s=4.0,
+        flags=("near gap limit",),
+        figures={"missed": 0},
+        setting={"rate_hz": 25_600.0},
+        software="revmark test",
+        numpy="2.4.6",
+        processor="x86_64",
+        vectors=(vector(value), vector(value, "probe 2"), vector(0.1j, order=2)),
+        levels=(Level("probe 1", -9.8, 0.4, 25.0, 7.1, "um"), Level("probe 2", -10.1, 0.3, 24.0, 7.0, "um")),
+    )
+    return replace(draft, **other)
+
+
 def samples(seed: int = 1, frames: int = 200) -> RawSamples:
     counts = np.random.default_rng(seed).integers(-20_000, 20_000, size=(frames, 3), dtype=np.int16)
     return RawSamples(counts, (0.001, 0.002, 0.003), 25_600.0, 51_200)
@@ -169,6 +192,22 @@ class Stand:
         run = self.begin()
         found, _ = self.ledger.add_reading(run.id, reading(value, speed_hz, **other), slow_roll_limit_hz=5.0)
         return self.end(run.id)[0], found
+
+    def again(
+        self, name: str, value: complex, set_up: SetUpDraft | None = None, why: str = "read again"
+    ) -> Run:
+        """Every reading of a run measured again, each probe with that vector."""
+        of = self.history.run(name)
+        readings = tuple(
+            Remeasured(
+                r.id,
+                max((m.version for m in self.history.measured(r.id)), default=0),
+                measured(value, why=why),
+            )
+            for r in of.readings
+        )
+        (kept,) = self.ledger.keep_again([RunAgain(of.id, of.set_up_id, set_up, readings)], why, "ana")
+        return kept
 
     def fit(self, mass_g: float = 3.0, hole: int = 16, after_run: str | None = None) -> None:
         self.ledger.fit(PieceDraft(1, mass_g, hole), "ana", after_run)

@@ -10,13 +10,16 @@ import sys
 from pathlib import Path
 
 import pytest
-from store_kit import FakeClock, Stand
+from store_kit import FakeClock, Stand, samples
 
 from config.errors import StoreError
-from store import maintenance
+from store import maintenance, schema
+from store.database import writer_engine
+from store.history import History
 from store.lock import StoreLock
 from store.maintenance import list_migrations, migrate
 from store.migrations import SCRIPTS
+from store.records import Label
 
 NEXT = '''"""A later step, for the tests."""
 
@@ -154,7 +157,63 @@ def test_newer_store_is_refused(store_path: Path, scripts: Path) -> None:
     _next(scripts)
     migrate(store_path, clock=FakeClock(), scripts=scripts)
     before = _schema(store_path)
-    with pytest.raises(StoreError, match="0002") as caught:
+    with pytest.raises(StoreError, match="schema 0003 is not known") as caught:
         migrate(store_path, clock=FakeClock())
     assert caught.value.kind == "newer"
     assert _schema(store_path) == before
+
+
+def _at_0001(now: Path, path: Path, scripts: Path) -> None:
+    """A store as the first migration alone makes it, with all that ``now`` holds and its tables take."""
+    for later in (scripts / "versions").glob("0002*"):
+        later.unlink()
+    path.touch()
+    engine = writer_engine(path)
+    schema.upgrade(engine, scripts)
+    engine.dispose()
+    old = sqlite3.connect(path, isolation_level=None)
+    old.execute("ATTACH ? AS now", (str(now),))
+    tables = old.execute(
+        "SELECT name FROM main.sqlite_master WHERE type = 'table' AND name <> 'alembic_version'"
+    )
+    for (table,) in tables.fetchall():
+        columns = ", ".join(f'"{c[1]}"' for c in old.execute(f"PRAGMA main.table_info({table})"))
+        old.execute(f"INSERT INTO main.{table} ({columns}) SELECT {columns} FROM now.{table}")
+    old.execute("PRAGMA wal_checkpoint(TRUNCATE)")
+    old.close()
+
+
+def test_a_store_of_the_first_schema_reads_on(stand: Stand, tmp_path: Path, scripts: Path) -> None:
+    """Vectors as they were, no levels, version 1; and a reading of it can get a second version."""
+    stand.mount()
+    stand.run(Label.O, 10 + 0j, raw=samples(7))
+    stand.fit()
+    stand.run(Label.O_T, 4 + 3j)
+    before = {c.channel: c.value for c in stand.history.coefficients()}
+    stand.close()
+    path = tmp_path / "old.sqlite"
+    _at_0001(stand.path, path, scripts)
+    assert "measured" not in {name for name, _ in _schema(path)[:-2]}
+    with pytest.raises(StoreError, match="store migrate"):
+        History.open(path)
+    assert [s.revision for s in migrate(path, clock=FakeClock()).done] == ["0002"]
+    again = Stand(path, FakeClock())
+    try:
+        first, second = again.history.run("0142/1"), again.history.run("0142/2")
+        (r1,), (r2,) = first.readings, second.readings
+        assert [(v.channel, v.order, v.value) for v in r2.vectors] == [
+            ("probe 1", 1, 4 + 3j),
+            ("probe 2", 1, 4 + 3j),
+            ("probe 1", 2, 0.1j),
+        ]
+        assert (r1.version, r1.levels, r1.figures, r1.flags) == (1, (), {}, ("near gap limit",))
+        assert (r1.label, r2.label) == (Label.O, Label.O_T)
+        assert again.history.measured(r1.id) == ()
+        assert again.history.reading_raw(r1.id).counts.tolist() == samples(7).counts.tolist()
+        assert {c.channel: c.value for c in again.history.coefficients()} == before
+        assert again.history.set_up(first.set_up_id).pulse.pattern is None
+        kept = again.again("0142/1", 11 + 0j)
+        assert (kept.readings[0].version, kept.readings[0].vectors[0].value) == (2, 11 + 0j)
+        assert again.history.run_as("0142/1", 1).readings[0].vectors == r1.vectors
+    finally:
+        again.close()

@@ -21,8 +21,12 @@ from store.database import create_store
 from store.history import History
 from store.ledger import Ledger
 from store.lock import StoreLock
+from store.migrations import KNOWN
 
 Opens = Callable[[Path], object]
+
+NEXT = len(KNOWN) + 1
+"""Number of the schema after the newest known one: revisions are counted from 1."""
 
 
 def _ledger(path: Path) -> Ledger:
@@ -56,9 +60,9 @@ def test_typo_makes_no_file(tmp_path: Path, opens: Opens) -> None:
 
 @both
 def test_newer_store_is_refused_untouched(store_path: Path, opens: Opens) -> None:
-    _with_version(store_path, 2, "0002")
+    _with_version(store_path, NEXT, f"{NEXT:04}")
     before = _folder(store_path)
-    with pytest.raises(StoreError, match=r"newer version \(schema 0002") as caught:
+    with pytest.raises(StoreError, match=rf"newer version \(schema {NEXT:04}") as caught:
         opens(store_path)
     assert caught.value.kind == "newer"
     assert _folder(store_path) == before
@@ -67,8 +71,8 @@ def test_newer_store_is_refused_untouched(store_path: Path, opens: Opens) -> Non
 @both
 def test_newer_stamp_behind_an_older_header(store_path: Path, opens: Opens) -> None:
     """A kill right after a migration leaves the new header in the log: the stamp tells."""
-    _with_version(store_path, 1, "0002")
-    with pytest.raises(StoreError, match="schema 0002") as caught:
+    _with_version(store_path, NEXT - 1, f"{NEXT:04}")
+    with pytest.raises(StoreError, match=f"schema {NEXT:04}") as caught:
         opens(store_path)
     assert caught.value.kind == "newer"
     StoreLock.take(store_path).release()  # a refusal leaves no lock behind
@@ -196,6 +200,7 @@ def test_lock_ends_with_its_process(store_path: Path) -> None:
 import sys, time
 from pathlib import Path
 from store.lock import StoreLock
+from store.migrations import KNOWN
 lock = StoreLock.take(Path(sys.argv[1]))
 print("held", flush=True)
 sys.stdin.read()

@@ -10,12 +10,12 @@ from alembic.autogenerate import compare_metadata
 from alembic.migration import MigrationContext
 from alembic.script import ScriptDirectory
 from sqlalchemy import select
-from store_kit import Stand, samples
+from store_kit import Stand, measured, samples
 
 from store import tables
 from store.database import reader_engine, writer_engine
 from store.migrations import KNOWN, configuration, statements
-from store.records import Label, MarkPosition, PieceDraft
+from store.records import Label, MarkPosition, PieceDraft, Trace, TracePoint
 
 
 def test_tables_are_what_the_migrations_make(store_path: Path) -> None:
@@ -45,15 +45,20 @@ def test_statements_keep_triggers_whole(tmp_path: Path) -> None:
 def _fill(stand: Stand) -> None:
     """At least one row in every table."""
     unassigned = stand.begin()  # before anything is mounted
+    step = TracePoint(0.5, 12.0, 1, (3 + 4j, 2j), (0.1, 0.1), (-9.8, -10.1))
+    stand.ledger.add_trace(
+        unassigned.id, Trace("up", ("probe 1", "probe 2"), ("um", "um"), 1000, 1.0, (step,))
+    )
     stand.end(unassigned.id)
     stand.mount()
-    stand.run(Label.O, raw=samples())
+    stand.run(Label.O, raw=samples(), measured=measured())
     stand.fit()
     stand.run(Label.O_T, 4 + 3j, raw=samples(2))
     run, _ = stand.run(None, raw=samples(3))
     stand.ledger.void_run(run.name, "door was open", "ana")
     stand.ledger.assign_run("U/1", "0142", "ana")
     stand.ledger.revise_run("U/1", stand.set_up_id, "read again", "ana")
+    stand.again("0142/1", 10 + 0j)
     stand.ledger.age_raw(0, at_most=1)
     stand.ledger.note_event("clock_step", "0.7 s")
     stand.ledger.once("request-1", "weight", {"mass_g": 3.0}, lambda: {"done": True})
@@ -123,13 +128,16 @@ def test_views_for_other_programs(stand: Stand) -> None:
         "v_event",
         "v_job",
         "v_label",
+        "v_level",
         "v_machine",
         "v_mark",
+        "v_measured",
         "v_mount",
         "v_plane",
         "v_reading",
         "v_run",
         "v_set_up",
+        "v_trace",
         "v_vector",
         "v_weight",
     ]

@@ -1,18 +1,21 @@
 """Once-per-rev edges: where the pulse crosses its level, to a fraction of a sample.
 
 Edges are found by a level with a dead band and placed between samples by linear interpolation; positions are
-float64 sample indices. The level is given or automatic: the middle of the pulse, followed as it moves.
+float64 sample indices. The level is given or automatic: the middle of the pulse, followed as it moves. A slot
+that rings gives one edge, the first; of several pulses a turn only the one that counts gives edges.
 """
 
 from __future__ import annotations
 
 from collections import deque
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from daq.signal.pulses import MarkTeller
 from daq.signal.shapes import Floats, PulseParams, median
 
 LEVEL_STEP_S = 0.25
@@ -29,6 +32,23 @@ HISTOGRAM_BINS = 4096
 NOISE_SAMPLES = 4096
 NOISE_STEP = 0.31863936396437514 * 1.4142135623730951
 """Lower quartile of the size of the difference of two normal values of sd 1."""
+DRIFT_SHARE = 0.02
+"""A window's level is followed when it moves by more than this share of the pulse."""
+MARGIN_NOISE = 4.0
+"""Standard deviations of noise that the level should be clear of either side, if the dead band is less."""
+MARGINAL = 2.0
+"""Below this :attr:`EdgeFinder.margin` the level is marginal."""
+PIECE = 1 << 16
+"""Samples of a window looked at together."""
+RING_SHARE = 0.125
+"""A rest between two pulses shorter than this share of those around it: the pulse before it still rings."""
+RING_MEMORY = 16
+"""Rests looked at for that."""
+NEWEST = 64
+"""Pulses whose width, spacing and slope are remembered."""
+ON_EDGE = 1.9
+"""A pulse whose edge takes fewer samples than about two is not interpolated (METHODS 8.3); the line drawn for
+an edge stamped by hardware takes two, and its crossing is exact."""
 
 
 # --- the level -------------------------------------------------------------------------------------------
@@ -42,6 +62,17 @@ class Trigger:
     band: float
     height: float
     """Of the pulse; nan when it is not known."""
+    low: float = float("nan")
+    """Lower side of the pulse; nan = the level is its middle."""
+    noise: float = 0.0
+    """Standard deviation of the noise."""
+
+    @property
+    def margin(self) -> float:
+        """How many dead bands (or four sd of the noise, if more) the nearer side is away from the level."""
+        half = self.height / 2
+        near = half if np.isnan(self.low) else half - abs(self.level - self.low - half)
+        return float(near / max(abs(self.band), MARGIN_NOISE * self.noise, 1e-9))
 
 
 class PulseHistogram:
@@ -95,15 +126,23 @@ def choose_trigger(params: PulseParams, low: float, high: float, noise: float) -
         return None
     level = (low + high) / 2 if params.level_v is None else params.level_v / scale
     band = BAND_SHARE * height if params.hysteresis_v is None else abs(params.hysteresis_v / scale)
-    return Trigger(level, band, height)
+    return Trigger(level, band, height, low, noise)
+
+
+def unresolved_deg(edge_samples: float, samples_per_turn: float) -> float:
+    """What sharp edges leave open in every phase, degrees: half a sample when an edge takes fewer than about
+    two samples, else 0. It does not average down (METHODS 8.3)."""
+    if not edge_samples < ON_EDGE or not samples_per_turn > 0:
+        return 0.0
+    return 180.0 / samples_per_turn
 
 
 def trigger_of(pulse: NDArray[Any], params: PulseParams) -> Trigger | None:
     """One trigger for a whole window (counts, 1-D); None when it holds no pulses that stand out."""
     histogram = PulseHistogram(params.full_scale_counts)
     noise = []
-    for start in range(0, len(pulse), 1 << 16):
-        piece = pulse[start : start + (1 << 16)]
+    for start in range(0, len(pulse), PIECE):
+        piece = pulse[start : start + PIECE]
         histogram.add(histogram.count(piece))
         noise.append(noise_sd(piece))
     if not noise:
@@ -158,6 +197,26 @@ class TriggerFollower:
 # --- edges -----------------------------------------------------------------------------------------------
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class _Pulses:
+    """Pulses begun in a piece, shape (n,) each."""
+
+    edges: Floats
+    """Where the level was crossed."""
+    begun: NDArray[np.int64]
+    """First sample beyond the dead band."""
+    rest: NDArray[np.int64]
+    """Samples for which the signal had been on the other side."""
+    slope: Floats
+    """Step between the samples about the crossing, counts."""
+
+    def only(self, kept: NDArray[np.bool_]) -> _Pulses:
+        return _Pulses(self.edges[kept], self.begun[kept], self.rest[kept], self.slope[kept])
+
+
+_NONE = _Pulses(np.empty(0), np.empty(0, np.int64), np.empty(0, np.int64), np.empty(0))
+
+
 class EdgeFinder:
     """Once-per-rev edges of a stream: ``feed`` it in any chunks, the edges are those of one piece.
 
@@ -170,7 +229,10 @@ class EdgeFinder:
         self._sign = 1.0 if params.edge == "falling" else -1.0
         self._fixed = trigger
         self._follower = None if trigger else TriggerFollower(params, rate_hz)
-        self._lengths: dict[bool, deque[int]] = {s: deque(maxlen=64) for s in (False, True)}
+        self._pulses = max(1, params.pulses)
+        self._teller = MarkTeller(params) if params.pulses > 1 else None
+        self._ring_share = RING_SHARE * params.evenness
+        self._widths = self._spans = self._ramps = np.empty(0)
         self.restart()
 
     @property
@@ -181,15 +243,48 @@ class EdgeFinder:
     @property
     def pulse_length(self) -> float:
         """Median number of samples that the newest pulses lasted, the shorter side; inf when not known."""
-        sides = [median(lengths) for lengths in self._lengths.values() if lengths]
-        return min(sides, default=float("inf"))
+        if not len(self._widths):
+            return float("inf")
+        return min(median(self._widths), median(self._spans - self._widths))
+
+    @property
+    def pulse_share(self) -> float:
+        """Share of a turn for which the side lasts that the counted edge begins; 0 when not known."""
+        if not len(self._widths):
+            return 0.0
+        return median(self._widths) / (self._pulses * median(self._spans))
+
+    @property
+    def edge_samples(self) -> float:
+        """Median number of samples that the newest edges took at the slope they had where they crossed the
+        level, from 1 (a step) upward; inf when not known."""
+        return median(self._ramps) if len(self._ramps) else float("inf")
+
+    @property
+    def margin(self) -> float:
+        """``Trigger.margin``: 5 for an automatic level and little noise, marginal below ``MARGINAL``; 0
+        without pulses."""
+        return self.trigger.margin if self.trigger is not None else 0.0
+
+    @property
+    def untold(self) -> int:
+        """Pulses of which nobody could tell whether they are the one that counts."""
+        return self._teller.untold if self._teller is not None else 0
+
+    def hold(self, trigger: Trigger) -> None:
+        """Use another fixed trigger from the next sample on."""
+        self._fixed = trigger
 
     def restart(self) -> None:
         """Forget the signal (a gap in the samples); the trigger stays."""
         self._armed = False
         self._since: int | None = None
         self._last: float | None = None
-        self._first_cross = self._last_cross = np.nan
+        self._first_cross = self._last_cross = self._slope = np.nan
+        self._rests = np.zeros(RING_MEMORY - 1, np.int64)
+        self._begun: int | None = None
+        if self._teller is not None:
+            self._teller.restart()
 
     def feed(self, pulse: NDArray[Any], first_index: int) -> Floats:
         """Edges in ``pulse`` (counts, 1-D), whose first sample has index ``first_index``; float64 indices."""
@@ -207,17 +302,17 @@ class EdgeFinder:
     def _scan(self, piece: NDArray[Any], first_index: int) -> Floats:
         trigger = self.trigger
         y = piece.astype(np.float64) * self._sign
-        if trigger is None:
+        if trigger is None and self._since is not None:
             self.restart()
         if trigger is None or self._quiet(y, trigger):
             self._last = float(y[-1])
             return np.empty(0)
-        crossings = self._crossings(y, trigger.level * self._sign, first_index)
+        crossings, slopes = self._crossings(y, trigger.level * self._sign, first_index)
         side, where = _sides(y, trigger.level * self._sign, trigger.band, first_index)
         self._last = float(y[-1])
-        edges = self._edges(side, where, crossings)
-        self._carry(side, where, crossings)
-        return edges
+        pulses = self._begin(side, where, crossings, slopes)
+        self._carry(side, where, crossings, slopes)
+        return self._counted(pulses, abs(trigger.height))
 
     def _quiet(self, y: Floats, trigger: Trigger) -> bool:
         """True when the whole piece stays on the side where the signal was last seen: nothing to find."""
@@ -229,60 +324,100 @@ class EdgeFinder:
             self._first_cross = self._last_cross = np.nan
         return stays and self._since is not None
 
-    def _crossings(self, y: Floats, level: float, first_index: int) -> Floats:
-        """Positions where ``y`` falls through ``level``, the step from the previous piece included."""
+    def _crossings(self, y: Floats, level: float, first_index: int) -> tuple[Floats, Floats]:
+        """Positions where ``y`` falls through ``level``, the step from the previous piece included, and how
+        far it fell from sample to sample there."""
         high = y >= level
         at = np.flatnonzero(high[:-1] > high[1:])
         upper = y[at]
-        position: Floats = (first_index + at) + (upper - level) / (upper - y[at + 1])
+        slope: Floats = upper - y[at + 1]
+        position: Floats = (first_index + at) + (upper - level) / slope
         before = self._last
         if before is not None and before >= level > y[0]:
             border = (first_index - 1) + (before - level) / (before - y[0])
             position = np.concatenate(([border], position))
-        return position
+            slope = np.concatenate(([before - y[0]], slope))
+        return position, slope
 
-    def _edges(self, side: NDArray[np.bool_], where: NDArray[np.int64], crossings: Floats) -> Floats:
-        """Edges confirmed in this piece: ``side`` (True above the dead band) changes at ``where``."""
-        previous = np.concatenate(([self._armed], side[:-1])) if len(side) else side
-        confirm = np.flatnonzero(previous & ~side)
+    def _begin(
+        self, side: NDArray[np.bool_], where: NDArray[np.int64], crossings: Floats, slopes: Floats
+    ) -> _Pulses:
+        """Pulses that begin in this piece: ``side`` (True above the dead band) changes at ``where``."""
+        if not len(side):
+            return _NONE
+        change = np.flatnonzero(np.concatenate(([self._armed], side[:-1])) != side)
+        since, self._since = self._since, int(where[change[-1]]) if len(change) else self._since
+        confirm = change[~side[change]]
         if not len(confirm):
-            return np.empty(0)
+            return _NONE
+        begun = where[confirm]
         opened = np.concatenate(([np.iinfo(np.int64).min], where[:-1]))[confirm]
         low = np.searchsorted(crossings, opened, side="left")
-        high = np.searchsorted(crossings, where[confirm], side="right") - 1
-        edges = np.full(len(confirm), np.nan)
+        high = np.searchsorted(crossings, begun, side="right") - 1
+        edges, slope = np.full(len(confirm), np.nan), np.full(len(confirm), np.nan)
         inside = high >= low
         edges[inside] = (crossings[low[inside]] + crossings[high[inside]]) / 2
+        slope[inside] = slopes[low[inside]]
         if confirm[0] == 0:  # armed in an earlier piece: its crossings may lie there
-            edges[0] = self._joined(crossings[: high[0] + 1])
-        found: Floats = edges[~np.isnan(edges)]
-        return found
+            edges[0], slope[0] = self._joined(crossings[: high[0] + 1], slopes)
+        turned = np.concatenate(([begun[0] if since is None else since], where[change]))
+        rest = begun - turned[np.flatnonzero(~side[change])]
+        return _Pulses(edges, begun, rest, slope).only(~np.isnan(edges))
 
-    def _joined(self, crossings: Floats) -> float:
-        """The edge that began in an earlier piece and is confirmed in this one."""
+    def _joined(self, crossings: Floats, slopes: Floats) -> tuple[float, float]:
+        """The edge that began in an earlier piece and is confirmed in this one, and its slope."""
         every = np.concatenate(([self._first_cross, self._last_cross], crossings))
         every = every[~np.isnan(every)]
-        return float((every.min() + every.max()) / 2) if len(every) else np.nan
+        if not len(every):
+            return np.nan, np.nan
+        slope = slopes[0] if np.isnan(self._first_cross) else self._slope
+        return float((every.min() + every.max()) / 2), float(slope)
 
-    def _carry(self, side: NDArray[np.bool_], where: NDArray[np.int64], crossings: Floats) -> None:
-        """Remember what an edge confirmed later will need, and the pulse lengths seen."""
+    def _carry(
+        self, side: NDArray[np.bool_], where: NDArray[np.int64], crossings: Floats, slopes: Floats
+    ) -> None:
+        """Remember what an edge confirmed later will need."""
         if len(side):
-            self._note_lengths(side, where)
             self._armed = bool(side[-1])
             self._first_cross = self._last_cross = np.nan
-            crossings = crossings[np.searchsorted(crossings, where[-1]) :]
+            later = int(np.searchsorted(crossings, where[-1]))
+            crossings, slopes = crossings[later:], slopes[later:]
         if self._armed and len(crossings):
-            self._first_cross = np.fmin(self._first_cross, crossings[0])
-            self._last_cross = crossings[-1]
+            if np.isnan(self._first_cross):
+                self._first_cross, self._slope = float(crossings[0]), float(slopes[0])
+            self._last_cross = float(crossings[-1])
 
-    def _note_lengths(self, side: NDArray[np.bool_], where: NDArray[np.int64]) -> None:
-        """Book how long the signal stayed on each side of the dead band (True above)."""
-        previous = np.concatenate(([self._armed], side[:-1]))
-        change = np.flatnonzero(previous != side)
-        for sample, from_above in zip(where[change].tolist(), previous[change].tolist(), strict=True):
-            if self._since is not None:
-                self._lengths[from_above].append(sample - self._since)
-            self._since = sample
+    def _counted(self, pulses: _Pulses, height: float) -> Floats:
+        """Edges that count, one of a slot that rings and one of a turn; books what the pulses look like."""
+        if not len(pulses.edges):
+            return pulses.edges
+        pulses = pulses.only(self._no_ringing(pulses.rest))
+        if not len(pulses.edges):
+            return pulses.edges
+        before = pulses.begun[0] if self._begun is None else self._begun
+        spans = np.diff(pulses.begun, prepend=before).astype(np.float64)
+        widths = spans - pulses.rest
+        known = slice(1 if self._begun is None else 0, None)
+        self._begun = int(pulses.begun[-1])
+        self._ramps = _newest(self._ramps, height / pulses.slope)
+        self._spans = _newest(self._spans, spans[known])
+        self._widths = _newest(self._widths, widths[known])
+        return pulses.edges if self._teller is None else self._teller.feed(pulses.edges, widths)
+
+    def _no_ringing(self, rest: NDArray[np.int64]) -> NDArray[np.bool_]:
+        """Shape (n,): the pulse begins after a rest, not while the one before it rings."""
+        every = np.concatenate((self._rests, rest))
+        self._rests = every[len(every) - (RING_MEMORY - 1) :]
+        if every.min() >= self._ring_share * every.max():
+            return np.ones(len(rest), bool)
+        around = np.lib.stride_tricks.sliding_window_view(every, RING_MEMORY)
+        second = np.partition(around, RING_MEMORY - 2, axis=1)[:, RING_MEMORY - 2]
+        return np.asarray(rest >= self._ring_share * second)
+
+
+def _newest(held: Floats, added: Floats) -> Floats:
+    """The newest values of both, at most ``NEWEST``."""
+    return np.concatenate((held, added))[-NEWEST:] if len(added) else held
 
 
 def _sides(
@@ -302,11 +437,72 @@ def _sides(
     return side, at[outside] + first_index
 
 
+# --- windows ---------------------------------------------------------------------------------------------
+
+
+def edges_in(
+    column: NDArray[Any], params: PulseParams, rate_hz: float, start: int = 0, stop: int | None = None
+) -> tuple[EdgeFinder, Floats]:
+    """The finder and the edges of ``column[start:stop]`` (counts, 1-D), as absolute indices.
+
+    One trigger for all of it; when the pulse drifts by more than ``DRIFT_SHARE`` of its height, one for each
+    ``LEVEL_STEP_S`` from the ``LEVEL_MEMORY_S`` about it, so that the level does not lag."""
+    stop = len(column) if stop is None else stop
+    trigger = trigger_of(column[start:stop], params)
+    finder = EdgeFinder(params, rate_hz, trigger)
+    if trigger is None:
+        return finder, np.empty(0)
+    found = []
+    for first, last, at in _held(column, params, rate_hz, start, stop, trigger):
+        finder.hold(at)
+        found.append(finder.feed(column[first:last], first))
+    return finder, np.concatenate(found) if found else np.empty(0)
+
+
+def _held(
+    column: NDArray[Any], params: PulseParams, rate_hz: float, start: int, stop: int, whole: Trigger
+) -> Iterator[tuple[int, int, Trigger]]:
+    """Pieces of a window, each with the trigger to use in it."""
+    if params.level_v is not None or not _drifts(column[start:stop], params, rate_hz, whole):
+        yield from ((a, min(a + PIECE, stop), whole) for a in range(start, stop, PIECE))
+        return
+    step = max(16, round(LEVEL_STEP_S * rate_hz))
+    reach = round(LEVEL_MEMORY_S / LEVEL_STEP_S / 2)
+    firsts = range(start, stop, step)
+    around, past = PulseHistogram(params.full_scale_counts), deque[NDArray[np.int64]]()
+    trigger, noise = whole, whole.noise
+    for k in range(-reach, len(firsts)):
+        if k + reach < len(firsts):
+            ahead = column[firsts[k + reach] : min(firsts[k + reach] + step, stop)]
+            past.append(around.count(ahead))
+            around.add(past[-1])
+        if len(past) > 2 * reach + 1 or k + reach >= len(firsts) > 2 * reach:
+            around.add(-past.popleft())
+        if k >= 0:
+            trigger = choose_trigger(params, *around.levels(), noise) or trigger
+            yield firsts[k], min(firsts[k] + step, stop), trigger
+
+
+def _drifts(column: NDArray[Any], params: PulseParams, rate_hz: float, whole: Trigger) -> bool:
+    """True when the middle of the pulse moves within the window."""
+    step = max(16, round(LEVEL_MEMORY_S * rate_hz))
+    levels = []
+    for a in range(0, max(1, len(column) - step // 2), step):
+        part = PulseHistogram(params.full_scale_counts)
+        part.add(part.count(column[a : a + step]))
+        found = choose_trigger(params, *part.levels(), whole.noise)
+        levels += [found] if found is not None else []
+    if len(levels) < 2:
+        return False
+    middles = [t.level for t in levels]
+    return max(middles) - min(middles) > DRIFT_SHARE * median([t.height for t in levels])
+
+
 def find_edges(pulse: NDArray[Any], params: PulseParams, trigger: Trigger | None = None) -> Floats:
     """Edges of a whole window (counts, 1-D) with one trigger; empty when there are no pulses."""
     trigger = trigger or trigger_of(pulse, params)
     if trigger is None:
         return np.empty(0)
     finder = EdgeFinder(params, 1.0, trigger)
-    pieces = [finder.feed(pulse[i : i + (1 << 16)], i) for i in range(0, len(pulse), 1 << 16)]
+    pieces = [finder.feed(pulse[i : i + PIECE], i) for i in range(0, len(pulse), PIECE)]
     return np.concatenate(pieces) if pieces else np.empty(0)

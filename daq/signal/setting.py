@@ -50,7 +50,13 @@ class Setting:
         pulse, near = dict(told["pulse"]), dict(told["surroundings"])
         return cls(
             **{k: v for k, v in told.items() if k not in _PARTS},
-            pulse=PulseParams(**{**pulse, "full_scale_counts": _pair(pulse["full_scale_counts"])}),
+            pulse=PulseParams(
+                **{
+                    **pulse,
+                    "full_scale_counts": _pair(pulse["full_scale_counts"]),
+                    "spacing_deg": tuple(pulse.get("spacing_deg", ())),
+                }
+            ),
             channels=tuple(
                 ChannelParams(**{**c, "full_scale_counts": _pair(c["full_scale_counts"])})
                 for c in told["channels"]

@@ -36,6 +36,17 @@ class PulseParams:
     min_height_v: float = 1.0
     """A pulse lower than this is no pulse."""
     name: str = "once-per-rev"
+    pulses: int = 1
+    """Pulses a turn, of which one counts."""
+    marked: Literal["long"] | None = None
+    """"long": the pulse that lasts longest counts."""
+    spacing_deg: tuple[float, ...] = ()
+    """Angles from the pulse that counts to the next, from that to the one after, ...: one for each pulse."""
+
+    @property
+    def evenness(self) -> float:
+        """Narrowest over widest spacing of its pulses."""
+        return min(self.spacing_deg) / max(self.spacing_deg) if self.spacing_deg else 1.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -120,6 +131,10 @@ class BlockFit:
     doubles: int = 0
     flags: tuple[str, ...] = ()
     """As in ``daq.signal.health``."""
+    edge_deg: float = 0.0
+    """What a once-per-rev edge of fewer than two samples leaves open in every phase, degrees."""
+    pulse_samples: float = 0.0
+    """Samples for which the once-per-rev pulse lasts, the shorter side; 0 = not looked at."""
 
 
 @dataclass(frozen=True, slots=True)

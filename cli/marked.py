@@ -5,9 +5,26 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from cli.output import ANGLES, Show, angle, clean, say, shown, shown_error, table, warn
+from cli.output import (
+    ANGLES,
+    COLUMNS,
+    Show,
+    angle,
+    clean,
+    cut,
+    plus_minus_deg,
+    say,
+    shown,
+    shown_error,
+    table,
+    warn,
+)
 
 Json = Mapping[str, Any]
+
+NAME = 14
+"""Longest name of a channel in a line of these tables; a longer one is cut, and whole in --json."""
+PLUS_MINUS = "+-: 95 %; a lag is given only above the amplitude's own noise floor"
 
 
 def print_marked(answer: Json) -> None:
@@ -24,7 +41,7 @@ def print_marked(answer: Json) -> None:
         f"{reading['speed_rpm']:.1f} r/min, {reading['revolutions']} revolutions "
         f"in {reading['duration_s']:.1f} s"
     )
-    say(vector_table([v for v in reading["vectors"] if v["order"] == 1], answer.get("show")))
+    say(vector_table([v for v in reading["vectors"] if v["order"] == 1], answer.get("show")), PLUS_MINUS)
     for text in answer.get("flag_texts", []):
         warn(f"flag: {clean(text)}")
     for text in answer.get("warnings", []):
@@ -34,13 +51,31 @@ def print_marked(answer: Json) -> None:
 
 
 def vector_table(vectors: list[Json], show: Show | None = None) -> str:
-    """1X and higher orders by channel, with the standard error of the amplitude as shown."""
-    rows = []
+    """The 1X vectors by channel: amplitude and lag, each with what holds 95 %, and the flags in a word."""
+    headers, rows = ["channel", "1X", "+-", "unit", "lag deg", "+-"], []
     for vector in vectors:
         size, unit, lag = shown(vector, show)
-        error = shown_error(vector, vector["se_pk"], show)
-        rows.append((vector["channel"], f"{vector['order']}X", size, unit, lag, error))
-    return table(rows, ["channel", "order", "amplitude", "unit", "lag deg", "+-"], "llrlrr")
+        error = shown_error(vector, vector["plus_minus_95_pk"], show)
+        lag_error = plus_minus_deg(vector["lag_plus_minus_95_deg"])
+        rows.append([cut(vector["channel"], NAME), size, error, unit, lag, lag_error])
+    widths = [max(map(len, column)) for column in zip(headers, *rows, strict=True)]
+    room = COLUMNS - sum(widths) - 2 * len(widths)
+    told = [[*row, words(v["flags"], room)] for row, v in zip(rows, vectors, strict=True)]
+    return table(told, [*headers, "flags"], "lrrlrrl")
+
+
+def words(flags: list[str], room: int) -> str:
+    """A channel's flags in a word each, its own first: as many as fit, and how many more there are."""
+    from daq.signal.health import short
+
+    own_first = sorted(flags, key=lambda f: ":" not in f)
+    told = list(dict.fromkeys(map(short, own_first)))
+    for kept in range(len(told), 0, -1):
+        more = len(told) - kept
+        text = ", ".join(told[:kept]) + (f" +{more}" if more else "")
+        if len(text) <= room or kept == 1:
+            return text
+    return ""
 
 
 def print_verdict(verdict: Json, show: Show | None = None) -> None:

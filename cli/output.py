@@ -129,6 +129,27 @@ def shown(vector: Json, show: Show | None = None) -> tuple[str, str, str]:
     )
 
 
+def shown_size(level: Json, size: float, show: Show | None = None) -> str:
+    """A size that has its own detector (overall pp, residual rms), in the unit its channel is shown in."""
+    from config.units import DETECTORS
+
+    display = display_of(level["channel"], level["unit"], show)
+    return f"{size * display.factor / DETECTORS[display.detector]:.{decimals(display)}f}"
+
+
+def plus_minus_deg(degrees: float | None) -> str:
+    """The uncertainty of a lag: one decimal, two below 0.1; none where there is no lag."""
+    if degrees is None:
+        return "-"
+    return f"{degrees:.1f}" if degrees >= 0.1 else f"{degrees:.2f}"
+
+
+def cut(text: object, most: int) -> str:
+    """Text in at most so many columns, what is left out shown by dots."""
+    told = clean(text)
+    return told if len(told) <= most else told[: most - 2] + ".."
+
+
 def shown_error(vector: Json, error_pk: float, show: Show | None = None) -> str:
     """An error of a vector's amplitude, in the vector's unit as it is shown, to three figures."""
     return figures(error_pk * display_of(vector["channel"], vector["unit"], show).factor)

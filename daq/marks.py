@@ -9,7 +9,7 @@ from config.errors import Refusal
 from daq.board import Board, Live
 from daq.clock import Clock
 from daq.requests import CancelAsked, MarkAsked
-from daq.signal.health import sentence
+from daq.signal.health import describe
 from daq.writer import Writer
 from store import asjson, consult
 from store.history import History
@@ -123,8 +123,9 @@ class MarkDesk:
             told["waits_for"] = waits_for(self._board.read())
         if mark.state is MarkState.LABELLED and mark.reading_id is not None and mark.run_name is not None:
             reading = self._history.reading(mark.reading_id)
-            told["reading"] = asjson.reading_json(reading)
-            told["flag_texts"] = [sentence(f) for f in reading.flags]
+            told["reading"] = consult.reading_json(self._history, reading, mark.job_number)
+            flags = (*told["reading"]["flags"], *told["reading"]["derived_flags"])
+            told["flag_texts"] = list(describe(flags))
             told.update(self._judged(mark, reading))
         return told
 

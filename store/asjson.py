@@ -9,12 +9,16 @@ from __future__ import annotations
 
 import cmath
 import math
+from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
 from typing import Any
+from uuid import UUID
 
+from store.balance.orbit import SURE, Orbit
 from store.records import (
     Coefficient,
     Job,
+    Level,
     Machine,
     Mark,
     Mount,
@@ -24,6 +28,7 @@ from store.records import (
     Vector,
     WeightEvent,
     WeightPlane,
+    flags_of,
 )
 
 Json = dict[str, Any]
@@ -41,20 +46,79 @@ def polar(value: complex) -> tuple[float, float]:
     return abs(value), math.degrees(cmath.phase(value)) % 360.0
 
 
-def vector_json(vector: Vector) -> Json:
+def plus_minus(vector: Vector) -> tuple[float, float | None]:
+    """What holds 95 %: of the amplitude (base unit), and of the lag in degrees; None for the lag of a vector
+    below its noise floor. Along the vector and across it, by its covariance."""
+    size = abs(vector.value)
+    along = vector.value / size if size else 1.0 + 0j
+    c, s = along.real, along.imag
+    radial = c * c * vector.var_re + s * s * vector.var_im + 2 * c * s * vector.cov
+    across = s * s * vector.var_re + c * c * vector.var_im - 2 * c * s * vector.cov
+    amplitude, sideways = (SURE * math.sqrt(max(0.0, v)) for v in (radial, across))
+    if not size > vector.noise_floor:
+        return amplitude, None
+    return amplitude, math.degrees(math.asin(min(1.0, sideways / size)))
+
+
+def vector_json(vector: Vector, flags: Iterable[str] = ()) -> Json:
+    """``flags`` are those of its reading; it keeps those that concern its channel."""
     amplitude, lag = polar(vector.value)
+    amplitude_pm, lag_pm = plus_minus(vector)
     return {
         "channel": vector.channel,
         "order": vector.order,
         "unit": vector.unit,
         "amplitude_pk": amplitude,
-        "lag_deg": lag if amplitude > vector.noise_floor else None,
+        "lag_deg": lag if lag_pm is not None else None,
+        "plus_minus_95_pk": amplitude_pm,
+        "lag_plus_minus_95_deg": lag_pm,
         "se_pk": math.sqrt(max(vector.var_re, vector.var_im)),
         "noise_floor_pk": vector.noise_floor,
+        "flags": list(flags_of(flags, vector.channel)),
     }
 
 
-def reading_json(reading: Reading) -> Json:
+def level_json(level: Level) -> Json:
+    return {
+        "channel": level.channel,
+        "unit": level.unit,
+        "overall_pp": level.peak_to_peak,
+        "residual_rms": level.residual_sd,
+        "ac_rms": level.ac_rms,
+        "gap_v": level.gap_v,
+    }
+
+
+def orbit_json(orbit: Orbit) -> Json:
+    """``forward`` and ``backward`` are vectors on the stand as the once-per-rev edge passes: where they point
+    is a stand angle, as ``tilt_deg`` is. With no rotation known forward is clockwise seen from ``seen_from``.
+    """
+    return {
+        "pair": orbit.pair,
+        "order": orbit.order,
+        "x": orbit.channels[0],
+        "y": orbit.channels[1],
+        "unit": orbit.unit,
+        "seen_from": orbit.seen_from,
+        "rotation": None if orbit.rotation is None else str(orbit.rotation),
+        "forward": {"amplitude_pk": orbit.forward_pk, "at_stand_deg": orbit.forward_deg},
+        "backward": {"amplitude_pk": orbit.backward_pk, "at_stand_deg": orbit.backward_deg},
+        "forward_plus_minus_95_pk": SURE * orbit.forward_sd,
+        "backward_plus_minus_95_pk": SURE * orbit.backward_sd,
+        "major_axis_pk": orbit.major_pk,
+        "major_axis_plus_minus_95_pk": SURE * orbit.major_sd,
+        "minor_axis_pk": orbit.minor_pk,
+        "tilt_deg": orbit.tilt_deg,
+        "tilt_plus_minus_95_deg": None if orbit.tilt_sd_deg is None else SURE * orbit.tilt_sd_deg,
+        "whirl": orbit.whirl,
+        "precession": orbit.precession,
+    }
+
+
+def reading_json(reading: Reading, derived: Iterable[str] = (), orbits: Iterable[Orbit] = ()) -> Json:
+    """``derived`` are the flags that the job's records add to its own (``store.standing_flags``)."""
+    added = tuple(derived)
+    flags = (*reading.flags, *added)
     return {
         "id": str(reading.id),
         "number": reading.number,
@@ -65,12 +129,23 @@ def reading_json(reading: Reading) -> Json:
         "speed_rpm": reading.speed_hz * 60,
         "revolutions": reading.revolutions,
         "flags": list(reading.flags),
+        "derived_flags": list(added),
         "steadiness": dict(reading.steadiness),
-        "vectors": [vector_json(v) for v in reading.vectors],
+        "vectors": [vector_json(v, flags) for v in reading.vectors],
+        "levels": [level_json(v) for v in reading.levels],
+        "figures": dict(reading.figures),
+        "orbits": [orbit_json(o) for o in orbits],
+        "version": reading.version,
     }
 
 
-def run_json(run: Run) -> Json:
+def run_json(
+    run: Run,
+    derived: Mapping[UUID, tuple[str, ...]] | None = None,
+    orbits: Mapping[UUID, tuple[Orbit, ...]] | None = None,
+) -> Json:
+    """``derived`` flags and ``orbits`` by reading; None where they were not asked for."""
+    added, seen = derived or {}, orbits or {}
     return {
         "id": str(run.id),
         "run": run.name,
@@ -85,7 +160,7 @@ def run_json(run: Run) -> Json:
         "ended_utc": utc(run.ended_us),
         "condition": dict(run.condition),
         "software": run.software,
-        "readings": [reading_json(r) for r in run.readings],
+        "readings": [reading_json(r, added.get(r.id, ()), seen.get(r.id, ())) for r in run.readings],
     }
 
 

@@ -11,11 +11,11 @@ from typing import Any
 from uuid import UUID
 
 from config.errors import Refusal
-from store import asjson, casework
+from store import asjson, casework, standing_flags
 from store.balance.reuse import Candidate
 from store.casework_answers import CorrectionAdvice, ForceAdvice, TrialAdvice, Verdict
 from store.history import History
-from store.records import JobStory, Label, Machine, Mount, PieceDraft, Run
+from store.records import JobStory, Label, Machine, Mount, PieceDraft, Reading, Run
 
 Json = dict[str, Any]
 JUDGED = (Label.CHECK, Label.TRIM)
@@ -105,11 +105,43 @@ def weight_entries(history: History, mounts: Iterable[Mount]) -> list[Json]:
     return found
 
 
+def run_json(history: History, name: str) -> Json:
+    """A run with all that its probes told, as ``revmark run show --json`` prints it."""
+    return run_told(history, history.run(name))
+
+
+def run_told(history: History, run: Run) -> Json:
+    """The same of a run at hand, in whichever version its readings are."""
+    story = None if run.job_number is None else history.job_story(run.job_number, with_void=True)
+    set_up = history.set_up(run.set_up_id)
+    flags = {r.id: reading_flags(story, run, r) for r in run.readings}
+    seen = {r.id: standing_flags.orbits_of(story, run, r, set_up) for r in run.readings}
+    return {**asjson.run_json(run, flags, seen), "zero": set_up.zero}
+
+
+def reading_flags(story: JobStory | None, run: Run, reading: Reading) -> tuple[str, ...]:
+    """The flags that the records add to a reading's own; of a run of no job only what needs none."""
+    if story is not None:
+        return standing_flags.derived_flags(story, run, reading)
+    return tuple(f for f in standing_flags.floor_flags(reading) if f not in reading.flags)
+
+
+def reading_json(history: History, reading: Reading, job: str) -> Json:
+    """One reading of a job as the answer of a mark tells it."""
+    story = history.job_story(job, with_void=True)
+    run = next((r for r in story.runs if r.id == reading.run_id), None)
+    if run is None:
+        return asjson.reading_json(reading)
+    seen = standing_flags.orbits_of(story, run, reading, history.set_up(run.set_up_id))
+    return asjson.reading_json(reading, standing_flags.derived_flags(story, run, reading), seen)
+
+
 def job_json(history: History, number: str) -> Json:
     """A whole job, as ``revmark job show --json`` prints it."""
     story = history.job_story(number, with_void=True)
     names = {run.id: run.name for run in story.runs}
     found = newest_verdict(history, history.job_story(number))
+    flags = standing_flags.flags_by_reading(story)
     weights = [
         {**asjson.weight_json(w), "after_run": names.get(w.after_run_id) if w.after_run_id else None}
         for w in story.weights
@@ -117,7 +149,7 @@ def job_json(history: History, number: str) -> Json:
     return {
         **asjson.job_json(story.job),
         "mounts": [asjson.mount_json(m, number) for m in story.mounts],
-        "runs": [asjson.run_json(r) for r in story.runs],
+        "runs": [asjson.run_json(r, flags) for r in story.runs],
         "weights": weights,
         "verdict": found.to_dict() if found else None,
     }

@@ -73,7 +73,7 @@ SENTENCES: dict[str, str] = {
     "window; the +- is wider for it.",
     RUNOUT: "{channel}: its 1X is mostly runout, much like the slow-roll vector of this job.",
     PRECESSION: "{channel}: the shaft whirls against the declared rotation; check rotation, probe angles "
-    "and wiring.",
+    "and wiring (between split critical speeds it may be real).",
     RAW_TOO_LARGE: "The samples of this reading were too many to keep (per_reading_mib), so it cannot be "
     "recomputed.",
 }
@@ -123,8 +123,18 @@ def short(flagged: str) -> str:
 
 
 def describe(flags: Sequence[str]) -> tuple[str, ...]:
-    """All flags in sentences."""
-    return tuple(sentence(f) for f in flags)
+    """All flags in sentences; a code that several channels share is said once, of all of them."""
+    shared: dict[str, list[str]] = {}
+    for flagged in dict.fromkeys(flags):
+        code, _, channel = flagged.partition(":")
+        shared.setdefault(code, []).extend([channel] if channel else [])
+    return tuple(_of_all(code, channels) for code, channels in shared.items())
+
+
+def _of_all(code: str, channels: Sequence[str]) -> str:
+    if len(channels) < 2:
+        return sentence(flag(code, *channels))
+    return sentence(flag(code, f"each of {', '.join(channels[:-1])} and {channels[-1]}"))
 
 
 class RangeScan:

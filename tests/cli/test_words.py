@@ -322,12 +322,13 @@ def test_a_job_in_the_stands_unit_with_flags_where_they_belong(stand: Any, print
 
 
 def test_a_run_in_the_stands_unit_and_time(stand: Any, printed: Any) -> None:
-    """Standard error: the larger of the variances, 0.0005 um^2, is 0.02236 um, 0.00176 mil pp."""
+    """Along a lag of 0 the variance is 0.0004 um^2: 1.96 x 0.02 um is 0.00309 mil pp. Across it 0.0005:
+    1.96 x 0.02236 / 12.7 rad is 0.198 deg."""
     a_job(stand)
     lines = printed("run", "show", "0142/1")
     assert lines[1].startswith("started 2023-11-15 07:13:2")
     assert lines[1].endswith("; times: Asia/Tokyo")
-    assert rows(lines, "probe 1")[0] == ["probe", "1", "1X", "1.0000", "mil", "pp", "0.0", "0.00176"]
+    assert rows(lines, "probe 1")[0] == ["probe", "1", "1.0000", "0.00309", "mil", "pp", "0.0", "0.2"]
     told = " ".join(" ".join(lines).split())
     assert "flag: probe 2: its 1X is less than 3 times the noise of single samples" in told
     assert "the averaged vector's own +- stands beside it." in told

@@ -17,7 +17,7 @@ from daq.runs import Ended
 from daq.setup import set_up_draft
 from daq.writer import Writer
 from store.ledger import Ledger
-from store.records import ReadingDraft, Run, RunDraft, RunState, SetUp
+from store.records import ReadingDraft, Run, RunDraft, RunState, SetUp, Trace
 
 log = logging.getLogger("revmark.record")
 
@@ -62,6 +62,24 @@ class Recorder:
             taken = f", labelled {mark.label}" if mark else ""
             log.info("run %s reading %d stored%s", self._run.name, reading.number, taken)
             self._age_raw(ledger)
+            self._board.stir()
+
+        self._writer.record(write, droppable=True)
+
+    def trace(self, draft: Trace) -> None:
+        """A run-up or coast-down of the run that is open."""
+
+        def write(ledger: Ledger) -> None:
+            if self._run is None:
+                return
+            number = ledger.add_trace(self._run.id, draft)
+            log.info(
+                "run %s trace %d stored: %s, %d steps",
+                self._run.name,
+                number,
+                draft.direction,
+                len(draft.points),
+            )
             self._board.stir()
 
         self._writer.record(write, droppable=True)

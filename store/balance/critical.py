@@ -103,13 +103,10 @@ def _stands_out(size: Floats, error: Floats, p: int) -> bool:
 def _flat(p: int, speed: Floats, size: Floats, error: Floats) -> NotCritical:
     rise, its_se = _rise(size, error, p)
     if rise < STANDS_OUT_SE * its_se:
-        why = (
-            f"it stands out by {rise / its_se:.1f} of its standard errors only ({STANDS_OUT_SE:g} are wanted)"
-        )
+        found, wanted = f"{rise / its_se:.1f} of its standard errors", f"{STANDS_OUT_SE:g}"
     else:
-        why = (
-            f"it stands out by {100 * rise / size[p]:.0f} % of itself only ({100 * STANDS_OUT_SHARE:g} % are)"
-        )
+        found, wanted = f"{100 * rise / size[p]:.0f} % of itself", f"{100 * STANDS_OUT_SHARE:g} %"
+    why = f"it stands out by {found} only ({wanted} are wanted)"
     return NotCritical(float(speed[p]), float(size[p]), why)
 
 

@@ -142,8 +142,8 @@ class Client:
     def get(self, path: str, wait_s: float = 0.0) -> Any:
         return self._ask("GET", path, None, ANSWER_S + wait_s)
 
-    def post(self, path: str, body: dict[str, Any]) -> Any:
-        return self._ask("POST", path, body, ANSWER_S)
+    def post(self, path: str, body: dict[str, Any], wait_s: float = 0.0) -> Any:
+        return self._ask("POST", path, body, ANSWER_S + wait_s)
 
     def _ask(self, verb: str, path: str, body: dict[str, Any] | None, limit_s: float) -> Any:
         data = b"" if body is None else json.dumps(body).encode()

@@ -17,6 +17,7 @@ from cli.output import (
     table,
     times,
 )
+from cli.recompute import recompute, revise
 from cli.runshow import show
 
 
@@ -25,6 +26,8 @@ def group() -> None: ...
 
 
 group.add_command(show)
+group.add_command(recompute)
+group.add_command(revise)
 
 
 @group.command(name="list", context_settings={"max_content_width": 80})

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import logging
-import os
 import sys
 
 import click
 
 from cli.output import warn
+from config.onethread import one_thread
 
 
 @click.command(context_settings={"max_content_width": 80})
@@ -21,7 +21,7 @@ def command(stand: str, *, verbose: bool) -> int:
 
     Exit codes: 0 stopped by a signal, 1 refused (a second daemon), 75 try again, 78 configuration.
     """
-    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    one_thread()
     from config.errors import StandFileError
     from config.stand import check_stand
     from daq.daemon import CONFIGURATION, serve

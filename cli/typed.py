@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import re
+from collections.abc import Callable
 from typing import Any
 
 import click
@@ -158,3 +159,36 @@ class RotorMarkType(click.ParamType[Any]):
             return (_count(plane, "the number of a plane") if equals else None), degrees
         except (BadQuantity, ValueError) as error:
             self.fail(f'{error} Write for example "7.5deg", or "1=7.5deg" for plane 1.', param, ctx)
+
+
+class OfChannel(click.ParamType[Any]):
+    """``probe 1=200 mV/mil``: something of one channel, as (channel, what ``parse`` makes of the rest)."""
+
+    def __init__(self, name: str, parse: Callable[[str], Any], example: str) -> None:
+        self.name = name
+        self._parse = parse
+        self._example = f'Write for example "{example}".'
+
+    def convert(
+        self, value: Any, param: click.Parameter | None, ctx: click.Context | None
+    ) -> tuple[str, Any]:
+        channel, equals, text = value.rpartition("=")
+        try:
+            if not equals or not channel.strip():
+                raise BadQuantity(f"{value!r} names no channel.")
+            return channel.strip(), self._parse(text.strip())
+        except BadQuantity as error:
+            self.fail(f"{error} {self._example}", param, ctx)
+
+
+def parse_stand_angle(text: str) -> float:
+    """Degrees, 0 up to 360. Raises BadQuantity outside -360 to 360."""
+    return parse_quantity(text, "angle", minimum=-360.0, maximum=360.0) % 360.0
+
+
+def parse_sense_of_positive(text: str) -> int:
+    """+1 for ``rising``, -1 for ``falling``. Raises BadQuantity for anything else."""
+    senses = {"rising": 1, "falling": -1}
+    if text not in senses:
+        raise BadQuantity(f"{text!r} is neither rising nor falling.")
+    return senses[text]

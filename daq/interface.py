@@ -8,6 +8,7 @@ from typing import Any
 
 from config.stand import Stand
 from daq import requests
+from daq.again import AgainDesk
 from daq.analysis import Analysis
 from daq.board import Board
 from daq.clock import Clock
@@ -36,6 +37,7 @@ def acts(
     desk = Desk(writer, history, board, stand.ends)
     marks = mark_desk(stand, writer, history, board, analysis, clock)
     rotor = RotorDesk(pump, history, board, stand)
+    again = AgainDesk(writer, history, board)
     return (
         Act("/v1/machine", requests.MachineAsked, desk.add_machine),
         Act("/v1/mount", requests.MountAsked, desk.mount),
@@ -45,6 +47,8 @@ def acts(
         Act("/v1/weight/void", requests.WeightVoidAsked, desk.void_weight),
         Act("/v1/run/void", requests.VoidAsked, desk.void),
         Act("/v1/run/assign", requests.AssignAsked, desk.assign),
+        Act("/v1/run/recompute", requests.RecomputeAsked, again.recompute),
+        Act("/v1/run/revise", requests.ReviseAsked, again.revise),
         Act("/v1/mark", requests.MarkAsked, marks.ask),
         Act("/v1/mark/cancel", requests.CancelAsked, marks.cancel),
         Act("/v1/sim/start", requests.SimStartAsked, rotor.start),

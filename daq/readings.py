@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-import platform
 from collections.abc import Mapping, Sequence
 
 import numpy as np
 
 from config.stand import Stand
-from config.version import __version__
+from daq.build import this_build
 from daq.clock import Clock
 from daq.drivers.base import SourceInfo
 from daq.raw_window import RawWindow
@@ -22,6 +21,12 @@ from store.records import Level, Measured, RawSamples, ReadingDraft, Vector
 MARGIN_TURNS = 0.5
 """Part of a turn kept on either side of the window, so that the edges that bound it lie inside."""
 MIB = 1024 * 1024
+
+
+def longest_window_s(stand: Stand, info: SourceInfo) -> float:
+    """How long a window may grow within the raw samples kept of one reading."""
+    per_s = info.rate_hz * len(info.volts_per_count) * np.dtype(info.dtype).itemsize
+    return stand.raw.per_reading_mib * MIB / per_s
 
 
 class ReadingMaker:
@@ -86,6 +91,7 @@ def measured_record(
     made: Measurement, setting: Setting, units: Mapping[str, str], why: str, flags: tuple[str, ...]
 ) -> Measured:
     """A measurement as it is recorded: with its setting and the build that made it."""
+    build = this_build()
     return Measured(
         why=why,
         set_up_id=None,
@@ -95,9 +101,9 @@ def measured_record(
         flags=flags,
         figures=made.figures,
         setting=setting.to_json(),
-        software=__version__,
-        numpy=np.__version__,
-        processor=platform.processor() or platform.machine(),
+        software=build.software,
+        numpy=build.numpy,
+        processor=build.processor,
         vectors=vectors_of(made, units),
         levels=tuple(
             Level(v.channel, v.gap_v, v.residual_sd, v.peak_to_peak, v.ac_rms, units[v.channel])

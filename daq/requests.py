@@ -161,3 +161,27 @@ class VoidAsked(Request):
 class AssignAsked(Request):
     run: Name
     job: Name
+
+
+class RecomputeAsked(Request):
+    """Keeps what comes out otherwise than it is stored."""
+
+    runs: Annotated[tuple[RunName, ...], Field(min_length=1, max_length=1000)]
+
+
+class ChannelBody(BaseModel):
+    """What a probe really was; None = as recorded. ``unit``: base unit that ``volts_per_unit`` is per."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    channel: Name
+    volts_per_unit: Annotated[float, Field(gt=0, allow_inf_nan=False, strict=True, le=1e12)] | None = None
+    unit: Literal["um", "mm/s", "m/s2"] | None = None
+    positive: Literal[1, -1] | None = None
+    angle_deg: Annotated[float, Field(ge=0, lt=360, allow_inf_nan=False, strict=True)] | None = None
+
+
+class ReviseAsked(Request):
+    runs: Annotated[tuple[RunName, ...], Field(min_length=1, max_length=1000)]
+    channels: tuple[ChannelBody, ...] = ()
+    sensor_angle_deg: Annotated[float, Field(ge=0, lt=360, allow_inf_nan=False, strict=True)] | None = None
+    why: Annotated[str, Field(min_length=1, max_length=500)]

@@ -6,6 +6,7 @@ The arithmetic was done before and elsewhere; here it is only found to fit what 
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from uuid import UUID
 
 from sqlalchemy import func, select
@@ -48,7 +49,8 @@ def _keep_one(w: Writer, again: RunAgain, why: str, who: str) -> Run:
     for one in again.readings:
         if _newest(w, one.reading_id) != one.beside:
             raise _meanwhile(of)
-        ledger_runs.add_measured(w, one.reading_id, max(one.beside, 1) + 1, one.measured, set_up_id)
+        made = replace(one.measured, who=who, set_up_id=set_up_id)
+        ledger_runs.add_measured(w, one.reading_id, max(one.beside, 1) + 1, made, set_up_id)
     return of
 
 

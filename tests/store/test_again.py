@@ -45,7 +45,8 @@ def test_the_new_version_stands_and_the_old_one_is_kept(stand: Stand) -> None:
     old = stand.history.run_as("0142/2", 1)
     assert (values(old), old.readings[0].vectors) == ([4 + 3j, 4 + 3j], before.readings[0].vectors)
     first, second = stand.history.measured(now.id)
-    assert [(m.version, m.why, m.who) for m in (first, second)] == [(1, "live", ""), (2, "wrong scale", "")]
+    assert (first.version, first.why, first.who) == (1, "live", "")
+    assert (second.version, second.why, second.who) == (2, "wrong scale", "ana")
     assert first.vectors == before.readings[0].vectors
     assert [values(r) for r in stand.history.job_story("0142").runs] == [[10, 10], [5 + 3j, 5 + 3j]]
 

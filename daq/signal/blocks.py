@@ -12,9 +12,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from daq.signal.edges import EdgeFinder
+from daq.signal.edges import EdgeFinder, unresolved_deg
 from daq.signal.health import RangeScan, full_scales, probe_flags, pulse_flags
-from daq.signal.revolutions import MEDIAN_TURNS, RevolutionClock, Turns, turn_fractions, turns_of
+from daq.signal.revolutions import MEDIAN_TURNS, RevolutionClock, Turns, turns_between
+from daq.signal.rhythm import Rhythm
 from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams, check_columns, median
 from daq.signal.vectors import Accumulator, Fit, pieces
 
@@ -67,6 +68,8 @@ class BlockFitter:
         self.finder = EdgeFinder(pulse, rate_hz)
         self.clock = RevolutionClock(rate_hz, longest_turn_s=longest_turn_s)
         """Speed and turning, as of the newest sample fed."""
+        self.newest_edges: Floats = np.empty(0)
+        """Those found with the counts fed last, source sample positions."""
         self._orders = tuple(orders)
         self._min_signal_to_noise = min_signal_to_noise
         self._scale = np.array([c.units_per_count for c in self.channels])
@@ -75,7 +78,6 @@ class BlockFitter:
         self._scales = full_scales(self.channels)
         self._segment: int | None = None
         self._next = 0
-        self._edges: Floats = np.empty(0)
         self._forget()
 
     def feed(self, counts: NDArray[Any], first_sample: int, segment: int = 0) -> list[BlockFit]:
@@ -89,11 +91,11 @@ class BlockFitter:
             self._forget()
         self._segment, self._next = segment, first_sample + len(counts)
         self._chunks.append((first_sample, counts))
-        edges = self.finder.feed(counts[:, 0], first_sample)
+        edges = self.newest_edges = self.finder.feed(counts[:, 0], first_sample)
         self.clock.feed(edges, self._next)
-        self._edges = np.concatenate((self._edges, edges))
+        self._rhythm.feed(edges)
         done = list(self._work()) if len(edges) else []
-        if len(self._edges) and not self._patient():
+        if self._rhythm.oldest is not None and not self._patient():
             self._forget()
         self._trim()
         return done
@@ -102,7 +104,7 @@ class BlockFitter:
 
     def _forget(self) -> None:
         """No edges, no samples, no block begun."""
-        self._edges = np.empty(0)
+        self._rhythm = Rhythm()
         self._at = 0
         self._chunks: list[tuple[int, NDArray[Any]]] = []
         self._missed = self._doubles = 0
@@ -121,40 +123,47 @@ class BlockFitter:
         """Drop the samples and the edges that nothing will ask for again."""
         extra = self._at - MEDIAN_TURNS
         if extra > 0:
-            self._edges = self._edges[extra:]
+            self._rhythm.mended.drop(extra)
             self._at -= extra
-        needed = self._edges[self._at] if len(self._edges) else self._next - LEAD_S * self.rate_hz
+        edges, waiting = self._rhythm.mended.edges, self._held_from()
+        needed = edges[self._at] if len(edges) else waiting
         while self._chunks and self._chunks[0][0] + len(self._chunks[0][1]) <= needed:
             del self._chunks[0]
+
+    def _held_from(self) -> float:
+        """From where samples are kept while no edge is settled."""
+        waiting = (self._next - LEAD_S * self.rate_hz, self._rhythm.oldest, self.finder.undecided)
+        return min(w for w in waiting if w is not None)
 
     # --- work --------------------------------------------------------------------------------------------
 
     def _work(self) -> Iterator[BlockFit]:
         """Work on all turns that are ready: those with an edge known after their end."""
-        ready = len(self._edges) - 2
-        if ready <= self._at or self._edges[ready] < self._worth_it():
+        edges = self._rhythm.mended.edges
+        ready = len(edges) - 2
+        if ready <= self._at or edges[ready] < self._worth_it():
             return
-        turns = turns_of(self._edges)
+        turns = turns_between(self._rhythm.mended)
         held = self._chunks[0][0]
         while self._at < ready and turns.first_samples[self._at] < held:
             self._at += 1
         while self._at < ready:
             if self._start is None:
-                self._start = float(self._edges[self._at])
+                self._start = float(edges[self._at])
             due = self._start + self.block_s * self.rate_hz
-            stop = self._at + 1 + int(np.searchsorted(self._edges[self._at + 1 : ready], due))
+            stop = self._at + 1 + int(np.searchsorted(edges[self._at + 1 : ready], due))
             stop = min(stop, ready)
             self._take(turns.part(self._at, stop))
             self._at = stop
-            if self._edges[stop] >= due:
-                fit = self._finish(float(self._edges[stop]))
+            if edges[stop] >= due:
+                fit = self._finish(float(edges[stop]))
                 self._begin_block()
                 if fit is not None:
                     yield fit
 
     def _worth_it(self) -> float:
         """Where the turns that are ready must reach before they are worked on: many small steps cost more."""
-        begun = float(self._edges[self._at])
+        begun = float(self._rhythm.mended.edges[self._at])
         due = (begun if self._start is None else self._start) + self.block_s * self.rate_hz
         return min(begun + WORK_S * self.rate_hz, due)
 
@@ -165,19 +174,22 @@ class BlockFitter:
         bounds = turns.first_samples
         for first, stop in turns.stretches():
             stretch = turns.part(first, stop)
-            for start, counts in self._samples(int(bounds[first]), int(bounds[stop])):
-                self._sums.add(turn_fractions(stretch, start, start + len(counts)), counts)
-                self._scan.add(counts)
+            for start, parts in self._samples(int(bounds[first]), int(bounds[stop])):
+                self._sums.add_turns(stretch, start, parts)
+                for counts in parts:
+                    self._scan.add(counts)
 
-    def _samples(self, start: int, stop: int) -> Iterator[tuple[int, NDArray[Any]]]:
-        """Counts of samples ``start`` to ``stop`` in pieces, each with its first sample."""
+    def _samples(self, start: int, stop: int) -> Iterator[tuple[int, list[NDArray[Any]]]]:
+        """Counts of samples ``start`` to ``stop`` piece by piece, in parts as fed; and its first sample."""
         for a, b in pieces(start, stop):
-            parts = [
-                counts[max(a - at, 0) : b - at]
-                for at, counts in self._chunks
-                if at < b and at + len(counts) > a
-            ]
-            yield a, parts[0] if len(parts) == 1 else np.concatenate(parts)
+            yield (
+                a,
+                [
+                    counts[max(a - at, 0) : b - at]
+                    for at, counts in self._chunks
+                    if at < b and at + len(counts) > a
+                ],
+            )
 
     def _finish(self, end: float) -> BlockFit | None:
         periods = np.concatenate(self._periods)
@@ -224,4 +236,6 @@ class BlockFitter:
             missed=self._missed,
             doubles=self._doubles,
             flags=tuple(flags),
+            edge_deg=unresolved_deg(self.finder.edge_samples, self.rate_hz / speed_hz),
+            pulse_samples=self.finder.pulse_length,
         )

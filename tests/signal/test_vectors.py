@@ -10,7 +10,8 @@ import scipy.stats
 from numpy.typing import NDArray
 
 from daq.signal.covariance import scatter_covariance, small_sample_factor, stated_covariance
-from daq.signal.vectors import Accumulator, Fit, basis, cos_sin
+from daq.signal.basis import basis, cos_sin
+from daq.signal.vectors import Accumulator, Fit
 
 
 def fit(turns: NDArray[np.float64], y: NDArray[np.float64], orders: tuple[int, ...] = (1,)) -> Fit:

@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from daq.signal.shapes import ChannelParams, Floats
+from daq.signal.shapes import ChannelParams, Floats, OrderVector
 
 CLIP_RUN = 3
 """So many samples in a row at the end of the scale are clipped."""
@@ -24,6 +24,13 @@ TILE = 32
 """Frames looked at together."""
 FLAT_COUNTS = 2
 """A probe whose samples stay within so many counts is flat."""
+HUNTING_SHARE = 0.002
+"""Speed hunts when its standard deviation in the window is above this share of it: the band within which a
+speed must lie near a critical one (REUSE (a)), where amplitude and phase hang on it most."""
+LOST_TURNS = 3.0
+"""With no pulse for so many turns at the end of a window the once-per-rev signal counts as lost."""
+SINE_PEAK = 2**0.5
+"""0-peak of a sine over its rms."""
 
 NO_PULSES = "no_pulses"
 LOST_PULSES = "once_per_rev_lost"
@@ -218,7 +225,14 @@ def probe_flags(
             c.gap_high_v is not None and gap_v[i] > c.gap_high_v
         )
         weak = not amplitude[i] >= min_signal_to_noise * residual_sd[i]
-        tests = ((CLIPPED, scan.clipped[1 + i]), (FLAT, scan.flat[1 + i]), (GAP, out), (WEAK, weak))
+        noisy = c.noise_limit is not None and residual_sd[i] * SINE_PEAK > c.noise_limit
+        tests = (
+            (CLIPPED, scan.clipped[1 + i]),
+            (FLAT, scan.flat[1 + i]),
+            (GAP, out),
+            (WEAK, weak),
+            (NOISE, noisy),
+        )
         found += [flag(code, c.name) for code, bad in tests if bad]
     return found
 
@@ -228,6 +242,29 @@ def pulse_flags(missed: int, doubles: int, pulse_samples: float, samples_per_tur
     few = pulse_samples < FEWEST_PULSE_SAMPLES or samples_per_turn < 2 * FEWEST_PULSE_SAMPLES
     tests = ((MISSED, missed > 0), (DOUBLES, doubles > 0), (FEW_SAMPLES, few))
     return [code for code, bad in tests if bad]
+
+
+def speed_flags(speed_sd_hz: float, speed_hz: float) -> list[str]:
+    """Whether the speed hunts; both in Hz, over the window."""
+    return [HUNTING] if speed_sd_hz > HUNTING_SHARE * speed_hz else []
+
+
+def floor_flags(vectors: Sequence[OrderVector]) -> list[str]:
+    """Probes whose 1X is within its own 95 % uncertainty."""
+    return [
+        flag(BELOW_FLOOR, v.channel) for v in vectors if v.order == 1 and not abs(v.value) > v.noise_floor
+    ]
+
+
+def lost_flags(
+    after: NDArray[Any], samples_per_turn: float, turning_rms: Floats, residual_sd: Floats
+) -> list[str]:
+    """Whether the probes vibrate on in ``after``, (frames, probes) counts that follow the last pulse.
+
+    ``turning_rms`` and ``residual_sd``, shape (probes,), in counts, are of the turns before it."""
+    if len(after) < LOST_TURNS * samples_per_turn:
+        return []
+    return [LOST_PULSES] if still_vibrating(ac_rms(after), turning_rms, residual_sd) else []
 
 
 def ac_rms(counts: NDArray[Any]) -> Floats:

@@ -11,6 +11,7 @@ from hypothesis import strategies as st
 
 from daq.signal.health import (
     SENTENCES,
+    SHORT,
     RangeScan,
     ac_rms,
     describe,
@@ -34,6 +35,18 @@ def test_every_code_has_one_sentence() -> None:
 
 def test_names_with_colons_and_braces_stay_whole() -> None:
     assert sentence(flag("flat", "a:{b}")) == "a:{b} is flat: its signal does not move at all."
+
+
+def test_a_flag_that_several_channels_share_is_said_once() -> None:
+    assert describe(["flat:a", "missed_pulses", "flat:b", "flat:c", "flat:b"]) == (
+        "each of a, b and c is flat: its signal does not move at all.",
+        "Some once-per-rev pulses were missed; where they belong is taken from their neighbours.",
+    )
+
+
+def test_every_sentence_has_its_word_for_a_column() -> None:
+    assert SENTENCES.keys() == SHORT.keys()
+    assert all(1 <= len(word) <= 9 for word in SHORT.values())
 
 
 def test_a_code_of_a_newer_version_is_named() -> None:

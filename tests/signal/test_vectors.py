@@ -9,8 +9,8 @@ import scipy.signal
 import scipy.stats
 from numpy.typing import NDArray
 
-from daq.signal.covariance import scatter_covariance, small_sample_factor, stated_covariance
 from daq.signal.basis import basis, cos_sin
+from daq.signal.covariance import scatter_covariance, small_sample_factor, stated_covariance
 from daq.signal.vectors import Accumulator, Fit
 
 

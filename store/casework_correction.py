@@ -13,6 +13,7 @@ from store.balance.fit import Observation
 from store.balance.holes import DEFAULT_STEP_G, Piece, place
 from store.balance.influence import ComplexArray, FloatArray, condition_number, inverse
 from store.balance.reuse import Candidate, ReusePool
+from store.balance.slowroll import less
 from store.balance.tolerance import Tolerance, tolerance_of
 from store.balance.trial import force_n
 from store.balance.uncertainty import REFUSE_BELOW_RATIO, WARN_BELOW_RATIO, amplitude_quantile
@@ -69,12 +70,12 @@ class System:
     inverse: ComplexArray
     """Least-squares inverse, shape (planes, channels)."""
 
-    def slow_roll(self, channel: str) -> complex:
-        return self.slow[channel].value if channel in self.slow else 0j
+    def slow_roll(self, channel: str) -> complex | None:
+        return self.slow[channel].value if channel in self.slow else None
 
     def unbalance(self, vectors: Iterable[complex]) -> list[complex]:
         """The unbalance in each plane that explains vectors (slow roll taken off), g.mm at its heavy spot."""
-        v = np.array([x - self.slow_roll(c) for c, x in zip(self.channels, vectors, strict=True)])
+        v = np.array([less(x, self.slow_roll(c)) for c, x in zip(self.channels, vectors, strict=True)])
         return [complex(u) for u in self.inverse @ v]
 
     def spread(self, variances: Iterable[float]) -> list[float]:

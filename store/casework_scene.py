@@ -12,7 +12,6 @@ from store.balance.angles import frame_turn_deg, piece_angle_deg, plane_of
 from store.balance.coefficients import planes_of, present_standing
 from store.balance.fit import (
     ChannelFit,
-    Gathered,
     Observation,
     balancing_at,
     fit_channel,
@@ -26,6 +25,7 @@ from store.balance.standing import Standing
 from store.balance.uncertainty import REFUSE_BELOW_RATIO, WARN_BELOW_RATIO
 from store.balance.weights import Unbalances, pieces_now, same_weights, unbalances
 from store.casework_answers import FittedPiece, UsedCoefficient
+from store.casework_slow_roll import slow_rolls_in
 from store.records import JobStory, Label, Machine, Mount, Origin, Reading, Run, WeightEvent, WeightPlane
 
 BASES = frozenset({Label.O, Label.CHECK, Label.TRIM})
@@ -202,17 +202,7 @@ def base_or_none(scene: Scene) -> dict[str, Observation]:
 
 def slow_rolls(scene: Scene) -> dict[str, Observation]:
     """The newest slow-roll reading by channel, of displacement channels only (METHODS section 9)."""
-
-    def wanted(run: Run, reading: Reading) -> bool:
-        return run.origin in scene.origins and reading.label is Label.SLOW_ROLL
-
-    found: dict[str, Observation] = {}
-    for channel in scene.standing.set_up.channels:
-        gathered: Gathered = gather(scene.story, channel.name, scene.standing, wanted)
-        if channel.kind == "displacement" and gathered.taken:
-            found[channel.name] = gathered.taken[-1]
-    newest = max((o.order for o in found.values()), default=None)
-    return {c: o for c, o in found.items() if o.order == newest}
+    return slow_rolls_in(scene.story, scene.standing, scene.origins)
 
 
 # --- coefficients --------------------------------------------------------------------------------------

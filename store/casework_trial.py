@@ -10,6 +10,7 @@ from store.balance.cautions import force_caution
 from store.balance.fit import Observation
 from store.balance.holes import DEFAULT_STEP_G, rounded_down
 from store.balance.reuse import WEAK_RATIO, Candidate
+from store.balance.slowroll import less
 from store.balance.standing import probe_with_rotation_deg, sensor_with_rotation_deg
 from store.balance.trial import (
     BELOW_CRITICAL,
@@ -143,7 +144,7 @@ def _vector(scene: Scene, channel: str, reading: Observation) -> complex:
     """The vector of a channel at a reading, its slow roll taken off where there is one."""
     at = next((o for o in scene.fits[channel].observations if o.order == reading.order), reading)
     slow = slow_rolls(scene).get(channel)
-    return at.value - (slow.value if slow else 0j)
+    return less(at.value, slow.value if slow else None)
 
 
 def _place_below_critical(

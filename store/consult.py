@@ -5,7 +5,7 @@ The daemon (verdict of a mark) and the command line (correction, advice, job) bo
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import suppress
 from typing import Any
 from uuid import UUID
@@ -14,8 +14,10 @@ from config.errors import Refusal
 from store import asjson, casework, standing_flags
 from store.balance.reuse import Candidate
 from store.casework_answers import CorrectionAdvice, ForceAdvice, TrialAdvice, Verdict
+from store.casework_bode import BodePicture, bode_picture, trace_json
+from store.casework_slow_roll import Runout, runout_of
 from store.history import History
-from store.records import JobStory, Label, Machine, Mount, PieceDraft, Reading, Run
+from store.records import JobStory, Label, Machine, Mount, PieceDraft, Reading, Run, Trace
 
 Json = dict[str, Any]
 JUDGED = (Label.CHECK, Label.TRIM)
@@ -105,18 +107,53 @@ def weight_entries(history: History, mounts: Iterable[Mount]) -> list[Json]:
     return found
 
 
-def run_json(history: History, name: str) -> Json:
+def run_json(history: History, name: str, *, minus_slow_roll: bool = False) -> Json:
     """A run with all that its probes told, as ``revmark run show --json`` prints it."""
-    return run_told(history, history.run(name))
+    return run_told(history, history.run(name), minus_slow_roll=minus_slow_roll)
 
 
-def run_told(history: History, run: Run) -> Json:
-    """The same of a run at hand, in whichever version its readings are."""
-    story = None if run.job_number is None else history.job_story(run.job_number, with_void=True)
-    set_up = history.set_up(run.set_up_id)
+def run_told(history: History, run: Run, *, minus_slow_roll: bool = False) -> Json:
+    """The same of a run at hand, in whichever version its readings are.
+
+    Raises Refusal when a slow roll is to be taken off and there is none."""
+    story = _story_of(history, run)
+    set_up, traces = history.set_up(run.set_up_id), history.traces(run.id)
     flags = {r.id: reading_flags(story, run, r) for r in run.readings}
     seen = {r.id: standing_flags.orbits_of(story, run, r, set_up) for r in run.readings}
-    return {**asjson.run_json(run, flags, seen), "zero": set_up.zero}
+    runout = runout_of(story, run) if minus_slow_roll else None
+    told = {**asjson.run_json(run, flags, seen), "zero": set_up.zero}
+    if runout is not None:
+        told["slow_roll"] = _runout_json(run, runout, traces)
+        for reading, one in zip(run.readings, told["readings"], strict=True):
+            less = [runout.without(run, reading, v) for v in reading.vectors]
+            one["less_slow_roll"] = [
+                asjson.vector_json(v, (*reading.flags, *flags[reading.id])) for v in less if v is not None
+            ]
+    return {**told, "traces": [trace_json(t, runout) for t in traces]}
+
+
+def _story_of(history: History, run: Run) -> JobStory | None:
+    return None if run.job_number is None else history.job_story(run.job_number, with_void=True)
+
+
+def _runout_json(run: Run, runout: Runout, traces: Iterable[Trace]) -> Json:
+    speeds = [r.speed_hz for r in run.readings] + [p.speed_hz for t in traces for p in t.points]
+    return runout.to_dict(max(speeds, default=None))
+
+
+def bode(history: History, name: str, *, minus_slow_roll: bool = False, **how: Any) -> BodePicture:
+    """A run's traces as they are drawn; ``how`` as ``casework_bode.bode_picture`` has it."""
+    run = history.run(name)
+    mount = None if run.mount_id is None else history.mount(run.mount_id)
+    runout = runout_of(_story_of(history, run), run) if minus_slow_roll else None
+    return bode_picture(
+        run,
+        history.traces(run.id),
+        history.set_up(run.set_up_id),
+        mount.machine if mount else None,
+        runout=runout,
+        **how,
+    )
 
 
 def reading_flags(story: JobStory | None, run: Run, reading: Reading) -> tuple[str, ...]:
@@ -124,6 +161,15 @@ def reading_flags(story: JobStory | None, run: Run, reading: Reading) -> tuple[s
     if story is not None:
         return standing_flags.derived_flags(story, run, reading)
     return tuple(f for f in standing_flags.floor_flags(reading) if f not in reading.flags)
+
+
+def live_flags(history: History, vectors: Sequence[Vector], flags: Sequence[str]) -> tuple[str, ...]:
+    """What the records add to the flags of the vectors as they stand now, of the run that is open."""
+    run = history.open_run() if vectors else None
+    if run is None or run.job_number is None:
+        return ()
+    now = Reading(run.id, run.id, 0, 0, 0.0, 0.0, 0, {}, tuple(flags), tuple(vectors))
+    return standing_flags.derived_flags(history.job_story(run.job_number), run, now)
 
 
 def reading_json(history: History, reading: Reading, job: str) -> Json:

@@ -9,9 +9,24 @@ from typing import Any
 import click
 
 from cli.client import Client, find
-from cli.output import Show, clean, json_option, local, print_json, say, shown, stand_option, table, times
+from cli.marked import NAME, words
+from cli.output import (
+    Show,
+    clean,
+    cut,
+    json_option,
+    local,
+    print_json,
+    say,
+    shown,
+    stand_option,
+    table,
+    times,
+)
 
 Json = Mapping[str, Any]
+FLAGS = 30
+"""Most columns of a channel's flags in the live table."""
 
 
 @click.command()
@@ -32,8 +47,10 @@ def command(stand: str | None, *, as_json: bool) -> None:
 
 def status_lines(answer: Json, show: Show, zone: tzinfo) -> list[str]:
     """The answer in lines that fit 80 columns. An older daemon may leave out any of it."""
-    vectors = answer.get("live", {}).get("vectors")
-    return [*_lines(answer, zone), *([_live_table(vectors, show)] if vectors else [])]
+    live = answer.get("live", {})
+    vectors, flags = live.get("vectors"), _flags(live)
+    shown_now = [_live_table(vectors, flags, show)] if vectors else []
+    return [*_lines(answer, zone), *shown_now, *_flag_lines(flags)]
 
 
 def _lines(answer: Json, zone: tzinfo) -> list[str]:
@@ -61,6 +78,7 @@ def _run_lines(live: Json) -> list[str]:
     if live.get("run"):
         lines.append(f"run      {clean(live['run'])}, {'steady' if live.get('steady') else 'not steady'}")
     lines += _below(live.get("still_out"))
+    lines += [line for note in live.get("steadiness_notes", ()) for line in _below(note)]
     samples, readings = live.get("lost_samples", 0), live.get("dropped_readings", 0)
     if samples or readings:
         lines.append(f"lost     {samples} samples, {readings} readings not stored")
@@ -82,9 +100,24 @@ def _below(text: object) -> list[str]:
     return [f"         {clean(text)}"] if text else []
 
 
-def _live_table(vectors: list[Json], show: Show) -> str:
+def _live_table(vectors: list[Json], flags: list[str], show: Show) -> str:
+    from store.records import flags_of
+
     rows = []
     for vector in vectors:
         size, unit, lag = shown(vector, show)
-        rows.append((vector["channel"], size, unit, lag))
-    return table(rows, ["channel", "1X now", "unit", "lag deg"], "lrlr")
+        told = words(list(flags_of(flags, vector["channel"])), FLAGS)
+        rows.append((cut(vector["channel"], NAME), size, unit, lag, told))
+    return table(rows, ["channel", "1X now", "unit", "lag deg", "flags"], "lrlrl")
+
+
+def _flags(live: Json) -> list[str]:
+    return [*live.get("flags", ()), *live.get("derived_flags", ())]
+
+
+def _flag_lines(flags: list[str]) -> list[str]:
+    if not flags:
+        return []
+    from daq.signal.health import describe
+
+    return [f"flag: {clean(text)}" for text in describe(flags)]

@@ -29,7 +29,10 @@ class LiveVector:
     channel: str
     unit: str
     amplitude_pk: float
-    lag_deg: float
+    lag_deg: float | None
+    """None while the amplitude is within its own 95 % uncertainty."""
+    se_pk: float = 0.0
+    """Standard error per component."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,6 +46,8 @@ class Live:
     steady: bool = False
     still_out: str = ""
     """While not steady: which figure is still out and by how much."""
+    steadiness_notes: tuple[str, ...] = ()
+    """While steady: what a person should know of it all the same."""
     vectors: tuple[LiveVector, ...] = ()
     flags: tuple[str, ...] = ()
     sample: int = 0

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import cmath
+import math
 from collections.abc import Mapping
 from dataclasses import asdict
 from typing import Any
@@ -10,16 +12,19 @@ from config.stand import Stand
 from daq import requests
 from daq.again import AgainDesk
 from daq.analysis import Analysis
-from daq.board import Board
+from daq.board import Board, Live
 from daq.clock import Clock
 from daq.control import Act, Question
 from daq.desk import Desk
 from daq.marks import MarkDesk
 from daq.pump import Pump
 from daq.rotor_desk import RotorDesk
+from daq.signal.health import BELOW_FLOOR, flag
+from daq.signal.shapes import CIRCLE_95
 from daq.writer import Writer
-from store import asjson
+from store import asjson, consult
 from store.history import History
+from store.records import Vector
 
 Json = dict[str, Any]
 NO_PARAMETERS: frozenset[str] = frozenset()
@@ -108,6 +113,7 @@ def status_json(stand: Stand, history: History, board: Board) -> Json:
     live, mount, pending, info = board.read(), history.current_mount(), history.pending_mark(), history.info()
     number = next((j.number for j in history.jobs() if mount and j.id == mount.job_id), None)
     told = asdict(live)
+    told["derived_flags"] = _derived(history, live)
     speed = told.pop("speed_hz")
     return {
         "stand": stand.name,
@@ -120,3 +126,14 @@ def status_json(stand: Stand, history: History, board: Board) -> Json:
         "wal_reset_safe": info.sqlite_wal_reset_safe,
         "wal_bytes": info.wal_bytes,
     }
+
+
+def _derived(history: History, live: Live) -> list[str]:
+    """Flags of the live vectors that need the job's records; and those below their noise floor."""
+    low = [flag(BELOW_FLOOR, v.channel) for v in live.vectors if v.lag_deg is None]
+    vectors = [
+        Vector(v.channel, 1, cmath.rect(v.amplitude_pk, math.radians(v.lag_deg)), v.se_pk**2, v.se_pk**2,
+               0.0, CIRCLE_95 * v.se_pk, v.unit)
+        for v in live.vectors if v.lag_deg is not None
+    ]  # fmt: skip
+    return [*low, *consult.live_flags(history, vectors, live.flags)]

@@ -17,7 +17,7 @@ from store.casework_answers import CorrectionAdvice, ForceAdvice, TrialAdvice, V
 from store.casework_bode import BodePicture, bode_picture, trace_json
 from store.casework_slow_roll import Runout, runout_of
 from store.history import History
-from store.records import JobStory, Label, Machine, Mount, PieceDraft, Reading, Run, Trace
+from store.records import JobStory, Label, Machine, Mount, PieceDraft, Reading, Run, Trace, Vector
 
 Json = dict[str, Any]
 JUDGED = (Label.CHECK, Label.TRIM)

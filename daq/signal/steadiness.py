@@ -1,6 +1,7 @@
 """Is the machine steady? Judged on the newest blocks; the answer says what is still out and by how much.
 
-Limits and their sources: ``config.steadiness``. All amplitudes are 0-peak in the probe's base unit.
+Limits and their sources: ``config.steadiness``. All amplitudes are 0-peak in the probe's base unit. What is
+judged against its own uncertainty, and what noise may still hide: DEVELOPERS.md, decision 13.
 """
 
 from __future__ import annotations
@@ -12,15 +13,32 @@ from typing import Any
 import numpy as np
 
 from config.steadiness import SteadinessLimits
+from daq.signal.averaging import colour, widening
 from daq.signal.shapes import BlockFit, Complexes, Floats
+from daq.signal.slow import swing, told_over_block_se, trend
 
 MISSED_LIMIT_PCT = 0.1
 """Missed or double pulses allowed in a window, of its turns (REUSE.md (a))."""
 CHANGE_SE = 3.0
 """A change within so many of its own standard errors is none."""
-SWING_SE = 6.0
-"""The same for the largest of all distances between two of some eight blocks, in standard errors of one:
-0.3 % of pure noise goes beyond (Monte Carlo in tests/signal/test_steadiness.py)."""
+PLANE_SE = 4.0
+"""The same for the drift of a vector, which has two components and is asked often: chance 0.03 %."""
+SWING_SE = 7.0
+"""The same for the largest of all distances between two of some blocks, in standard errors of one: noise
+alone goes beyond in one of 10,000 windows of 8 blocks (Monte Carlo in tests/signal/test_steadiness.py)."""
+BEAT_SE2 = 22.0
+"""A fitted swing that takes away less than so many variances of noise is none (chi square of 4: 0.05 %)."""
+TOLD_SD = 5.2
+"""Noise hides no swing of so many of its standard errors: chi square of 4 with so many squared besides is
+beyond BEAT_SE2 in 97 % of windows."""
+MARGIN_SE = 2.0
+"""A slow change counts from so many of its standard errors below the limit: chance shall not pass it."""
+DRIFT_TOLD_SE = 4.2
+"""A drift's standard error must be this part of the limit, so that its own uncertainty excuses none."""
+HUNTING_SE = 4.0
+"""The same for the amplitude of a sine through the blocks' speeds."""
+SLOWEST = 2.0
+"""The slowest swing looked for, in shortest windows."""
 
 UNITS: Mapping[str, str] = {"displacement": "um", "velocity": "mm/s", "acceleration": "m/s2"}
 
@@ -30,15 +48,24 @@ SENTENCES: Mapping[str, str] = {
     "blocks": "the averaging window holds {value} of {limit} blocks",
     "hold": "the speed has been held for {value} s of {limit} s",
     "lookback": "vectors can be looked back at over {value} s of {limit} s",
-    "speed_wanted": "the speed is {value} % off the one wanted, limit {limit} %",
     "speed_sd": "the speed varies by {value} % (standard deviation), limit {limit} %",
     "speed_drift": "the speed drifts {value} %/min, limit {limit} %/min",
+    "hunting": "the speed hunts by {value} % (standard deviation), limit {limit} %",
     "missed_pulses": "{value} % of the once-per-rev pulses are missed or double, limit {limit} %",
     "change": "{channel} still drifts: {value} {unit} 0-pk of {limit} {unit} allowed",
     "swing": "{channel} still swings: {value} {unit} 0-pk of {limit} {unit} allowed",
     "scatter": "{channel} scatters: {value} {unit} 0-pk of {limit} {unit} allowed",
+    "drift": "{channel} drifts: {value} {unit} 0-pk a window of {limit} {unit} allowed",
+    "beat": "{channel} beats: travels {value} {unit} 0-pk of {limit} {unit} allowed",
+    "told": "{channel}: noise may hide a slow change of {value} {unit} of {limit}{more}",
+    "averaged": "{channel}: averaged to {value} {unit} of {limit} {unit}{more}",
+    "phase": "{channel}: phase averaged to {value} of {limit} deg{more}",
 }
 """What each figure says when it is out."""
+RELAX: Mapping[str, str] = {"told": "change", "averaged": "amplitude_target", "phase": "phase_target"}
+"""Setting of the stand file to relax when the longest window does not do."""
+WAITS = frozenset({"window", "revolutions", "blocks", "hold", "lookback", *RELAX})
+"""Figures that time alone may put right."""
 AT_LEAST = frozenset({"window", "revolutions", "blocks", "hold", "lookback"})
 """Figures that must reach their limit; the others must stay within it."""
 
@@ -58,6 +85,26 @@ class Figure:
     limit: float
     unit: str
     ok: bool
+    more_s: float | None = None
+    """For what averaging puts right: about how much longer it takes."""
+    longest_s: float | None = None
+    """Set when the longest window, of this length, does not do."""
+
+    def as_dict(self) -> dict[str, Any]:
+        """For the record, without what does not apply."""
+        return {k: v for k, v in asdict(self).items() if v is not None or k == "channel"}
+
+    @property
+    def waits(self) -> bool:
+        """Time alone may put it right."""
+        return self.name in WAITS
+
+    @property
+    def rank(self) -> int:
+        """Which is said first: speed and pulses, vectors, what must be reached, averaging."""
+        if self.waits:
+            return 3 if self.name in RELAX else 2
+        return 0 if self.channel is None else 1
 
     @property
     def excess(self) -> float:
@@ -70,8 +117,20 @@ class Figure:
     @property
     def sentence(self) -> str:
         return SENTENCES[self.name].format(
-            value=_plain(self.value), limit=_plain(self.limit), unit=self.unit, channel=self.channel
+            value=_plain(self.value),
+            limit=_plain(self.limit),
+            unit=self.unit,
+            channel=self.channel,
+            more=self._more,
         )
+
+    @property
+    def _more(self) -> str:
+        if self.ok or self.more_s is None:
+            return ""
+        if self.longest_s is not None:
+            return f" in {_plain(self.longest_s)} s, the longest window; relax {RELAX[self.name]}"
+        return f"; about {max(1.0, self.more_s):.0f} s more"
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,11 +143,25 @@ class Verdict:
     first_sample: int = 0
     """Source sample index where the window begins; it ends before ``stop_sample``."""
     stop_sample: int = 0
+    notes: tuple[str, ...] = ()
+    """What a person should know of it that refuses nothing: a sentence each."""
 
     @property
     def worst(self) -> Figure | None:
-        """The figure furthest out; None when none is."""
-        return max((f for f in self.figures if not f.ok), key=lambda f: f.excess, default=None)
+        """The figure furthest out: of the speed (its drift before its scatter, which is large with it), else
+        of the vectors, else what waits, and averaging last; None when none is."""
+        out = (f for f in self.figures if not f.ok)
+        return max(out, key=lambda f: (-f.rank, f.name == "speed_drift", f.excess), default=None)
+
+    @property
+    def settled(self) -> bool:
+        """Steady, but for the times it must have been so."""
+        return all(f.ok or f.name in ("hold", "lookback") for f in self.figures)
+
+    @property
+    def waits(self) -> bool:
+        """Not steady, and nothing but time is missing."""
+        return not self.steady and all(f.ok or f.waits for f in self.figures)
 
     @property
     def sentence(self) -> str:
@@ -96,8 +169,11 @@ class Verdict:
         return "steady" if self.worst is None else self.worst.sentence
 
     def as_dict(self) -> dict[str, Any]:
-        """For the record: ``steady`` and the figures."""
-        return {"steady": self.steady, "figures": [asdict(f) for f in self.figures]}
+        """For the record: ``steady``, the figures and the notes."""
+        figures = [
+            {k: v for k, v in asdict(f).items() if v is not None or k == "channel"} for f in self.figures
+        ]
+        return {"steady": self.steady, "figures": figures, "notes": list(self.notes)}
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,17 +195,22 @@ def judge(
     limits: SteadinessLimits,
     probes: Sequence[Probe],
     *,
-    wanted_hz: float | None = None,
+    window: Sequence[BlockFit] | None = None,
 ) -> Verdict:
-    """Judge the newest window of ``fits`` (in order of time, as many as there are; :func:`needed` says which
-    may be dropped). ``wanted_hz`` asks for a speed within ``speed_band_pct`` of it besides."""
-    history = _unbroken(fits)
-    window = _window(history, limits)
+    """Judge ``window``, the newest of ``fits`` (in order of time, as many as there are; :func:`needed` says
+    which may be dropped); left out = the shortest window that the limits allow."""
+    history = unbroken(fits)
+    if window is None:
+        window = shortest(history, limits)
     figures = list(_filled(window, limits))
     if len(window) >= 3:
-        figures += _speed(window, limits, wanted_hz)
+        blocks = _Blocks(window)
+        figures += _speed(window, blocks, limits)
         figures += _hold(history, window, limits)
-        figures += _vectors(history, window, limits, probes)
+        figures += _vectors(history, blocks, limits, probes)
+        if len(window) >= limits.blocks and all(f.ok or f.waits for f in figures):  # else nobody asks
+            figures += _slow(blocks, limits, probes)
+        figures += _averaged(blocks, limits, probes)
     steady = all(f.ok for f in figures)
     if not window:
         return Verdict(steady, tuple(figures))
@@ -137,11 +218,11 @@ def judge(
 
 
 def needed(fits: Sequence[BlockFit], limits: SteadinessLimits) -> int:
-    """How many of the oldest fits will not be asked for again."""
+    """How many of the oldest fits will not be asked for again, beside those of the window."""
     if not fits:
         return 0
-    broken = len(fits) - len(_unbroken(fits))
-    window = _window(fits, limits)
+    broken = len(fits) - len(unbroken(fits))
+    window = shortest(fits, limits)
     reach = max(limits.hold_s, limits.lookback_s + 2 * (window[-1].t_end_s - window[0].t_start_s))
     oldest = fits[-1].t_end_s - max(reach, limits.lookback_s + 2 * limits.window_s)
     return max(broken, sum(f.t_end_s < oldest for f in fits))
@@ -150,7 +231,7 @@ def needed(fits: Sequence[BlockFit], limits: SteadinessLimits) -> int:
 # --- the window ------------------------------------------------------------------------------------------
 
 
-def _unbroken(fits: Sequence[BlockFit]) -> Sequence[BlockFit]:
+def unbroken(fits: Sequence[BlockFit]) -> Sequence[BlockFit]:
     """The newest fits that follow each other without a gap in the samples."""
     start = len(fits) - 1
     while start > 0 and (
@@ -161,7 +242,7 @@ def _unbroken(fits: Sequence[BlockFit]) -> Sequence[BlockFit]:
     return fits[max(0, start) :]
 
 
-def _window(history: Sequence[BlockFit], limits: SteadinessLimits) -> Sequence[BlockFit]:
+def shortest(history: Sequence[BlockFit], limits: SteadinessLimits) -> Sequence[BlockFit]:
     """The fewest newest fits that fill a window; all of them when they do not."""
     turns = 0
     for n in range(1, len(history) + 1):
@@ -190,25 +271,51 @@ def _at_most(name: str, channel: str | None, value: float, limit: float, unit: s
 # --- speed -----------------------------------------------------------------------------------------------
 
 
+class _Blocks:
+    """A window's blocks as arrays, in order of time."""
+
+    def __init__(self, window: Sequence[BlockFit]) -> None:
+        self.window = window
+        turns = np.array([f.revolutions for f in window], np.float64)
+        self.share: Floats = turns / turns.sum()
+        self.times_s: Floats = np.array([(f.t_start_s + f.t_end_s) / 2 for f in window])
+        self.speeds: Floats = np.array([f.speed_hz for f in window])
+        self.speed_hz = float(self.share @ self.speeds)
+        self.length_s = window[-1].t_end_s - window[0].t_start_s
+        self.block_s = self.length_s / len(window)
+        self.vectors: Complexes = np.stack([f.vectors for f in window])
+        self.mean: Complexes = self.share @ self.vectors
+        self.size: Floats = np.abs(self.mean)
+        se2 = np.stack([f.se for f in window]) ** 2
+        self.block_se2: Floats = se2.mean(axis=0)
+        """White, of one block."""
+        self.widening: Floats = widening(window)
+        self.se: Floats = np.sqrt(self.share**2 @ se2 * self.widening)
+        """Of the mean, coloured noise included."""
+
+    def shortest_s(self, limits: SteadinessLimits) -> float:
+        """Length of the shortest window at this speed."""
+        return max(limits.window_s, limits.min_revolutions / self.speed_hz)
+
+
 def _mean_speed(window: Sequence[BlockFit]) -> float:
     turns = sum(f.revolutions for f in window)
     return sum(f.revolutions * f.speed_hz for f in window) / turns
 
 
-def _speed(window: Sequence[BlockFit], limits: SteadinessLimits, wanted_hz: float | None) -> Iterator[Figure]:
-    mean = _mean_speed(window)
-    speeds = np.array([f.speed_hz for f in window])
+def _speed(window: Sequence[BlockFit], blocks: _Blocks, limits: SteadinessLimits) -> Iterator[Figure]:
+    mean, count = blocks.speed_hz, len(window)
     within = np.array([f.speed_sd_hz for f in window])
-    sd = np.sqrt(np.var(speeds, ddof=1) + np.mean(within**2))
-    times = np.array([(f.t_start_s + f.t_end_s) / 2 for f in window])
-    times -= times.mean()
-    slope = np.sum(times * speeds) / np.sum(times**2)
+    sd = np.sqrt(np.var(blocks.speeds, ddof=1) + np.mean(within**2))
+    line = trend(blocks.times_s, blocks.speeds[:, None])
+    slope = float(line.rate[0].real)
+    left = blocks.speeds - mean - slope * (blocks.times_s - blocks.times_s.mean())
+    se = np.sqrt(np.sum(left**2) / (count - 2)) / line.spread_s
     yield _at_most("speed_sd", None, 100 * sd / mean, limits.speed_sd_pct, "%")
-    drift = abs(100 * slope * 60 / mean)
-    yield _at_most("speed_drift", None, drift, limits.speed_drift_pct_per_min, "%/min")
-    if wanted_hz is not None:
-        off = 100 * abs(mean - wanted_hz) / wanted_hz
-        yield _at_most("speed_wanted", None, off, limits.speed_band_pct, "%")
+    to_pct_min = 100 * 60 / mean
+    excused = min(CHANGE_SE * se * to_pct_min, 60 * np.sqrt(12) * limits.speed_sd_pct / blocks.length_s)
+    drift_limit = max(limits.speed_drift_pct_per_min, excused)  # a line beyond the second is out by its sd
+    yield _at_most("speed_drift", None, abs(slope) * to_pct_min, drift_limit, "%/min")
     turns = sum(f.revolutions for f in window)
     bad = sum(f.missed + f.doubles for f in window)
     yield _at_most("missed_pulses", None, 100 * bad / turns, MISSED_LIMIT_PCT, "%")
@@ -234,7 +341,7 @@ def _hold(
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Mean:
-    """Mean vectors of some blocks, weighted by their turns."""
+    """Mean vectors of some blocks, weighted by their turns; their errors as of white noise."""
 
     vectors: Complexes
     se: Floats
@@ -248,29 +355,45 @@ def _mean(fits: Sequence[BlockFit]) -> _Mean:
     return _Mean(share @ vectors, np.sqrt((share**2) @ se**2))
 
 
+def _allowed(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]) -> Floats:
+    """Change allowed of each probe's vector."""
+    floors = np.array([limits.change_floor(p.kind) for p in probes])
+    found: Floats = np.maximum(limits.change_pct / 100 * blocks.size, floors)
+    return found
+
+
 def _vectors(
-    history: Sequence[BlockFit],
-    window: Sequence[BlockFit],
-    limits: SteadinessLimits,
-    probes: Sequence[Probe],
+    history: Sequence[BlockFit], blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]
 ) -> Iterator[Figure]:
-    earlier, later, looked = _compared(history, window, limits)
+    earlier, later, looked = _compared(history, blocks.window, limits)
     if limits.lookback_s > 0:
         yield looked
-    now, one_se = _mean(window), np.stack([f.se for f in window]).mean(axis=0)
-    vectors = np.stack([f.vectors for f in window])
-    swing = np.abs(vectors[:, None] - vectors[None, :]).max(axis=(0, 1))
-    scatter = np.sqrt(np.sum(np.abs(vectors - vectors.mean(axis=0)) ** 2, axis=0) / (2 * (len(window) - 1)))
+    one_se, vectors = np.sqrt(blocks.block_se2), blocks.vectors
+    swing_seen = np.abs(vectors[:, None] - vectors[None, :]).max(axis=(0, 1))
+    scatter = np.sqrt(np.sum(np.abs(vectors - vectors.mean(axis=0)) ** 2, axis=0) / (2 * (len(vectors) - 1)))
+    allowed = _allowed(blocks, limits, probes)
+    line = trend(blocks.times_s, vectors)
+    drift = np.abs(line.rate) * blocks.shortest_s(limits)
+    drift_se = _drift_se(blocks, limits)
     for i, probe in enumerate(probes):
-        unit, size = UNITS[probe.kind], abs(now.vectors[i])
-        allowed = max(limits.change_pct / 100 * size, limits.change_floor(probe.kind))
+        unit = UNITS[probe.kind]
         if earlier is not None and later is not None:
             change = abs(later.vectors[i] - earlier.vectors[i])
-            se = float(np.hypot(earlier.se[i], later.se[i]))
-            yield _at_most("change", probe.name, change, max(allowed, CHANGE_SE * se), unit)
-        yield _at_most("swing", probe.name, swing[i], max(allowed, SWING_SE * one_se[i]), unit)
-        spread = max(limits.scatter_pct / 100 * size, limits.change_floor(probe.kind), CHANGE_SE * one_se[i])
+            se = float(np.hypot(earlier.se[i], later.se[i]) * np.sqrt(blocks.widening[i]))
+            yield _at_most("change", probe.name, change, max(allowed[i], CHANGE_SE * se), unit)
+        yield _at_most("swing", probe.name, swing_seen[i], max(allowed[i], SWING_SE * one_se[i]), unit)
+        most = max(allowed[i] - MARGIN_SE * drift_se[i], PLANE_SE * drift_se[i])
+        yield _at_most("drift", probe.name, drift[i], most, unit)
+        floor = limits.change_floor(probe.kind)
+        spread = max(limits.scatter_pct / 100 * blocks.size[i], floor, CHANGE_SE * one_se[i])
         yield _at_most("scatter", probe.name, scatter[i], spread, unit)
+
+
+def _drift_se(blocks: _Blocks, limits: SteadinessLimits) -> Floats:
+    """Standard error per component of what the trend makes of the vectors from one window to the next."""
+    spread_s = float(np.sqrt(np.sum((blocks.times_s - blocks.times_s.mean()) ** 2)))
+    found: Floats = np.sqrt(blocks.block_se2 * blocks.widening) * blocks.shortest_s(limits) / spread_s
+    return found
 
 
 def _compared(
@@ -285,7 +408,63 @@ def _compared(
         half = len(window) // 2
         return _mean(window[:half]), _mean(window[-half:]), figure
     past = [f for f in history if f.t_end_s <= window[-1].t_end_s - limits.lookback_s]
-    then = _window(past, limits)
+    then = shortest(past, limits)
     if not all(f.ok for f in _filled(then, limits)):
         return None, None, Figure("lookback", None, reach_s, figure.limit, "s", ok=False)
     return _mean(then), _mean(window), figure
+
+
+# --- what is slow, and what is noise ----------------------------------------------------------------------
+
+
+def _slow(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]) -> Iterator[Figure]:
+    """Swings of a period up to two windows, of speed and vectors, of which the window may hold a half."""
+    slowest_s = SLOWEST * blocks.shortest_s(limits)
+    yield _hunting(blocks, limits, slowest_s)
+    count = len(blocks.times_s)
+    found = swing(blocks.times_s, blocks.vectors, blocks.block_s, slowest_s)
+    freedom = 2 * count - 7
+    noise2 = blocks.block_se2 * colour(found.left / freedom, blocks.block_se2, freedom)
+    se = found.per_se * np.sqrt(noise2)
+    chance = found.travel * np.sqrt(BEAT_SE2 * noise2 / np.maximum(found.explained, 1e-300))
+    allowed = _allowed(blocks, limits, probes)
+    told = np.sqrt(noise2) * told_over_block_se(blocks.times_s, slowest_s, TOLD_SD)
+    told = np.maximum(told, DRIFT_TOLD_SE * _drift_se(blocks, limits))
+    for i, probe in enumerate(probes):
+        unit = UNITS[probe.kind]
+        most = max(allowed[i] - MARGIN_SE * se[i], min(chance[i], found.travel[i] * 10))
+        yield _at_most("beat", probe.name, found.travel[i], most, unit)
+        yield _by_averaging("told", probe.name, told[i], allowed[i], unit, blocks.length_s, 1.5)
+
+
+def _hunting(blocks: _Blocks, limits: SteadinessLimits, slowest_s: float) -> Figure:
+    found = swing(blocks.times_s, blocks.speeds[:, None], blocks.block_s, slowest_s)
+    per_sd = 100 / blocks.speed_hz / np.sqrt(8.0)  # the standard deviation of a sine from its travel
+    noise = float(np.sqrt(found.left[0] / (len(blocks.times_s) - 4)))
+    limit = max(limits.speed_sd_pct, HUNTING_SE * noise * float(found.per_se[0]) * per_sd)
+    return _at_most("hunting", None, float(found.travel[0]) * per_sd, limit, "%")
+
+
+def _averaged(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]) -> Iterator[Figure]:
+    """Whether each vector is known as well as is asked for."""
+    phase = np.radians(limits.phase_target_deg)
+    for name, kind, size, se in zip(
+        (p.name for p in probes), (p.kind for p in probes), blocks.size, blocks.se, strict=True
+    ):
+        floor, share = limits.target_floor(kind), limits.amplitude_target_pct / 100
+        if share * size > floor:
+            yield _by_averaging("averaged", name, 100 * se / size, 100 * share, "%", blocks.length_s)
+        else:
+            yield _by_averaging("averaged", name, se, floor, UNITS[kind], blocks.length_s)
+        if phase * size > floor:
+            deg = float(np.degrees(se / size))
+            yield _by_averaging("phase", name, deg, limits.phase_target_deg, "deg", blocks.length_s)
+
+
+def _by_averaging(
+    name: str, channel: str, value: float, limit: float, unit: str, length_s: float, power: float = 0.5
+) -> Figure:
+    """A figure that falls with the window's length to the ``-power``."""
+    longer = (value / limit) ** (1 / power) if limit > 0 else float("inf")
+    more_s = float(length_s * max(0.0, longer - 1))
+    return Figure(name, channel, float(value), float(limit), unit, bool(value <= limit), more_s)

@@ -40,7 +40,7 @@ MARGINAL = 2.0
 """Below this :attr:`EdgeFinder.margin` the level is marginal."""
 PIECE = 1 << 16
 """Samples of a window looked at together."""
-RING_SHARE = 0.125
+RING_SHARE = 0.05
 """A rest between two pulses shorter than this share of those around it: the pulse before it still rings."""
 RING_MEMORY = 16
 """Rests looked at for that."""
@@ -270,6 +270,11 @@ class EdgeFinder:
     def untold(self) -> int:
         """Pulses of which nobody could tell whether they are the one that counts."""
         return self._teller.untold if self._teller is not None else 0
+
+    @property
+    def undecided(self) -> float | None:
+        """The oldest pulse of which it is not decided yet whether it counts; None when there is none."""
+        return self._teller.undecided if self._teller is not None else None
 
     def hold(self, trigger: Trigger) -> None:
         """Use another fixed trigger from the next sample on."""

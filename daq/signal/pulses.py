@@ -47,6 +47,11 @@ class MarkTeller:
         self._edges, self._widths = np.empty(0), np.empty(0)
         self._done = 0
 
+    @property
+    def undecided(self) -> float | None:
+        """The oldest edge not decided yet; None when there is none."""
+        return float(self._edges[self._done]) if self._done < len(self._edges) else None
+
     def feed(self, edges: Floats, widths: Floats) -> Floats:
         """Edges (n,) of the pulses that count among those that can be decided now. ``edges`` (n,) of all
         pulses, and ``widths`` (n,) in samples of the pulse *before* each."""

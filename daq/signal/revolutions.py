@@ -13,10 +13,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from daq.signal.rhythm import Mended, Rhythm
 from daq.signal.shapes import Floats, median
 
-MISSED_RATIO = 1.6
-DOUBLE_RATIO = 0.6
+REPAIR_LIMIT_PCT = 10.0
+"""Missed pulses that may be filled in, and doubles that may be taken out, of the turns of a window each."""
 MEDIAN_TURNS = 7
 
 
@@ -25,7 +26,7 @@ MEDIAN_TURNS = 7
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Turns:
-    """The turns between n edges, n - 1 of them, each marked good or not."""
+    """The turns between n edges, repaired; n - 1 of them, each marked good or not."""
 
     edges: Floats
     """Shape (n,), absolute sample index."""
@@ -34,9 +35,9 @@ class Turns:
     curve: Floats
     """Shape (n - 1,): second divided difference of the turn count, turns per sample squared."""
     missed_in: NDArray[np.int64]
-    """Shape (n - 1,): pulses that did not come in each turn."""
+    """Shape (n - 1,): pulses that did not come; 1 where the edge at the turn's end is filled in."""
     doubles_in: NDArray[np.int64]
-    """Shape (n - 1,): pulses too many, booked to the last of the turns they cut."""
+    """Shape (n - 1,): pulses too many, taken out."""
 
     @property
     def missed(self) -> int:
@@ -80,57 +81,29 @@ class Turns:
 
 
 def turns_of(edges: Floats, breaks: Sequence[int] = ()) -> Turns:
-    """Turns between ``edges`` (ascending sample indices), judged against the median of their neighbours.
+    """Turns between ``edges`` (ascending sample indices), repaired: missed pulses filled in and doubles taken
+    out by the rhythm of their neighbours (``daq.signal.rhythm``), both counted.
 
-    A turn over 1.6 times the median has missed pulses in it; under 0.6 times it is cut by a double pulse, and
-    then its neighbours do not count either: nobody knows which of the two pulses was the mark.
-    ``breaks`` are samples before which others were lost: a turn across one is not good either."""
+    ``breaks`` are samples before which others were lost: a turn across one is not good, nor is one across
+    which the rhythm was lost."""
     edges = np.asarray(edges, np.float64)
-    if len(edges) < 2:
-        none = np.zeros(0, np.int64)
-        return Turns(edges, np.zeros(0, bool), np.zeros(0), none, none)
-    ratio = _ratio_to_neighbours(edges[1:] - edges[:-1])
-    long, short = ratio > MISSED_RATIO, ratio < DOUBLE_RATIO
-    good = ~(long | short)
-    missed = np.where(long, np.rint(ratio) - 1, 0).astype(np.int64)
-    doubles = np.zeros(len(ratio), np.int64)
-    if short.any():
-        doubles = _count_doubles(ratio, short)
-        good[1:] &= ~short[:-1]
-        good[:-1] &= ~short[1:]
-    for sample in breaks:
-        at = int(np.searchsorted(edges, sample))
-        good[max(0, at - 1) : at] = False
-    return Turns(edges, good, _curvature(edges, good), missed, doubles)
+    mended = Mended()
+    for part in np.split(edges, np.searchsorted(edges, sorted(breaks))):
+        rhythm = Rhythm()
+        rhythm.feed(part)
+        mended.join(rhythm.finish())
+    return turns_between(mended)
 
 
-def _ratio_to_neighbours(periods: Floats) -> Floats:
-    """Each period over the median of the (up to) seven around it; at the ends of the first and last seven."""
-    width = min(MEDIAN_TURNS, len(periods))
-    lead = (width - 1) // 2
-    last = len(periods) - width
-    windows = periods[np.arange(last + 1)[:, None] + np.arange(width)]
-    medians = np.partition(windows, lead, axis=1)[:, lead]
-    before = np.full(lead, medians[0])
-    after = np.full(width - 1 - lead, medians[-1])
-    ratio: Floats = periods / np.concatenate((before, medians, after))
-    return ratio
-
-
-def _count_doubles(ratio: Floats, short: NDArray[np.bool_]) -> NDArray[np.int64]:
-    """Pulses too many: in each run of short turns, how many more than the turns they add up to."""
-    extra = np.zeros(len(ratio), np.int64)
-    starts, stops = _runs(short)
-    total = np.concatenate(([0.0], np.cumsum(ratio)))
-    extra[stops - 1] = (stops - starts) - np.rint(total[stops] - total[starts]).astype(np.int64)
-    return extra
-
-
-def _runs(marked: NDArray[np.bool_]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    """First and stop index of each run of True."""
-    marks = np.concatenate(([False], marked, [False]))
-    change = np.flatnonzero(marks[1:] != marks[:-1])
-    return change[::2], change[1::2]
+def turns_between(mended: Mended) -> Turns:
+    """The turns of edges that are repaired already."""
+    return Turns(
+        mended.edges,
+        mended.good,
+        _curvature(mended.edges, mended.good),
+        mended.missed,
+        mended.doubles,
+    )
 
 
 def _curvature(edges: Floats, good: NDArray[np.bool_]) -> Floats:
@@ -176,9 +149,11 @@ def turn_fractions(turns: Turns, start: int, stop: int) -> Floats:
 
 def angles_at(edges: Floats, positions: Floats) -> Floats:
     """Angle in radians at any ``positions`` (sample indices) between the first and the last edge; the first
-    edge is 0, each further one 2 pi more. For tests and small arrays; ValueError outside the edges."""
+    edge is 0, each further one 2 pi more, none repaired. For tests and small arrays; ValueError outside."""
     positions = np.asarray(positions, np.float64)
-    turns = turns_of(edges)
+    whole = Mended()
+    whole.add(np.asarray(edges, np.float64))
+    turns = turns_between(whole)
     if len(edges) < 2 or positions.min() < edges[0] or positions.max() > edges[-1]:
         raise ValueError("an angle is known between the first and the last edge only")
     k = np.clip(np.searchsorted(edges, positions, side="right") - 1, 0, len(edges) - 2)

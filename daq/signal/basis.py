@@ -1,11 +1,12 @@
-"""Rows 1, cos, sin, cos 2, sin 2 ... of the least squares at the angles of a stretch of turns.
+"""Rows 1, cos, sin, cos 2, sin 2 ... of the least squares at the angles of a stretch of turns, times counts.
 
-At many samples a turn the angle hardly bends within a few dozen of them: there cosines and sines are taken at
-twelve angles of a tile only and carried to its samples by a polynomial through these (Chebyshev's nodes),
-one matrix product for many tiles. For e^{jx} over x = -a..a the polynomial is off by at most
-2 (a/2)^12 / 12! (the remainder of interpolation at these nodes). Tiles are kept so short that a is at most
-``SPAN_RAD`` for the highest order: 2.3e-15 for the rows, and 9e-12 for the products of two rows, which are
-summed by the same polynomial. With fewer samples a turn every angle is worked on.
+At many samples a turn the angle hardly bends within a few dozen of them. There cosines and sines are taken
+at the eight Chebyshev nodes of each tile of samples only; what they are between is the polynomial through
+these. So the counts of a tile are summed first with the weights that carry the nodes' values to the samples,
+the same for every tile, and eight sums a tile are then multiplied with cosines and sines. For e^{jx} over
+x = -a..a the polynomial is off by at most 2 (a/2)^8 / 8! (the remainder of interpolation at these nodes).
+Tiles are kept so short that a is at most ``SPAN_RAD`` for the highest order: 3e-11. With fewer samples a turn
+every angle is worked on.
 """
 
 from __future__ import annotations
@@ -22,10 +23,10 @@ from numpy.typing import NDArray
 from daq.signal.revolutions import Turns, turn_fractions
 from daq.signal.shapes import Floats
 
-SPAN_RAD = 0.6
+SPAN_RAD = 1 / 3
 """Half of the angle, times the highest order, that a tile may span."""
-NODES = 12
-TILES = (64, 32)
+NODES = 8
+TILES = (64, 32, 16)
 """Frames in a tile, the longer the better; shorter ones cost more than they save."""
 HEIGHT = 4
 """The number of rows is a multiple of this, the rows added zero: products are faster so."""
@@ -104,16 +105,17 @@ def tile_frames(samples_per_turn: float, highest: int) -> int | None:
 
 
 class Rows(Protocol):
-    """Rows at some samples, made when they are asked for."""
+    """Rows at some samples that follow each other."""
 
-    height: int
-    """Number of rows, those of zeros included."""
     gram: Floats
     """Sums of their products: the normal matrix, shape (1 + 2 orders, 1 + 2 orders)."""
+    room: int
+    """So many frames more than ``step`` must ``times`` have for itself."""
 
-    def part(self, start: int, stop: int) -> Floats:
-        """Rows of the samples ``start`` to ``stop``, counted from the first; shape
-        (``height``, n). To be used before the next ones are asked for."""
+    def times(self, first: int, frames: int, y: Floats) -> Floats:
+        """The rows from sample ``first`` on, a multiple of ``step``, times ``y[:frames]`` (frames, probes):
+        (1 + 2 orders, probes). ``frames`` is a multiple of ``TILES[0]``, ``y`` 0 beyond the last sample, and
+        used up."""
         ...
 
 
@@ -122,13 +124,24 @@ def padded(rows: int) -> int:
     return -(-rows // HEIGHT) * HEIGHT
 
 
-def rows_at_turns(turns: Turns, start: int, stop: int, orders: Sequence[int]) -> Rows:
-    """Rows at the samples ``start`` to ``stop``, all of which lie in one stretch of good turns."""
+def rows_at_turns(turns: Turns, start: int, stop: int, orders: Sequence[int], step: int) -> Rows:
+    """Rows at the samples ``start`` to ``stop``, all of which lie in one stretch of good turns. They are
+    taken ``step`` samples at a time, a multiple of ``TILES[0]``."""
     span = Span.of(turns, start, stop)
     frames = tile_frames(float(span.periods.min()), max(orders))
     if frames is None:
         return DirectRows(turn_fractions(turns, start, stop), orders)
-    return TiledRows(span, _tile(frames), orders)
+    return TiledRows(span, _tile(frames), orders, step)
+
+
+def _summed(one: Floats, other: Floats, size: int) -> Floats:
+    """The first ``size`` rows of ``one`` times those of ``other``, column by column, summed."""
+    step = SMALL_PRODUCT // len(one) ** 2
+    sums = np.zeros((len(one), len(one)))
+    for at in range(0, one.shape[1], step):
+        sums += one[:, at : at + step] @ other[:, at : at + step].T
+    found: Floats = sums[:size, :size]
+    return found
 
 
 class DirectRows:
@@ -136,76 +149,75 @@ class DirectRows:
 
     def __init__(self, fractions: Floats, orders: Sequence[int]) -> None:
         size = 1 + 2 * len(orders)
-        self.height = tall = padded(size)
+        tall, self.room = padded(size), 0
         self._rows = np.zeros((tall, len(fractions)))
         self._rows[0] = 1.0
         _fill(self._rows[1:], *cos_sin(fractions), orders)
-        gram = np.zeros((tall, tall))
-        step = SMALL_PRODUCT // tall**2
-        for at in range(0, len(fractions), step):
-            part = self._rows[:, at : at + step]
-            gram += part @ part.T
-        self.gram: Floats = gram[:size, :size]
+        self.gram: Floats = _summed(self._rows, self._rows, size)
 
-    def part(self, start: int, stop: int) -> Floats:
-        return self._rows[:, start:stop]
+    def times(self, first: int, frames: int, y: Floats) -> Floats:
+        rows = self._rows[:, first : first + frames]
+        found: Floats = (rows @ y[: rows.shape[1]])[: len(self.gram)]
+        return found
 
 
 class TiledRows:
-    """Angles worked on at the nodes of tiles. A tile in which a turn ends is there twice: by the angle before
-    that and by the angle after it."""
+    """Angles worked on at the nodes of tiles. A tile in which a turn ends is there twice: for the samples
+    before that, and, after the other tiles of its step, for those after it."""
 
-    def __init__(self, span: Span, tile: _Tile, orders: Sequence[int]) -> None:
-        self._tile, self._ends, self._size = tile, span.ends.tolist(), 1 + 2 * len(orders)
-        whole = np.arange(-(-span.samples // tile.frames))
-        self._whole = len(whole)
+    def __init__(self, span: Span, tile: _Tile, orders: Sequence[int], step: int) -> None:
+        self._tile, self._ends, self._step = tile, span.ends.tolist(), step
+        self._size = 1 + 2 * len(orders)
+        whole = np.arange(-(-span.samples // TILES[0]) * TILES[0] // tile.frames)
+        before = np.searchsorted(span.ends, whole * tile.frames, side="right")
+        ends = np.arange(len(span.ends))
         at = np.concatenate((whole, span.ends // tile.frames))
-        turn = np.concatenate(
-            (
-                np.searchsorted(span.ends, whole * tile.frames, side="right"),
-                np.arange(1, 1 + len(span.ends)),
-            )
-        )
-        self._values = np.empty((self._size, len(at), NODES))
+        steps = at * tile.frames // step
+        order = np.argsort(steps, kind="stable")
+        self._firsts = np.searchsorted(steps[order], np.arange(steps.max() + 2)).tolist()
+        turn = np.concatenate((before, 1 + ends))[order]
+        self._values = np.zeros((padded(self._size), len(at), NODES))
         self._values[0] = 1.0
-        angle = 2 * np.pi * span.fractions((at * tile.frames)[:, None] + tile.nodes, turn)
-        _fill(self._values[1:], np.cos(angle), np.sin(angle), orders)
-        self.gram: Floats = self._products(span, at)
-        self._after = (self._values[1:, len(whole) :].reshape(-1, NODES) @ tile.spread).reshape(
-            self._size - 1, -1, tile.frames
-        )
-        self.height = padded(self._size)
-        self._memory: Floats = np.zeros((self.height, 0))
+        fractions = span.fractions((at[order] * tile.frames)[:, None] + tile.nodes, turn)
+        _fill(self._values[1 : self._size], *cos_sin(fractions), orders)
+        self.gram: Floats = self._products(self._used(span, at)[:, order])
+        self._values = self._values.reshape(len(self._values), -1)
+        self.room = tile.frames * int(np.bincount(span.ends // step, minlength=1).max())
+        self._sums: Floats = np.empty((0, 0, 0))
 
-    def part(self, start: int, stop: int) -> Floats:
-        long = self._tile.frames
-        first, last = start // long, -(-stop // long)
-        rows = self._shaped((last - first) * long)
-        values = self._values[1:, first:last].reshape(-1, NODES)
-        np.matmul(values, self._tile.spread, out=rows[1 : self._size].reshape(-1, long))
-        for i in range(bisect_left(self._ends, first * long), bisect_left(self._ends, last * long)):
-            end, at = self._ends[i] - first * long, self._ends[i] % long
-            rows[1 : self._size, end : end + long - at] = self._after[:, i, at:]
-        return rows[:, start - first * long : stop - first * long]
+    def times(self, first: int, frames: int, y: Floats) -> Floats:
+        long, columns = self._tile.frames, y.shape[1]
+        for i in range(bisect_left(self._ends, first), bisect_left(self._ends, first + frames)):
+            end = self._ends[i] - first
+            tile, within = divmod(end, long)
+            y[frames : frames + within] = 0.0
+            y[frames + within : frames + long] = y[end : (tile + 1) * long]
+            y[end : (tile + 1) * long] = 0.0
+            frames += long
+        tiles = frames // long
+        if self._sums.shape != (tiles, NODES, columns):
+            self._sums = np.empty((tiles, NODES, columns))
+        np.matmul(self._tile.spread, y[:frames].reshape(tiles, long, columns), out=self._sums)
+        a, b = self._firsts[first // self._step : first // self._step + 2]
+        found = self._values[:, NODES * a : NODES * b] @ self._sums.reshape(-1, columns)
+        rows: Floats = found[: self._size]
+        return rows
 
-    def _shaped(self, frames: int) -> Floats:
-        """Room for rows that lie close together; ones in the first, zeros below the last."""
-        if self._memory.shape[1] != frames:
-            self._memory = np.zeros((self.height, frames))
-            self._memory[0] = 1.0
-        return self._memory
-
-    def _products(self, span: Span, at: NDArray[np.int64]) -> Floats:
-        """Sums of the rows' products over the frames of each tile that its angle holds for."""
-        long = self._tile.frames
+    def _used(self, span: Span, at: NDArray[np.int64]) -> NDArray[np.int64]:
+        """First and stop frame of each tile that its angle holds for: (2, tiles)."""
+        long, again = self._tile.frames, len(at) - len(span.ends)
         used = np.empty((2, len(at)), np.int64)
-        used[0], used[1] = 0, np.minimum(span.samples - at * long, long)
+        used[0], used[1] = 0, np.clip(span.samples - at * long, 0, long)
         split = span.ends % long
-        used[0, self._whole :] = split
+        used[0, again:] = split
         used[1, span.ends // long] = split
+        return used
+
+    def _products(self, used: NDArray[np.int64]) -> Floats:
+        """Sums of the rows' products over the frames that are ``used`` of each tile."""
         weighted = self._values * (self._tile.sums[used[1]] - self._tile.sums[used[0]])
-        found: Floats = weighted.reshape(self._size, -1) @ self._values.reshape(self._size, -1).T
-        return found
+        tall = len(weighted)
+        return _summed(weighted.reshape(tall, -1), self._values.reshape(tall, -1), self._size)
 
 
 @dataclass(frozen=True, slots=True)

@@ -21,7 +21,7 @@ from daq.signal.vectors import Accumulator, Fit, pieces
 
 SPEED_STEP_S = 0.1
 """Shortest time over which a speed is taken: jitter of the edges is not hunting."""
-WORK_S = 0.1
+WORK_S = 0.5
 """Turns are worked on when so much of them has come, or a block is complete."""
 LEAD_S = 0.1
 """Samples kept while there is no edge: a slow edge is confirmed after it has passed."""

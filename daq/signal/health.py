@@ -193,15 +193,16 @@ class RangeScan:
 
 
 def _extremes(counts: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
-    """Lowest and highest of each column; whole rows of memory at a time where the layout allows."""
+    """Lowest and highest of each column; whole rows of memory at a time where the layout allows. The last
+    rows are looked at twice rather than alone."""
     frames, columns = counts.shape
-    whole = frames // TILE * TILE
-    if not whole or not counts.flags.c_contiguous:
+    if frames < TILE or not counts.flags.c_contiguous:
         return counts.min(axis=0), counts.max(axis=0)
-    tiles, rest = counts[:whole].reshape(-1, TILE * columns), counts[whole:]
-    low = tiles.min(axis=0).reshape(TILE, columns)
-    high = tiles.max(axis=0).reshape(TILE, columns)
-    return np.vstack((low, rest)).min(axis=0), np.vstack((high, rest)).max(axis=0)
+    tiles = counts[: frames // TILE * TILE].reshape(-1, TILE * columns)
+    rest = counts[-TILE:].reshape(-1)
+    low = np.minimum(tiles.min(axis=0), rest).reshape(TILE, columns)
+    high = np.maximum(tiles.max(axis=0), rest).reshape(TILE, columns)
+    return low.min(axis=0), high.max(axis=0)
 
 
 def full_scales(channels: Sequence[ChannelParams]) -> list[tuple[int, int]]:

@@ -21,7 +21,7 @@ from daq.signal.shapes import Complexes, Floats
 
 WIDE = 16
 """Frames taken together where a whole row of memory is cheaper to work on than single frames."""
-PIECE_FRAMES = 16384
+PIECE_FRAMES = 32768
 """Frames worked on at a time: basis and samples stay in the cache; part of what makes results repeatable."""
 
 
@@ -75,7 +75,7 @@ class Accumulator:
     def add(self, fractions: Floats, counts: NDArray[Any]) -> None:
         """Add frames: ``fractions`` (n,) of a turn, ``counts`` (n, probes) integers."""
         if len(fractions):
-            self._add(DirectRows(fractions, self.orders), [counts])
+            self._add(DirectRows(fractions, self.orders), [counts], self._step(counts))
 
     def add_turns(self, turns: Turns, start: int, parts: Sequence[NDArray[Any]]) -> None:
         """Add frames that begin with sample ``start`` of one stretch of good turns, in ``parts`` that follow
@@ -83,11 +83,17 @@ class Accumulator:
         time."""
         frames = sum(len(part) for part in parts)
         if frames:
-            self._add(rows_at_turns(turns, start, start + frames, self.orders), parts)
+            step = self._step(parts[0])
+            self._add(rows_at_turns(turns, start, start + frames, self.orders, step), parts, step)
 
-    def _add(self, rows: Rows, parts: Sequence[NDArray[Any]]) -> None:
+    def _step(self, counts: NDArray[Any]) -> int:
+        """Frames in one product: as many whole tiles as ``SMALL_PRODUCT`` allows."""
+        tiles: int = SMALL_PRODUCT // (padded(len(self._gram)) * counts.shape[1] * TILES[0])
+        return max(1, tiles) * TILES[0]
+
+    def _add(self, rows: Rows, parts: Sequence[NDArray[Any]], step: int) -> None:
         reference = self._begin(parts[0]) if self._reference is None else self._reference
-        cross, square, frames = self._counts.products(rows, parts, reference)
+        cross, square, frames = self._counts.products(rows, parts, reference, step)
         self._gram += rows.gram
         self._cross += cross
         self._square += square
@@ -158,43 +164,34 @@ class _Counts:
         self._tiled: Floats = np.empty(0)
 
     def products(
-        self, rows: Rows, parts: Sequence[NDArray[Any]], reference: Floats
+        self, rows: Rows, parts: Sequence[NDArray[Any]], reference: Floats, step: int
     ) -> tuple[Floats, Floats, int]:
         """``rows`` (m, n) times the counts less ``reference``: (m, probes); each probe's sum of squares; n.
 
         Counts of 16 bits lose the reference afterwards: their sums and sums of squares are whole numbers
         below 2^53, exact in any order. Wider ones lose it before, as whole numbers of float64."""
-        size, columns = len(rows.gram), parts[0].shape[1]
+        columns, frames = parts[0].shape[1], sum(len(part) for part in parts)
         exact = parts[0].dtype.itemsize <= 2
-        step = _frames_at_once(size, columns)
-        cross, squares = np.zeros((rows.height, columns)), np.zeros(WIDE * columns)
-        first = 0
-        for part in parts:
-            for at in range(0, len(part), step):
-                piece = part[at : at + step]
-                y, wide = self._floats(piece)
-                if not exact:
-                    wide -= self._repeated(reference)
-                    y[len(piece) :] = 0.0
-                cross += rows.part(first, first + len(piece)) @ y[: len(piece)]
-                squares += np.einsum("ij,ij->j", wide, wide)
-                first += len(piece)
-        square, cross = squares.reshape(WIDE, columns).sum(axis=0), cross[:size]
+        cross, squares = np.zeros((len(rows.gram), columns)), np.zeros(WIDE * columns)
+        memory = self._shaped(step + rows.room, columns)
+        for at in range(0, frames, step):
+            used = _fill(memory, parts, at, min(step, frames - at))
+            wide = memory[:used].reshape(-1, WIDE * columns)
+            if not exact:
+                wide -= self._repeated(reference)
+                memory[frames - at : used] = 0.0
+            squares += np.einsum("ij,ij->j", wide, wide)
+            cross += rows.times(at, used, memory)
+        square = squares.reshape(WIDE, columns).sum(axis=0)
         if exact:
-            square += reference * (first * reference - 2 * cross[0])
+            square += reference * (frames * reference - 2 * cross[0])
             cross -= np.outer(rows.gram[0], reference)
-        return cross, square, first
+        return cross, square, frames
 
-    def _floats(self, counts: NDArray[Any]) -> tuple[Floats, Floats]:
-        """``counts`` as float64 with zero rows below, and the same memory ``WIDE`` frames in a row."""
-        frames, columns = counts.shape
-        whole = -(-frames // WIDE) * WIDE
-        if self._y.shape[0] < whole or self._y.shape[1] != columns:
-            self._y = np.empty((whole, columns))
-        y = self._y[:whole]
-        y[:frames] = counts
-        y[frames:] = 0.0  # fresh memory may hold signalling NaNs, and arithmetic on them warns
-        return y, y.reshape(-1, WIDE * columns)
+    def _shaped(self, frames: int, columns: int) -> Floats:
+        if len(self._y) < frames or self._y.shape[1] != columns:
+            self._y = np.empty((frames, columns))
+        return self._y
 
     def _repeated(self, reference: Floats) -> Floats:
         if len(self._tiled) != WIDE * len(reference):
@@ -202,11 +199,18 @@ class _Counts:
         return self._tiled
 
 
-def _frames_at_once(size: int, columns: int) -> int:
-    """Frames in one product: an odd number of tiles, because rows that lie multiples of 4 KiB apart push each
-    other out of the cache."""
-    tiles = SMALL_PRODUCT // (padded(size) * columns * TILES[0])
-    return TILES[0] * (max(1, tiles - 1) | 1)
+def _fill(y: Floats, parts: Sequence[NDArray[Any]], first: int, frames: int) -> int:
+    """``frames`` of the ``parts`` from ``first`` on into ``y``, and zero rows below up to whole tiles; how
+    many there are then. Fresh memory may hold signalling NaNs, and arithmetic on them warns."""
+    at = -first
+    for part in parts:
+        a, b = max(0, at), min(frames, at + len(part))
+        if a < b:
+            y[a:b] = part[a - at : b - at]
+        at += len(part)
+    whole = -(-frames // TILES[0]) * TILES[0]
+    y[frames:whole] = 0.0
+    return whole
 
 
 def _white_covariance(inverse: Floats, variance: Floats) -> Floats:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
+from cli.flagged import flag_lines
 from cli.output import (
     ANGLES,
     COLUMNS,
@@ -42,6 +43,8 @@ def print_marked(answer: Json) -> None:
         f"in {reading['duration_s']:.1f} s"
     )
     say(vector_table([v for v in reading["vectors"] if v["order"] == 1], answer.get("show")), PLUS_MINUS)
+    for text in reading.get("steadiness", {}).get("notes", []):
+        warn(f"note: {clean(text)}")
     for text in answer.get("flag_texts", []):
         warn(f"flag: {clean(text)}")
     for text in answer.get("warnings", []):
@@ -81,7 +84,7 @@ def words(flags: list[str], room: int) -> str:
 def print_verdict(verdict: Json, show: Show | None = None) -> None:
     """Measured beside predicted, residual unbalance beside its tolerance, and the verdict."""
     say("", _beside(verdict["channels"], show), "", _residuals(verdict["planes"]), ANGLES)
-    say(*_verdict_lines(verdict))
+    say(*_verdict_lines(verdict), *flag_lines(verdict["flags"]))
     for text in verdict["warnings"]:
         warn(f"warning: {clean(text)}")
 

@@ -27,6 +27,7 @@ from cli.output import (
     table,
     times,
 )
+from cli.traced import minus_slow_roll_option, slow_roll_lines, trace_lines
 
 Json = Mapping[str, Any]
 
@@ -37,21 +38,24 @@ SIDE_BY_SIDE = 2
 @click.command(context_settings={"max_content_width": 80})
 @click.argument("run")
 @stand_option
+@minus_slow_roll_option
 @json_option
-def show(run: str, stand: str | None, *, as_json: bool) -> None:
-    """One run with its readings: 1X, harmonics, overall, residual, gap, XY pairs and flags."""
+def show(run: str, stand: str | None, *, slow: bool, as_json: bool) -> None:
+    """One run with its readings: 1X, harmonics, overall, residual, gap, XY pairs, flags; its traces."""
     from cli.place import manner, reading
     from store import consult
 
     with reading(stand) as history:
-        told = consult.run_json(history, run)
+        told = consult.run_json(history, run, minus_slow_roll=slow)
     if as_json:
         print_json(told)
         return
     how = manner(stand)
     say(*_described(told, how.zone))
+    say(*(slow_roll_lines(told["slow_roll"]) if slow else ()))
     for one in told["readings"]:
         say("", *reading_lines(one, how.show, told["zero"]))
+    say(*trace_lines(told["traces"], how.show, less=slow))
 
 
 def _described(run: Json, zone: tzinfo) -> list[str]:
@@ -80,12 +84,15 @@ def reading_lines(one: Json, show: Show, zero: str = "the stand's zero") -> Iter
     )
     vectors = one["vectors"]
     yield vector_table([v for v in vectors if v["order"] == 1], show)
+    if one.get("less_slow_roll"):
+        yield from ("", "less slow roll:", vector_table(one["less_slow_roll"], show))
     yield PLUS_MINUS
     yield from _above(vectors, show)
     if one["levels"]:
         yield from ("", _levels(one["levels"], show))
     yield from _pairs([o for o in one["orbits"] if o["order"] == 1], show, zero)
-    notes = [*_figures(one, show), *(f"flag: {clean(f)}" for f in describe(_flags(one)))]
+    quiet = (f"note: {clean(text)}" for text in one["steadiness"].get("notes", ()))
+    notes = [*_figures(one, show), *quiet, *(f"flag: {clean(f)}" for f in describe(_flags(one)))]
     yield from ("", *notes) if notes else ()
 
 

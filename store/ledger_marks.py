@@ -21,7 +21,10 @@ from store.tables import run as run_table
 from store.writer import Writer
 
 SPEED_BAND = 0.005
-"""O, O+T, check and trim take a plateau within this fraction of a balancing speed of the job."""
+"""O, O+T, check and trim take a plateau within this fraction of a balancing speed of the job (REUSE (a))."""
+CRITICAL_SHARE, CRITICAL_BAND = 0.1, 0.002
+"""Within the first share of the model's first critical speed they take one within the second only: 1 % of
+speed turns the response there by up to 11 deg (REUSE sec. 3)."""
 
 Choice = Literal["last", "next"]
 
@@ -80,10 +83,10 @@ def label_one(w: Writer, q: Question, reading_id: UUID) -> Mark:
     if run.void is not None:
         raise Refusal(f"Run {run.name} is void ({run.void}).", "Mark a reading of another run.")
     of = recall.job_named(w.c, run.job_number)
-    why_not = unfit(q.label, found.speed_hz, of, q.slow_roll_limit_hz)
+    at = recall.mount_by_id(w.c, run.mount_id)
+    why_not = unfit(q.label, found.speed_hz, of, q.slow_roll_limit_hz, _critical_hz(at))
     if why_not:
         raise Refusal(f"Reading {found.number} of run {run.name} {why_not}.", "Mark one at that speed.")
-    at = recall.mount_by_id(w.c, run.mount_id)
     _ask_person(q, [_relabels(q, run, found), _odd_weights(w, q, of, at, run)])
     _add_mark(w, q, at)
     _put_label(w, q.key, run, found)
@@ -102,7 +105,9 @@ def label_named(w: Writer, q: Question, name: str, number: int | None) -> Mark:
             f"Run {run.name} has {lacks}, so nothing of it can be marked.", "See `revmark run show`."
         )
     if number is None:
-        return label_one(w, q, _newest_fitting(q, run, recall.job_named(w.c, run.job_number)).id)
+        at = None if run.mount_id is None else recall.mount_by_id(w.c, run.mount_id)
+        of = recall.job_named(w.c, run.job_number)
+        return label_one(w, q, _newest_fitting(q, run, of, _critical_hz(at)).id)
     found = next((r for r in run.readings if r.number == number), None)
     if found is None:
         there = ", ".join(str(r.number) for r in run.readings)
@@ -201,7 +206,8 @@ def _refuse_to_choose(w: Writer, q: Question, of: Job, at: Mount) -> None:
         return
     if any(r.label is not None for r in run.readings) or _weight_later(w, at, run):
         return
-    if all(unfit(q.label, r.speed_hz, of, q.slow_roll_limit_hz) for r in run.readings):
+    critical_hz = _critical_hz(at)
+    if all(unfit(q.label, r.speed_hz, of, q.slow_roll_limit_hz, critical_hz) for r in run.readings):
         return
     raise NeedsAnswer(
         f"Run {run.name} has readings and none is marked: {q.label} may mean that run or the next.",
@@ -220,31 +226,53 @@ def _label_last(w: Writer, q: Question, of: Job, at: Mount) -> Mark:
     run = recall_runs.newest_run_of_job(w.c, of.id)
     if run is None or run.mount_id != at.id or not run.readings:
         raise Refusal(f"Job {of.number} has no run with readings in this mount.", "Mark the next: --next.")
-    return label_one(w, q, _newest_fitting(q, run, of).id)
+    return label_one(w, q, _newest_fitting(q, run, of, _critical_hz(at)).id)
 
 
-def _newest_fitting(q: Question, run: Run, of: Job) -> Reading:
-    fitting = [r for r in run.readings if not unfit(q.label, r.speed_hz, of, q.slow_roll_limit_hz)]
+def _newest_fitting(q: Question, run: Run, of: Job, critical_hz: float | None) -> Reading:
+    why_not = [unfit(q.label, r.speed_hz, of, q.slow_roll_limit_hz, critical_hz) for r in run.readings]
+    fitting = [r for r, why in zip(run.readings, why_not, strict=True) if why is None]
     if not fitting:
-        why_not = unfit(q.label, run.readings[-1].speed_hz, of, q.slow_roll_limit_hz)
-        raise Refusal(f"No reading of run {run.name} fits {q.label}: the newest {why_not}.", "Run it again.")
+        raise Refusal(
+            f"No reading of run {run.name} fits {q.label}: the newest {why_not[-1]}.", "Run it again."
+        )
     return fitting[-1]
 
 
 # --- ending ------------------------------------------------------------------------------------------
 
 
-def unfit(label: Label, speed_hz: float, of: Job, slow_roll_limit_hz: float | None) -> str | None:
+def _critical_hz(at: Mount | None) -> float | None:
+    """First critical speed of the machine's model, where it is known."""
+    return None if at is None else at.machine.model.first_critical_hz
+
+
+def unfit(
+    label: Label,
+    speed_hz: float,
+    of: Job,
+    slow_roll_limit_hz: float | None,
+    critical_hz: float | None = None,
+) -> str | None:
     """Why a reading at this speed cannot take the label; None = it can."""
     at = f"was taken at {speed_hz * 60:.1f} r/min"
     if label is Label.SLOW_ROLL:
         if slow_roll_limit_hz is None or speed_hz <= slow_roll_limit_hz:
             return None if slow_roll_limit_hz is not None else f"{at}, and no slow-roll limit is known"
         return f"{at}, above the slow-roll limit of {slow_roll_limit_hz * 60:.1f} r/min"
-    if any(abs(speed_hz - s) <= SPEED_BAND * s for s in of.speeds_hz):
+    bands = [_band(s, critical_hz) for s in of.speeds_hz]
+    if any(abs(speed_hz - s) <= band * s for s, band in zip(of.speeds_hz, bands, strict=True)):
         return None
     speeds = ", ".join(f"{s * 60:.1f}" for s in of.speeds_hz)
-    return f"{at}, not within 0.5 % of the balancing speed ({speeds} r/min)"
+    near = " (0.2 % within 10 % of the first critical speed)" if CRITICAL_BAND in bands else ""
+    return f"{at}, not within 0.5 %{near} of the balancing speed ({speeds} r/min)"
+
+
+def _band(balancing_hz: float, critical_hz: float | None) -> float:
+    """How far from a balancing speed a reading may be, as a fraction of it."""
+    if critical_hz is not None and abs(balancing_hz - critical_hz) <= CRITICAL_SHARE * critical_hz:
+        return CRITICAL_BAND
+    return SPEED_BAND
 
 
 def take_reading(
@@ -255,7 +283,8 @@ def take_reading(
     if row is None or not _is_from_now(w, row, run, first_sample):
         return None
     of = recall.job_by_id(w.c, row.job_id)
-    if unfit(Label(row.label), found.speed_hz, of, slow_roll_limit_hz):
+    at = None if run.mount_id is None else recall.mount_by_id(w.c, run.mount_id)
+    if unfit(Label(row.label), found.speed_hz, of, slow_roll_limit_hz, _critical_hz(at)):
         return None
     _put_label(w, row.key, run, found)
     return _mark(w, row.key)

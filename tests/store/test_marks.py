@@ -69,6 +69,33 @@ def test_speed_that_fits(stand: Stand, label: Label, speed_hz: float, fits: bool
     assert (stand.history.pending_mark() is None) is fits
 
 
+@pytest.mark.parametrize(
+    ("asked_hz", "speed_hz", "fits"),
+    [
+        # REUSE (a): 0.5 %, but 0.2 % within 10 % of a known critical speed, here 61 Hz: 54.9 to 67.1 Hz
+        (57.0, 57.11, True),
+        (57.0, 57.12, False),
+        (67.0, 66.87, True),
+        (67.0, 66.86, False),
+        (54.8, 55.07, True),
+        (67.2, 66.87, True),
+    ],
+)
+def test_near_the_critical_speed_it_must_fit_better(
+    stand: Stand, asked_hz: float, speed_hz: float, fits: bool
+) -> None:
+    stand.mount(speeds_hz=(asked_hz,))
+    stand.ask(Label.O)
+    run = stand.begin()
+    assert (_add(stand, run.id, speed_hz) is not None) is fits
+    stand.end(run.id)
+    if not fits:
+        with pytest.raises(
+            Refusal, match=r"not within 0\.5 % \(0\.2 % within 10 % of the first critical speed\)"
+        ):
+            stand.ask(Label.O, choose="last")
+
+
 def test_slow_roll_without_a_limit(stand: Stand) -> None:
     stand.mount()
     stand.ask(Label.SLOW_ROLL)

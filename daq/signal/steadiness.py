@@ -14,11 +14,12 @@ import numpy as np
 
 from config.steadiness import SteadinessLimits
 from daq.signal.averaging import colour, widening
+from daq.signal.revolutions import REPAIR_LIMIT_PCT
 from daq.signal.shapes import BlockFit, Complexes, Floats
 from daq.signal.slow import swing, told_over_block_se, trend
 
-MISSED_LIMIT_PCT = 0.1
-"""Missed or double pulses allowed in a window, of its turns (REUSE.md (a))."""
+FEWEST_PULSE_SAMPLES = 3.0
+"""A once-per-rev pulse lasts so many samples at least."""
 CHANGE_SE = 3.0
 """A change within so many of its own standard errors is none."""
 PLANE_SE = 4.0
@@ -51,7 +52,11 @@ SENTENCES: Mapping[str, str] = {
     "speed_sd": "the speed varies by {value} % (standard deviation), limit {limit} %",
     "speed_drift": "the speed drifts {value} %/min, limit {limit} %/min",
     "hunting": "the speed hunts by {value} % (standard deviation), limit {limit} %",
-    "missed_pulses": "{value} % of the once-per-rev pulses are missed or double, limit {limit} %",
+    "missed_pulses": "{value} % of the once-per-rev pulses are missed, limit {limit} %",
+    "double_pulses": "{value} % of the once-per-rev pulses are double, limit {limit} %",
+    "edge": "the once-per-rev edge is placed to {value} deg only, phase target {limit} deg: sample faster or "
+    "relax phase_target",
+    "pulse": "the once-per-rev pulse lasts {value} samples of {limit}: sample faster or widen the mark",
     "change": "{channel} still drifts: {value} {unit} 0-pk of {limit} {unit} allowed",
     "swing": "{channel} still swings: {value} {unit} 0-pk of {limit} {unit} allowed",
     "scatter": "{channel} scatters: {value} {unit} 0-pk of {limit} {unit} allowed",
@@ -66,7 +71,7 @@ RELAX: Mapping[str, str] = {"told": "change", "averaged": "amplitude_target", "p
 """Setting of the stand file to relax when the longest window does not do."""
 WAITS = frozenset({"window", "revolutions", "blocks", "hold", "lookback", *RELAX})
 """Figures that time alone may put right."""
-AT_LEAST = frozenset({"window", "revolutions", "blocks", "hold", "lookback"})
+AT_LEAST = frozenset({"window", "revolutions", "blocks", "hold", "lookback", "pulse"})
 """Figures that must reach their limit; the others must stay within it."""
 
 
@@ -316,9 +321,23 @@ def _speed(window: Sequence[BlockFit], blocks: _Blocks, limits: SteadinessLimits
     excused = min(CHANGE_SE * se * to_pct_min, 60 * np.sqrt(12) * limits.speed_sd_pct / blocks.length_s)
     drift_limit = max(limits.speed_drift_pct_per_min, excused)  # a line beyond the second is out by its sd
     yield _at_most("speed_drift", None, abs(slope) * to_pct_min, drift_limit, "%/min")
+    yield from _pulses(window, limits)
+
+
+def _pulses(window: Sequence[BlockFit], limits: SteadinessLimits) -> Iterator[Figure]:
+    """What was repaired of the once-per-rev pulses, and how sharp they are."""
     turns = sum(f.revolutions for f in window)
-    bad = sum(f.missed + f.doubles for f in window)
-    yield _at_most("missed_pulses", None, 100 * bad / turns, MISSED_LIMIT_PCT, "%")
+    for name, bad in (
+        ("missed_pulses", [f.missed for f in window]),
+        ("double_pulses", [f.doubles for f in window]),
+    ):
+        yield _at_most(name, None, 100 * sum(bad) / turns, REPAIR_LIMIT_PCT, "%")
+    edge_deg = max(f.edge_deg for f in window)
+    if edge_deg > 0:
+        yield _at_most("edge", None, edge_deg, limits.phase_target_deg, "deg")
+    lasted = min(f.pulse_samples for f in window)
+    if 0 < lasted < FEWEST_PULSE_SAMPLES:
+        yield _at_least("pulse", lasted, FEWEST_PULSE_SAMPLES, "")
 
 
 def _hold(

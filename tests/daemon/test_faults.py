@@ -96,10 +96,10 @@ def test_samples_before_and_after_a_lost_source_never_share_an_index(mounted: Ba
 
 
 def test_missed_pulses_are_flagged(mounted: Bay) -> None:
-    """One pulse in 1000 may be missed (REUSE.md (a)); with one in ten nothing is steady."""
+    """One pulse in ten may be missed and is filled in; with one in five nothing is steady."""
     bay = mounted
     turning(bay)
-    bay.post("/v1/sim/fault", kind="missed", seconds=20.0, every=10)
+    bay.post("/v1/sim/fault", kind="missed", seconds=20.0, every=5)
     until(lambda: "missed_pulses" in bay.live()["flags"], "the flag")
     until(lambda: "once-per-rev pulses are missed" in bay.live()["still_out"], "the figure that is out")
     assert bay.live()["state"] == "turning"

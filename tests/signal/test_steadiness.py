@@ -133,11 +133,36 @@ def test_hunting_between_and_within_blocks_counts_alike() -> None:
     assert figure(judge(within, SMALL, PROBES), "speed_sd").value == pytest.approx(0.15)
 
 
-def test_missed_pulses_are_out_above_a_thousandth() -> None:
+@pytest.mark.parametrize(
+    ("repaired", "says"),
+    [
+        ({"missed": 12}, "steady"),  # of 120 turns
+        ({"doubles": 12}, "steady"),
+        ({"missed": 13}, "10.8 % of the once-per-rev pulses are missed, limit 10 %"),
+        ({"doubles": 15}, "12.5 % of the once-per-rev pulses are double, limit 10 %"),
+    ],
+)
+def test_pulses_repaired_beyond_a_tenth_are_out(repaired: dict[str, int], says: str) -> None:
     fits = blocks(steady_vectors(8))
-    fits[3] = replace(fits[3], missed=1, doubles=1)
-    verdict = judge(fits, SMALL, PROBES)
-    assert verdict.sentence == "1.67 % of the once-per-rev pulses are missed or double, limit 0.1 %"
+    fits[3] = replace(fits[3], **repaired)
+    assert judge(fits, SMALL, PROBES).sentence == says
+
+
+def test_sharp_edges_and_short_pulses_are_out_with_their_figure() -> None:
+    """METHODS 8.3: half a sample stays. 60 samples a turn: half of 6 degrees."""
+    fits = [replace(f, edge_deg=3.0, pulse_samples=2.0) for f in blocks(steady_vectors(8))]
+    found = judge(fits, SMALL, PROBES)
+    assert figure(found, "edge").sentence == (
+        "the once-per-rev edge is placed to 3 deg only, phase target 0.3 deg: sample faster or "
+        "relax phase_target"
+    )
+    assert figure(found, "pulse").sentence == (
+        "the once-per-rev pulse lasts 2 samples of 3: sample faster or widen the mark"
+    )
+    assert not figure(found, "edge").ok
+    assert not figure(found, "pulse").ok
+    within = [replace(f, edge_deg=0.25, pulse_samples=3.0) for f in fits]
+    assert judge(within, SMALL, PROBES).steady
 
 
 # --- vectors ---------------------------------------------------------------------------------------------

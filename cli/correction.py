@@ -7,6 +7,7 @@ from typing import Any
 
 import click
 
+from cli.flagged import flag_lines
 from cli.output import (
     ANGLES,
     Show,
@@ -174,5 +175,6 @@ def _words(advice: Json) -> Iterator[str]:
             f"not reused: job {clean(refused['job'])} plane {refused['plane']} "
             f"{clean(refused['channel'])}: {clean(refused['why'])}"
         )
+    yield from flag_lines(advice["flags"])
     yield from (f"note: {clean(n)}" for n in advice["notes"])
     yield from (f"warning: {clean(w)}" for w in advice["warnings"])

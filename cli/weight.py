@@ -9,6 +9,7 @@ import click
 
 from cli.asking import post_or_ask
 from cli.client import Client, find, new_key
+from cli.flagged import flag_lines
 from cli.output import (
     ANGLES,
     angle,
@@ -263,4 +264,5 @@ def _advised(advice: Json) -> list[str]:
         f"  force {advice['force_n']:.1f} N at {advice['speed_hz'] * 60:.0f} r/min, "
         f"{share:.1f} % of the static load"
     )
-    return [*lines, *(f"  {clean(text)}" for text in (*advice["why"], *advice["notes"]))]
+    words = (f"  {clean(text)}" for text in (*advice["why"], *advice["notes"]))
+    return [*lines, *words, *(f"  {line}" for line in flag_lines(advice["flags"]))]

@@ -12,14 +12,16 @@ from typing import Any, Literal
 from store.balance.angles import angle_deg, difference_deg
 from store.balance.holes import Piece
 from store.balance.reuse import NotReused
+from store.casework_flags import FlaggedReading
 
 Source = Literal["own", "history"]
 SAME_PLACE_DEG = 0.5
 """A piece fitted at an angle this near to a hole is said to be in it (judgement)."""
 
 
-def vector_dict(value: complex, unit: str) -> dict[str, Any]:
-    return {"amplitude_pk": abs(value), "unit": unit, "lag_deg": angle_deg(value)}
+def vector_dict(value: complex, unit: str, *, lag_known: bool = True) -> dict[str, Any]:
+    """``lag_known`` False: the amplitude is below its noise floor, so no lag is told."""
+    return {"amplitude_pk": abs(value), "unit": unit, "lag_deg": angle_deg(value) if lag_known else None}
 
 
 def unbalance_dict(value: complex) -> dict[str, Any]:
@@ -147,13 +149,16 @@ class ChannelOutlook:
     """Per component, of the next reading about ``predicted``."""
     median_pk: float
     p90_pk: float
+    lag_known: bool = True
+    """False where the base reading is below its noise floor."""
 
     def to_dict(self) -> dict[str, Any]:
         slow = None if self.slow_roll is None else vector_dict(self.slow_roll, self.unit)
+        now_known = self.lag_known or self.now != self.base
         return {
             "channel": self.channel,
-            "base": vector_dict(self.base, self.unit),
-            "now": vector_dict(self.now, self.unit),
+            "base": vector_dict(self.base, self.unit, lag_known=self.lag_known),
+            "now": vector_dict(self.now, self.unit, lag_known=now_known),
             "slow_roll_subtracted": slow,
             "predicted": vector_dict(self.predicted, self.unit),
             "predicted_sd_per_component_pk": self.sd,
@@ -249,6 +254,8 @@ class CorrectionAdvice:
     tolerance_how: str
     warnings: tuple[str, ...]
     notes: tuple[str, ...]
+    flags: tuple[FlaggedReading, ...] = ()
+    """Of the readings it rests on, by channel used."""
 
     def to_dict(self) -> dict[str, Any]:
         return {
@@ -271,6 +278,7 @@ class CorrectionAdvice:
             "tolerance": self.tolerance_how,
             "warnings": list(self.warnings),
             "notes": list(self.notes),
+            "flags": [f.to_dict() for f in self.flags],
         }
 
 
@@ -298,6 +306,8 @@ class TrialAdvice:
     channel: str | None
     why: tuple[str, ...]
     notes: tuple[str, ...] = ()
+    flags: tuple[FlaggedReading, ...] = ()
+    """Of the readings it rests on, by channel used."""
 
     @property
     def unbalance_gmm(self) -> float:
@@ -321,6 +331,7 @@ class TrialAdvice:
             "channel": self.channel,
             "why": list(self.why),
             "notes": list(self.notes),
+            "flags": [f.to_dict() for f in self.flags],
         }
 
 
@@ -365,12 +376,14 @@ class ChannelVerdict:
     innovation: float | None
     """|measured - predicted|^2 / (2 sd^2); above 4.6 99 % of honest runs do not lie."""
     slow_roll: complex | None
+    lag_known: bool = True
+    """False where what was measured is below its noise floor."""
 
     def to_dict(self) -> dict[str, Any]:
         predicted, slow = self.predicted, self.slow_roll
         return {
             "channel": self.channel,
-            "measured": vector_dict(self.measured, self.unit),
+            "measured": vector_dict(self.measured, self.unit, lag_known=self.lag_known),
             "predicted": None if predicted is None else vector_dict(predicted, self.unit),
             "difference_pk": None if predicted is None else abs(self.measured - predicted),
             "difference_sd_per_component_pk": self.sd,
@@ -444,6 +457,8 @@ class Verdict:
     not_reused: tuple[NotReused, ...]
     warnings: tuple[str, ...]
     notes: tuple[str, ...]
+    flags: tuple[FlaggedReading, ...] = ()
+    """Of the readings it rests on, by channel used."""
 
     @property
     def in_tolerance(self) -> bool | None:
@@ -477,4 +492,5 @@ class Verdict:
             "not_reused": [refused_dict(r) for r in self.not_reused],
             "warnings": list(self.warnings),
             "notes": list(self.notes),
+            "flags": [f.to_dict() for f in self.flags],
         }

@@ -26,6 +26,7 @@ from store.casework_answers import (
     PlaneAdvice,
     UsedCoefficient,
 )
+from store.casework_flags import flagged, lag_is_known_of
 from store.casework_scene import (
     Scene,
     Sources,
@@ -254,7 +255,16 @@ def _advice(
         tolerance_how=tolerance.how if tolerance else "",
         warnings=_warnings(made, channels, within=bool(within)),
         notes=(*within, *_notes(made, reused)),
+        flags=flagged(scene.story, _behind(made)),
     )
+
+
+def _behind(made: System) -> dict[str, list[Observation]]:
+    """By channel used, the readings that the answer rests on."""
+    return {
+        c: [*made.scene.fits[c].observations, *([made.slow[c]] if c in made.slow else [])]
+        for c in made.channels
+    }
 
 
 def _refuse_unknown(made: System, since: Unbalances, base_run: str) -> None:
@@ -409,6 +419,7 @@ def _outlooks(made: System, now: list[complex], total: Unbalances) -> tuple[Chan
                 sd=sd,
                 median_pk=amplitude_quantile(0.5, abs(predicted), sd),
                 p90_pk=amplitude_quantile(0.9, abs(predicted), sd),
+                lag_known=lag_is_known_of(made.scene.story, base, channel),
             )
         )
     return tuple(made_up)

@@ -10,7 +10,8 @@ from uuid import UUID
 import numpy as np
 
 from config.errors import Refusal
-from store.balance.fit import Observation, gather
+from store.balance.fit import Observation, gather, standing_of
+from store.balance.orbit import orbits
 from store.balance.reuse import Candidate, ReusePool
 from store.balance.scatter import Scatter
 from store.balance.tolerance import Tolerance, tolerance_of
@@ -23,6 +24,7 @@ from store.casework_answers import (
     VibrationVerdict,
 )
 from store.casework_correction import System, system
+from store.casework_flags import flagged, lag_is_known_of
 from store.casework_scene import (
     Scene,
     Sources,
@@ -90,7 +92,17 @@ def judge(
         not_reused=case.reused.refused if case.reused else (),
         warnings=_warnings(case, channels),
         notes=_notes(case, tolerance),
+        flags=flagged(story, _behind(case)),
     )
+
+
+def _behind(case: _Case) -> dict[str, list[Observation]]:
+    """By channel, the readings before it that prediction and residual rest on."""
+    fits = case.scene.fits
+    return {
+        c: [*(fits[c].observations if c in fits else ()), *([case.slow[c]] if c in case.slow else [])]
+        for c in case.measured
+    }
 
 
 def _find(story: JobStory, reading_id: UUID) -> tuple[Run, Reading]:
@@ -168,7 +180,8 @@ def _channel(case: _Case, channel: str, base: Observation | None) -> ChannelVerd
             sd = math.hypot(sd, _scatter(case, channel).sd(reading.value, reading.own_sd))
     far = None if predicted is None or sd is None else innovation(reading.value, predicted, sd)
     slow = case.slow[channel].value if channel in case.slow else None
-    return ChannelVerdict(channel, reading.unit, reading.value, predicted, sd, far, slow)
+    known = lag_is_known_of(case.scene.story, reading, channel)
+    return ChannelVerdict(channel, reading.unit, reading.value, predicted, sd, far, slow, known)
 
 
 # --- by plane ------------------------------------------------------------------------------------------
@@ -255,10 +268,19 @@ def _slow_share(case: _Case, channel: str) -> float:
 
 
 def _vibration(case: _Case, limit: float | None) -> VibrationVerdict | None:
-    displacement = [(abs(o.value), c) for c, o in case.measured.items() if o.unit == "um"]
-    if limit is None or not displacement:
+    """By the largest vibration there is: of an XY pair the major axis, not the larger probe (METHODS 6.3)."""
+    sizes = [(abs(o.value), c) for c, o in case.measured.items() if o.unit == "um"]
+    standing = standing_of(case.scene.story, case.run)
+    if standing is not None:
+        rotation = standing.mount.rotation
+        sizes += [
+            (o.major_pk, f"{o.pair} (major axis)")
+            for o in orbits(case.reading.vectors, standing.set_up, rotation)
+            if o.order == 1 and o.unit == "um"
+        ]
+    if limit is None or not sizes:
         return None
-    largest, channel = max(displacement)
+    largest, channel = max(sizes)
     return VibrationVerdict(limit, largest, channel)
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 
 from config.errors import Refusal
@@ -9,6 +10,7 @@ from store.balance.angles import angle_deg, hole_angle_deg, nearest_hole, plane_
 from store.balance.cautions import force_caution
 from store.balance.fit import Observation
 from store.balance.holes import DEFAULT_STEP_G, rounded_down
+from store.balance.orbit import CIRCLE_95
 from store.balance.reuse import WEAK_RATIO, Candidate
 from store.balance.slowroll import less
 from store.balance.standing import probe_with_rotation_deg, sensor_with_rotation_deg
@@ -23,6 +25,7 @@ from store.balance.trial import (
 )
 from store.balance.weights import mount_of, pieces_at, pieces_listed, pieces_now, same_weights, unbalances
 from store.casework_answers import ForceAdvice, TrialAdvice, UsedCoefficient
+from store.casework_flags import flagged
 from store.casework_scene import Scene, Sources, history, scene_now, slow_rolls, sources
 from store.records import JobStory, Label, Mount, PieceDraft, Reading, Run, SetUp, WeightPlane
 
@@ -67,6 +70,7 @@ def trial_advice(
         channel=channel,
         why=(_why_mass(limit, load, load_how, top), why),
         notes=_notes(story, mount, where, hole[0] if hole else None),
+        flags=flagged(story, {c: f.observations for c, f in scene.fits.items()}) if scene else (),
     )
 
 
@@ -121,7 +125,10 @@ def _place(
         )
     known = _lag_known(scene, found, plane.number)
     if known is not None:
-        vector, channel = _vector(scene, known.channel, reading), known.channel
+        channel = known.channel
+        vector = _vector(scene, channel, reading)
+        if vector is None:
+            return None, None, _below_floor(channel)
         source = (
             f"runs {', '.join(known.behind)}" if known.source == "own" else f"jobs {', '.join(known.behind)}"
         )
@@ -140,11 +147,18 @@ def _lag_known(scene: Scene, found: Sources, plane: int) -> UsedCoefficient | No
     return max(entries, key=lambda e: abs(e.value), default=None)
 
 
-def _vector(scene: Scene, channel: str, reading: Observation) -> complex:
-    """The vector of a channel at a reading, its slow roll taken off where there is one."""
+def _vector(scene: Scene, channel: str, reading: Observation) -> complex | None:
+    """The vector of a channel at a reading, its slow roll taken off where there is one; None where what is
+    left is below its 95 % noise floor, so that its lag means nothing."""
     at = next((o for o in scene.fits[channel].observations if o.order == reading.order), reading)
     slow = slow_rolls(scene).get(channel)
-    return less(at.value, slow.value if slow else None)
+    value = less(at.value, slow.value if slow else None)
+    floor = CIRCLE_95 * math.hypot(at.own_sd, slow.own_sd if slow else 0.0)
+    return value if abs(value) > floor else None
+
+
+def _below_floor(channel: str) -> str:
+    return f"No place: the 1X of {channel} is below its noise floor, so its lag means nothing. Half the mass."
 
 
 def _place_below_critical(
@@ -156,7 +170,10 @@ def _place_below_critical(
     probe = probe_with_rotation_deg(scene.standing, name) if name else None
     if channel is None or probe is None or not lag_is_known(reading.speed_hz, critical):
         return None, None, _why_no_place(reading.speed_hz, critical)
-    lag = angle_deg(_vector(scene, channel.name, reading))
+    vector = _vector(scene, channel.name, reading)
+    if vector is None:
+        return None, None, _below_floor(channel.name)
+    lag = angle_deg(vector)
     at = place_by_lag_deg(lag, probe, sensor_with_rotation_deg(scene.standing), channel.kind)
     share = reading.speed_hz / (critical or 1.0)
     why = f"at {share:.2f} of the first critical speed (below {BELOW_CRITICAL}) the rotor hardly lags."

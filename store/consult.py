@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Sequence
 from contextlib import suppress
+from dataclasses import replace
 from typing import Any
 from uuid import UUID
 
@@ -15,6 +16,7 @@ from store import asjson, casework, standing_flags
 from store.balance.reuse import Candidate
 from store.casework_answers import CorrectionAdvice, ForceAdvice, TrialAdvice, Verdict
 from store.casework_bode import BodePicture, bode_picture, trace_json
+from store.casework_flags import FlaggedReading, flagged_in_job
 from store.casework_slow_roll import Runout, runout_of
 from store.history import History
 from store.records import JobStory, Label, Machine, Mount, PieceDraft, Reading, Run, Trace, Vector
@@ -37,7 +39,18 @@ def correction(history: History, job: str, *, reuse: bool, **how: Any) -> Correc
     """See ``casework.correction_for``; ``reuse`` takes coefficients of the model's other jobs."""
     story = history.job_story(job)
     pool = candidates(history, story) if reuse else None
-    return casework.correction_for(story, reuse=pool, **how)
+    advice = casework.correction_for(story, reuse=pool, **how)
+    return replace(advice, flags=(*advice.flags, *_flags_behind(history, advice)))
+
+
+def _flags_behind(history: History, advice: CorrectionAdvice) -> Iterator[FlaggedReading]:
+    """Flags of the readings of other jobs that reused coefficients came from."""
+    channels: dict[str, set[str]] = {}
+    for used in advice.coefficients:
+        for job in used.behind if used.source == "history" else ():
+            channels.setdefault(job, set()).add(used.channel)
+    for job, names in sorted(channels.items()):
+        yield from flagged_in_job(history.job_story(job), sorted(names), advice.speed_hz)
 
 
 def trial(history: History, job: str, plane: int, **how: Any) -> TrialAdvice:

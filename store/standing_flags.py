@@ -11,9 +11,10 @@ import math
 from collections.abc import Iterator
 from uuid import UUID
 
-from store.balance.fit import Observation, gather, standing_of
+from store.balance.fit import Observation, standing_of
 from store.balance.orbit import CIRCLE_95, Orbit, orbits
 from store.balance.standing import Standing
+from store.casework_slow_roll import slow_rolls_in
 from store.records import JobStory, Label, Reading, Run, SetUp, Vector
 
 RUNOUT = "mostly_runout"
@@ -73,23 +74,10 @@ def _backward(reading: Reading, standing: Standing) -> Iterator[str]:
 
 
 def _runout(story: JobStory, run: Run, reading: Reading, standing: Standing) -> Iterator[str]:
-    for channel in standing.set_up.channels:
-        vector = reading.vector(channel.name)
-        if channel.kind != "displacement" or vector is None or below_floor(vector):
-            continue
-        slow = _slow_roll(story, run, standing, channel.name)
-        if slow is not None and _alike(vector, slow):
-            yield f"{RUNOUT}:{channel.name}"
-
-
-def _slow_roll(story: JobStory, run: Run, standing: Standing, channel: str) -> Observation | None:
-    """The job's newest slow-roll reading of a channel, in the frame of the run's standing."""
-
-    def wanted(other: Run, reading: Reading) -> bool:
-        return other.origin is run.origin and reading.label is Label.SLOW_ROLL
-
-    taken = gather(story, channel, standing, wanted).taken
-    return taken[-1] if taken else None
+    for channel, slow in slow_rolls_in(story, standing, frozenset({run.origin})).items():
+        vector = reading.vector(channel)
+        if vector is not None and not below_floor(vector) and _alike(vector, slow):
+            yield f"{RUNOUT}:{channel}"
 
 
 def _alike(vector: Vector, slow: Observation) -> bool:

@@ -89,6 +89,15 @@ class Source(Section):
     """The driver's own settings, checked by the driver."""
 
 
+MOST_PULSES = 60
+"""Pulses a turn."""
+SPACING_SUM_DEG = 0.1
+"""The spacing adds to 360 deg within this."""
+SPACING_TOLD_DEG = 1.0
+"""Seen from any other pulse, some angle of the spacing is so much different at least."""
+SpacingDeg = Annotated[float, quantity("angle", "90 deg", 1.0, 359.0), as_text("90 deg")]
+
+
 class OncePerRev(Section):
     """``[once_per_rev]``"""
 
@@ -104,17 +113,60 @@ class OncePerRev(Section):
     """How far the voltage must go back before a next edge counts; "auto" = a part of the pulse height."""
     angle_deg: AngleDeg = Field(alias="angle")
     """Stand angle of the sensor, clockwise from the stand's zero seen from ``angles_seen_from``."""
-    pulses: int = 1
-    """Pulses per turn; only 1 for now."""
+    marked: Literal["long"] | None = None
+    """With several pulses a turn: "long" = the pulse that lasts longest counts."""
+    spacing_deg: tuple[SpacingDeg, ...] | None = Field(
+        default=None, alias="spacing", strict=False, examples=[["90 deg", "85 deg", "95 deg", "90 deg"]]
+    )
+    """With several, unequally spaced pulses a turn: the angle from the one that counts to the next to pass,
+    from that to the one after, and so on; they add to 360 deg."""
+    pulses: int = Field(default=1, validate_default=True)
+    """Pulses per turn; with more than one, ``marked`` or ``spacing`` says which of them counts."""
+
+    @field_validator("spacing_deg")
+    @classmethod
+    def _told_apart(cls, spacing_deg: tuple[float, ...] | None) -> tuple[float, ...] | None:
+        if spacing_deg is None:
+            return None
+        total = sum(spacing_deg)
+        if abs(total - 360) > SPACING_SUM_DEG:
+            raise wrong(f"adds to {total:g} deg: from the pulse that counts round to itself it must be 360.")
+        for k in range(1, len(spacing_deg)):
+            turned = spacing_deg[k:] + spacing_deg[:k]
+            if max(abs(a - b) for a, b in zip(spacing_deg, turned, strict=True)) < SPACING_TOLD_DEG:
+                raise wrong(
+                    f"looks the same from pulse {k + 1} as from pulse 1 (to {SPACING_TOLD_DEG:g} deg), so "
+                    "the one that counts cannot be told; space them more unequally or make one longer."
+                )
+        return spacing_deg
 
     @field_validator("pulses")
     @classmethod
-    def _one_pulse(cls, pulses: int) -> int:
-        if pulses != 1:
+    def _one_counts(cls, pulses: int, info: ValidationInfo) -> int:
+        marked, spacing_deg = info.data.get("marked"), info.data.get("spacing_deg")
+        if not 1 <= pulses <= MOST_PULSES:
+            raise wrong(f"must be from 1 to {MOST_PULSES}, not {pulses}.")
+        if not {"marked", "spacing_deg"} <= info.data.keys():
+            return pulses  # what is wrong there is said there
+        if marked and spacing_deg:
+            raise wrong("goes with marked or with spacing, not with both; leave one out.")
+        if pulses == 1 and (marked or spacing_deg):
+            raise wrong("is 1, so there is nothing to tell apart; write how many pulses pass in a turn.")
+        if pulses > 1 and not (marked or spacing_deg):
             raise wrong(
-                f"must be 1, not {pulses}: so far revmark counts one pulse per turn; use a single mark."
+                f'is {pulses}, but not which of them counts; write marked = "long" or their spacing, or use '
+                "a single mark."
             )
+        if spacing_deg and len(spacing_deg) != pulses:
+            raise wrong(f"is {pulses}, but spacing has {len(spacing_deg)} angles; write one for each pulse.")
         return pulses
+
+    @property
+    def pattern(self) -> dict[str, Any] | None:
+        """How the pulse that counts is told from the others, as the set-up records it; None = one pulse."""
+        if self.spacing_deg:
+            return {"spacing_deg": list(self.spacing_deg)}
+        return {"marked": self.marked} if self.marked else None
 
     @field_validator("hysteresis_v")
     @classmethod

@@ -128,9 +128,10 @@ class Stand(Section):
             "angles_seen_from": self.identity.angles_seen_from,
             "zero": self.identity.zero,
             "channels": [_channel_content(c) for c in self.channels],
-            "pulse": self.pulse.model_dump(
-                include={"name", "input", "edge", "level_v", "angle_deg", "pulses"}
-            ),
+            "pulse": {
+                **self.pulse.model_dump(include={"name", "input", "edge", "level_v", "angle_deg", "pulses"}),
+                "pattern": self.pulse.pattern,
+            },
             "rate_hz": float(rate_hz),
             "driver": self.source.driver,
         }

@@ -30,7 +30,16 @@ def channel_plan(stand: Stand) -> ChannelPlan:
         )
         for c in stand.channels
     )
-    once = PulsePlan(pulse.name, pulse.input, pulse.edge, pulse.level_v, pulse.angle_deg, pulse.pulses)
+    once = PulsePlan(
+        pulse.name,
+        pulse.input,
+        pulse.edge,
+        pulse.level_v,
+        pulse.angle_deg,
+        pulse.pulses,
+        pulse.marked,
+        pulse.spacing_deg or (),
+    )
     return ChannelPlan(once, probes, stand.identity.angles_seen_from)
 
 
@@ -61,6 +70,9 @@ def signal_params(stand: Stand, info: SourceInfo) -> tuple[PulseParams, tuple[Ch
         stand.pulse.level_v,
         stand.pulse.hysteresis_v,
         name=stand.pulse.name,
+        pulses=stand.pulse.pulses,
+        marked=stand.pulse.marked,
+        spacing_deg=stand.pulse.spacing_deg or (),
     )
     channels = tuple(
         ChannelParams(

@@ -18,6 +18,11 @@ class PulsePlan:
     angle_deg: float = 0.0
     """Stand angle, clockwise from the stand's zero seen from ``ChannelPlan.angles_seen_from``."""
     pulses: int = 1
+    """A turn; one of them counts."""
+    marked: Literal["long"] | None = None
+    """"long": the one that lasts longest counts."""
+    spacing_deg: tuple[float, ...] = ()
+    """Angles from the pulse that counts to the next, from that to the one after, ...; () = equal."""
 
 
 @dataclass(frozen=True, slots=True)

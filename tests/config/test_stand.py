@@ -137,8 +137,47 @@ WRONG: list[tuple[str, str, str, str]] = [
     ('level = "-11.5 V"', 'level = "-2000 V"', "once_per_rev.level", "is too small"),
     ('level = "-11.5 V"', "level = -11.5", "once_per_rev.level", "write it in quotes with one"),
     ('level = "-11.5 V"', 'hysteresis = "0 V"', "once_per_rev.hysteresis", "above 0 V"),
-    ('level = "-11.5 V"', "pulses = 2", "once_per_rev.pulses", "must be 1, not 2"),
-    ('level = "-11.5 V"', "pulses = 0", "once_per_rev.pulses", "must be 1, not 0"),
+    ('level = "-11.5 V"', "pulses = 2", "once_per_rev.pulses", "is 2, but not which of them counts"),
+    ('level = "-11.5 V"', "pulses = 0", "once_per_rev.pulses", "must be from 1 to 60, not 0"),
+    ('level = "-11.5 V"', "pulses = 61", "once_per_rev.pulses", "must be from 1 to 60, not 61"),
+    (
+        'level = "-11.5 V"',
+        'marked = "long"',
+        "once_per_rev.pulses",
+        "is 1, so there is nothing to tell apart",
+    ),
+    ('level = "-11.5 V"', 'pulses = 3\nmarked = "wide"', "once_per_rev.marked", "must be 'long', not 'wide'"),
+    (
+        'level = "-11.5 V"',
+        'pulses = 3\nspacing = ["100 deg", "120 deg"]',
+        "once_per_rev.spacing",
+        "adds to 220 deg",
+    ),
+    (
+        'level = "-11.5 V"',
+        'pulses = 4\nspacing = ["90 deg", "90.5 deg", "89.5 deg", "90 deg"]',
+        "once_per_rev.spacing",
+        "looks the same from pulse 3 as from pulse 1 (to 1 deg)",
+    ),
+    (
+        'level = "-11.5 V"',
+        'pulses = 4\nspacing = ["80 deg", "100 deg", "80 deg", "100 deg"]',
+        "once_per_rev.spacing",
+        "looks the same from pulse 3 as from pulse 1",
+    ),
+    (
+        'level = "-11.5 V"',
+        'pulses = 4\nspacing = ["100 deg", "120 deg", "140 deg"]',
+        "once_per_rev.pulses",
+        "is 4, but spacing has 3 angles",
+    ),
+    (
+        'level = "-11.5 V"',
+        'pulses = 3\nmarked = "long"\nspacing = ["100 deg", "120 deg", "140 deg"]',
+        "once_per_rev.pulses",
+        "not with both",
+    ),
+    ('level = "-11.5 V"', "pulses = 2\nspacing = [90, 270]", "once_per_rev.spacing.1", "has no unit"),
     ('level = "-11.5 V"', "pulses = true", "once_per_rev.pulses", "must be a whole number"),
     ('angle = "0 deg"', 'angle = "361 deg"', "once_per_rev.angle", "is out of range"),
     ('angle = "0 deg"', 'angle = "0"', "once_per_rev.angle", "has no unit"),
@@ -456,6 +495,25 @@ def test_the_set_up_content_fits_the_stores_records(tmp_path: Path) -> None:
         "gap_high_v": None,
         "pair": None,
     }
+
+
+@pytest.mark.parametrize(
+    ("keys", "pattern"),
+    [
+        ('pulses = 3\nmarked = "long"', {"marked": "long"}),
+        (
+            'pulses = 4\nspacing = ["90 deg", "88.2 deg", "91.8 deg", "90 deg"]',
+            {"spacing_deg": [90.0, 88.2, 91.8, 90.0]},
+        ),
+        ("pulses = 1", None),
+    ],
+)
+def test_how_the_pulse_that_counts_is_told_is_part_of_the_set_up(
+    tmp_path: Path, keys: str, pattern: dict[str, Any] | None
+) -> None:
+    content = load_stand(write(tmp_path, changed('level = "-11.5 V"', keys))).set_up_content(12800)
+    assert content["pulse"]["pattern"] == pattern
+    assert json.loads(json.dumps(content)) == content
 
 
 def test_how_it_is_shown_is_no_part_of_the_set_up(tmp_path: Path) -> None:

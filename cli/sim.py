@@ -10,7 +10,7 @@ from cli.client import Client, find, new_key
 from cli.output import clean, json_option, print_json, say, stand_option
 from cli.typed import Quantity, Speed
 
-FAULTS = ("dropout", "clip", "missed", "unplug")
+FAULTS = ("dropout", "clip", "missed", "double", "unplug")
 
 
 @click.group(help="Work the simulated rotor, or the next recording. A real rotor is never started from here.")
@@ -63,6 +63,6 @@ def next_(stand: str | None, file: str | None, *, as_json: bool) -> None:
 def fault(
     stand: str | None, kind: str, seconds: float, channel: str | None, every: int | None, *, as_json: bool
 ) -> None:
-    """Inject a fault into the simulated source: dropout, clip, missed or unplug."""
+    """Inject a fault into the simulated source: dropout, clip, missed, double or unplug."""
     body = {"kind": kind, "seconds": seconds, "channel": channel, "every": every}
     _act(stand, "fault", body, as_json=as_json)

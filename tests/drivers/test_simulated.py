@@ -337,6 +337,47 @@ def test_missed_pulses(make, every, missing):
     assert (found > RATE).sum() == pytest.approx(30, abs=1)
 
 
+@pytest.mark.parametrize(("every", "extra"), [(1, 30), (5, 6)])
+def test_double_pulses(make, every, extra):
+    driver = make(**BARE)
+    dwell(driver)
+    driver.act("fault", kind="double", every=every, seconds=1.0)
+    found = crossings(volts(driver, 2.0)[:, 0])
+    assert len(found) == pytest.approx(60 + extra, abs=1)
+    assert (found > RATE).sum() == pytest.approx(30, abs=1)
+
+
+def test_edges_as_sharp_as_asked_for(make):
+    """Samples between the rest and the bottom of the notch, -8 V and -15 V, at each falling edge."""
+    for asked in (0.0, 10.0):
+        driver = make(**BARE, edge_samples=asked)
+        dwell(driver)
+        pulse = volts(driver, 1.0)[:, 0]
+        on_edge = ((pulse < -8.1) & (pulse > -14.9)).sum() / (2 * len(crossings(pulse)))
+        assert on_edge == pytest.approx(asked * 6.8 / 7, abs=0.35)  # a step takes 1e-4 of a turn
+
+
+@pytest.mark.parametrize(
+    ("told", "gaps"),
+    [
+        ({"pulses": 3, "marked": "long"}, [120, 120, 120]),
+        ({"pulses": 4, "spacing_deg": (80.0, 90.0, 100.0, 90.0)}, [80, 90, 100, 90]),
+    ],
+)
+def test_several_pulses_a_turn(make, told, gaps):
+    plan = ChannelPlan(PulsePlan("t", "0", **told), probes())
+    driver = make(plan, **BARE)
+    dwell(driver)
+    pulse = volts(driver, 1.0)[:, 0]
+    found = crossings(pulse)
+    assert len(found) == pytest.approx(30 * len(gaps), abs=1)
+    turn = np.round(np.diff(found) * 360 * 30 / RATE).astype(int).tolist()[:12]
+    assert any(turn == (gaps[k:] + gaps[:k]) * (12 // len(gaps)) for k in range(len(gaps)))
+    if "marked" in told:
+        low = np.add.reduceat((pulse < -11.5).astype(int), found.astype(int))[:-1]
+        assert low.max() / np.median(low) == pytest.approx(1.6, rel=0.1)
+
+
 def test_unplug_and_replug(make, clock):
     driver = make(**BARE)
     dwell(driver)

@@ -14,7 +14,7 @@ Above0 = Annotated[float, Field(gt=0)]
 From0 = Annotated[float, Field(ge=0)]
 Few = Annotated[tuple[float, ...], Field(min_length=1, max_length=64)]
 
-FaultKind = Literal["dropout", "clip", "missed", "unplug"]
+FaultKind = Literal["dropout", "clip", "missed", "double", "unplug"]
 
 
 class RotorOptions(DriverOptions):
@@ -51,7 +51,8 @@ class FaultOptions(DriverOptions):
     channel: str | None = None
     """``clip``: the probe's name; None = the first."""
     every: Annotated[int, Field(ge=1)] = 10
-    """``missed``: one turn in so many has no pulse; 1 = none has."""
+    """``missed``: one turn in so many has no pulse; 1 = none has. ``double``: one has a pulse too many, now
+    here, now there in the turn."""
 
 
 class SimulatedOptions(DriverOptions):
@@ -101,6 +102,8 @@ class SimulatedOptions(DriverOptions):
     pulse_depth_v: Above0 = 7.0
     """Down from rest when the stand file counts falling edges, up when it counts rising ones."""
     pulse_width_deg: Annotated[float, Field(gt=1, lt=180)] = 12.0
+    edge_samples: From0 = 4.0
+    """Samples that the edges of the pulse take: from 2 up a straight line finds the crossing; 0 = a step."""
 
     faults: tuple[FaultOptions, ...] = ()
 

@@ -7,7 +7,7 @@ from collections.abc import Callable, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from daq.drivers.plan import ChannelPlan
+from daq.drivers.plan import ChannelPlan, PulsePlan
 from daq.drivers.sim.faults import Fault
 from daq.drivers.sim.options import SimulatedOptions
 
@@ -16,8 +16,12 @@ Complexes = NDArray[np.complex128]
 
 NODE_STEP = 64
 """Vectors are evaluated every so many samples and joined by straight lines (5 ms at 12.8 kS/s)."""
-EDGE_SAMPLES = 4.0
-"""Length of the notch's edges, so that a straight line between two samples finds the crossing."""
+STEEPEST_TURNS = 1e-4
+"""Half of an edge at least."""
+FAR_SHARE, LONG_TIMES = 0.4, 1.6
+"""A pulse lasts so much of the way to the next at most; the marked one is so many times as long as others."""
+GOLDEN = 0.6180339887498949
+"""Steps of this share of a turn come everywhere."""
 FULL_COUNTS = 32768
 
 
@@ -28,7 +32,7 @@ class Painter:
         self.volts_per_count = options.full_scale_v / FULL_COUNTS
         self._options = options
         self._noise = noise
-        self._pulses = channels.once_per_rev.pulses
+        self._starts, self._widths = _pulses(options, channels.once_per_rev)
         self._depth_v = options.pulse_depth_v * (-1 if channels.once_per_rev.edge == "falling" else 1)
         probes = channels.probes
         self._sense_v = np.array([p.volts_per_unit * p.positive for p in probes])
@@ -44,7 +48,7 @@ class Painter:
     ) -> NDArray[np.int16]:
         """Counts of shape (n, 1 + probes) for ``turns`` and ``hz`` of shape (n,)."""
         volts = np.empty((len(turns), 1 + len(self._gap_v)))
-        volts[:, 0] = self._pulse(turns, hz, [(f, m) for f, m in faults if f.kind == "missed"])
+        volts[:, 0] = self._pulse(turns, hz, [(f, m) for f, m in faults if f.kind in ("missed", "double")])
         self._probes(volts, turns, hz, vectors)
         volts += self._noise.standard_normal(volts.shape) * (self._options.noise_mv / 1e3)
         for fault, mask in faults:
@@ -68,14 +72,36 @@ class Painter:
             re, im = np.interp(at, nodes, v[:, i].real), np.interp(at, nodes, v[:, i].imag)
             volts[:, 1 + i] = gap_v + re * cos + im * sin
 
-    def _pulse(self, turns: Floats, hz: Floats, missed: Sequence[tuple[Fault, NDArray[np.bool_]]]) -> Floats:
+    def _pulse(self, turns: Floats, hz: Floats, faults: Sequence[tuple[Fault, NDArray[np.bool_]]]) -> Floats:
         """The sensor's volts; the named edge passes half depth at each whole turn."""
         options = self._options
-        width = min(options.pulse_width_deg / 360, 0.4 / self._pulses)
-        half = np.clip(EDGE_SAMPLES / 2 * hz / options.rate_hz, 1e-4, width / 2)
-        part = (turns * self._pulses + 0.5) % 1.0 - 0.5
-        past = part / self._pulses
-        inside = np.clip(0.5 + past / (2 * half), 0, 1) - np.clip(0.5 + (past - width) / (2 * half), 0, 1)
-        for fault, mask in missed:
-            inside[mask & (np.rint(turns) % fault.every == 0)] = 0.0
+        half = options.edge_samples / 2 * hz / options.rate_hz
+        inside = np.zeros(len(turns))
+        for start, width in zip(self._starts, self._widths, strict=True):
+            inside += _trapezoid((turns - start + 0.5) % 1.0 - 0.5, width, half)
+        for fault, mask in faults:
+            if fault.kind == "missed":
+                inside[mask & (np.rint(turns) % fault.every == 0)] = 0.0
+            else:
+                turn = np.floor(turns)
+                place = 0.1 + 0.8 * (turn * GOLDEN % 1.0)
+                extra = _trapezoid(turns - turn - place, self._widths[0] / 2, half)
+                inside = np.maximum(inside, np.where(mask & (turn % fault.every == 0), extra, 0.0))
         return options.pulse_rest_v + self._depth_v * inside
+
+
+def _pulses(options: SimulatedOptions, told: PulsePlan) -> tuple[list[float], list[float]]:
+    """Where the pulses of a turn begin and how long they last, in turns; the one that counts first."""
+    gaps = np.array(told.spacing_deg or (360.0 / told.pulses,) * told.pulses) / 360
+    widths = np.minimum(options.pulse_width_deg / 360, FAR_SHARE * gaps)
+    if told.marked == "long":
+        widths[1:] = widths[0] / LONG_TIMES
+    return np.concatenate(([0.0], np.cumsum(gaps)[:-1])).tolist(), widths.tolist()
+
+
+def _trapezoid(past: Floats, width: float, half: Floats) -> Floats:
+    """Height 0 to 1 of a pulse that lasts ``width`` turns, its edges twice ``half``, at ``past`` turns from
+    where its first edge is half up."""
+    half = np.clip(half, STEEPEST_TURNS, width / 2)
+    shape: Floats = np.clip(0.5 + past / (2 * half), 0, 1) - np.clip(0.5 + (past - width) / (2 * half), 0, 1)
+    return shape

@@ -78,6 +78,8 @@ class BlockFitter:
         self._scales = full_scales(self.channels)
         self._segment: int | None = None
         self._next = 0
+        self._fresh: Floats = np.empty(0)
+        """Edges that the rhythm has not seen: it is asked when enough of them have come to work on."""
         self._forget()
 
     def feed(self, counts: NDArray[Any], first_sample: int, segment: int = 0) -> list[BlockFit]:
@@ -91,11 +93,14 @@ class BlockFitter:
             self._forget()
         self._segment, self._next = segment, first_sample + len(counts)
         self._chunks.append((first_sample, counts))
-        edges = self.newest_edges = self.finder.feed(counts[:, 0], first_sample)
+        edges = self.newest_edges = self.finder.feed(np.ascontiguousarray(counts[:, 0]), first_sample)
         self.clock.feed(edges, self._next)
-        self._rhythm.feed(edges)
-        done = list(self._work()) if len(edges) else []
-        if self._rhythm.oldest is not None and not self._patient():
+        done: list[BlockFit] = []
+        if len(edges):
+            self._fresh = np.concatenate((self._fresh, edges))
+            if edges[-1] >= self._worth_it():
+                done = list(self._work())
+        if self._oldest() is not None and not self._patient():
             self._forget()
         self._trim()
         return done
@@ -105,6 +110,7 @@ class BlockFitter:
     def _forget(self) -> None:
         """No edges, no samples, no block begun."""
         self._rhythm = Rhythm()
+        self._fresh = np.empty(0)
         self._at = 0
         self._chunks: list[tuple[int, NDArray[Any]]] = []
         self._missed = self._doubles = 0
@@ -132,13 +138,21 @@ class BlockFitter:
 
     def _held_from(self) -> float:
         """From where samples are kept while no edge is settled."""
-        waiting = (self._next - LEAD_S * self.rate_hz, self._rhythm.oldest, self.finder.undecided)
+        waiting = (self._next - LEAD_S * self.rate_hz, self._oldest(), self.finder.undecided)
         return min(w for w in waiting if w is not None)
+
+    def _oldest(self) -> float | None:
+        """The oldest edge held; None when there is none."""
+        if self._rhythm.oldest is not None:
+            return self._rhythm.oldest
+        return float(self._fresh[0]) if len(self._fresh) else None
 
     # --- work --------------------------------------------------------------------------------------------
 
     def _work(self) -> Iterator[BlockFit]:
         """Work on all turns that are ready: those with an edge known after their end."""
+        self._rhythm.feed(self._fresh)
+        self._fresh = self._fresh[:0]
         edges = self._rhythm.mended.edges
         ready = len(edges) - 2
         if ready <= self._at or edges[ready] < self._worth_it():
@@ -147,7 +161,7 @@ class BlockFitter:
         held = self._chunks[0][0]
         while self._at < ready and turns.first_samples[self._at] < held:
             self._at += 1
-        while self._at < ready:
+        while self._at < ready and edges[ready] >= self._worth_it():
             if self._start is None:
                 self._start = float(edges[self._at])
             due = self._start + self.block_s * self.rate_hz
@@ -163,7 +177,10 @@ class BlockFitter:
 
     def _worth_it(self) -> float:
         """Where the turns that are ready must reach before they are worked on: many small steps cost more."""
-        begun = float(self._rhythm.mended.edges[self._at])
+        edges = self._rhythm.mended.edges
+        if not len(edges):
+            return -np.inf
+        begun = float(edges[self._at])
         due = (begun if self._start is None else self._start) + self.block_s * self.rate_hz
         return min(begun + WORK_S * self.rate_hz, due)
 

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from daq.signal.rhythm import Mended, Rhythm
+from daq.signal.rhythm import EVEN, Mended, Rhythm
 from daq.signal.shapes import Floats, median
 
 REPAIR_LIMIT_PCT = 10.0
@@ -209,7 +209,11 @@ class RevolutionClock:
         """Speed over the newest turn that is neither too long nor too short; None when not turning."""
         if not self.turning:
             return None
-        turns = turns_of(np.array(self._edges))
+        edges = np.array(self._edges)
+        periods = edges[1:] - edges[:-1]
+        if periods.min() >= EVEN * periods.max():  # nothing to repair
+            return float(self.rate_hz / periods[-1])
+        turns = turns_of(edges)
         good = np.flatnonzero(turns.good)
         period = turns.periods[good[-1]] if len(good) else median(turns.periods)
         return float(self.rate_hz / period)

@@ -161,7 +161,10 @@ def _pairs(orbits: Sequence[Json], show: Show, zero: str) -> Iterator[str]:
     headers = ["XY pair, 1X", "major axis", "+-", "tilt", "minor", "forward", "backward", "unit"]
     yield from ("", table(rows, headers, "lrrrrrrl"))
     yield from (_whirl(orbit) for orbit in orbits)
-    yield f"tilt: deg clockwise from {clean(zero)}, seen from {clean(orbits[0]['seen_from'])}"
+    end = clean(orbits[0]["seen_from"])
+    yield f"tilt: deg clockwise from {clean(zero)}, seen from {end}"
+    if any(orbit["rotation"] is None for orbit in orbits):
+        yield f"forward: clockwise seen from {end}, for nothing was mounted"
 
 
 def _tilt(orbit: Json) -> str:
@@ -174,7 +177,7 @@ def _whirl(orbit: Json) -> str:
         return f"{clean(orbit['pair'])}: which way it whirls is not certain"
     seen = f"{orbit['whirl']} seen from {clean(orbit['seen_from'])}"
     if orbit["precession"] is None:
-        return f"{clean(orbit['pair'])}: whirls {seen}; rotation not known, forward = clockwise"
+        return f"{clean(orbit['pair'])}: whirls {seen}; the rotation is not known"
     how = "forward" if orbit["precession"] == "forward" else "BACKWARD"
     return f"{clean(orbit['pair'])}: whirls {how}, {seen}"
 

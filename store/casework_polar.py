@@ -6,14 +6,16 @@ the correction and the verdict turn them.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 from config.errors import Refusal
 from store.balance.angles import same_sense
 from store.balance.fit import BALANCING, Observation, near, standing_of
 from store.balance.reuse import Candidate
+from store.balance.slowroll import less
 from store.balance.standing import Standing
 from store.balance.tolerance import tolerance_of
 from store.balance.weights import mount_of, pieces_at, pieces_now
@@ -29,7 +31,9 @@ from store.casework_scene import (
     sources,
     weight_change,
 )
+from store.casework_slow_roll import no_slow_roll, why_left
 from store.records import JobStory, Label, Reading, Run, Sense, Turn, flags_of
+from store.standing_flags import all_flags
 
 Role = Literal["O", "O+T", "check", "trim", "slow-roll", "predicted"]
 
@@ -43,11 +47,17 @@ class PolarVector:
     reading: int
     """Within its run; 0 = the run gives this plot one reading only."""
     value: complex
-    """0-peak in the channel's base unit, as measured: runout included."""
+    """0-peak in the channel's base unit, as measured (runout included) unless slow roll is taken off."""
     lag_known: bool = True
     """False where the amplitude is below the noise floor."""
-    flagged: bool = False
-    """A health flag of the reading concerns this channel."""
+    flags: tuple[str, ...] = ()
+    """Health flags of the reading that concern this channel."""
+
+    noise_floor: float = 0.0
+
+    @property
+    def flagged(self) -> bool:
+        return bool(self.flags)
 
 
 @dataclass(frozen=True, slots=True)
@@ -123,6 +133,10 @@ class PolarPicture:
     """Of the newest check or trim that could be judged."""
     left: tuple[tuple[str, str], ...]
     """(run, why) of labelled runs that could not be drawn with the others."""
+    slow_roll: tuple[str, int, float] | None = None
+    """(run, reading, Hz) of the slow roll that is taken off; None = vectors as measured."""
+    left_raw: tuple[str, ...] = ()
+    """Why channels are drawn as measured all the same, a sentence each."""
 
     @property
     def angles_grow(self) -> Turn:
@@ -141,13 +155,22 @@ class PolarPicture:
             "runs": list(self.runs),
             "channels": [_channel_dict(c) for c in self.channels],
             "left": [{"run": run, "why": why} for run, why in self.left],
+            "slow_roll_subtracted": None if self.slow_roll is None else self.slow_roll[0],
+            "left_raw": list(self.left_raw),
         }
 
 
 def _vector_dict(vector: PolarVector, unit: str) -> dict[str, Any]:
     told = vector_dict(vector.value, unit)
     lag = told["lag_deg"] if vector.lag_known else None
-    return {"role": vector.role, "run": vector.run, **told, "lag_deg": lag}
+    return {
+        "role": vector.role,
+        "run": vector.run,
+        "reading": vector.reading,
+        **told,
+        "lag_deg": lag,
+        "flags": list(vector.flags),
+    }
 
 
 def _channel_dict(channel: PolarChannel) -> dict[str, Any]:
@@ -184,12 +207,13 @@ def polar_picture(
     reuse: Iterable[Candidate] | None = None,
     channels: tuple[str, ...] = (),
     speed_hz: float | None = None,
+    minus_slow_roll: bool = False,
 ) -> PolarPicture:
     """The picture of a job at a speed (None = the job's first balancing speed).
 
     ``verdicts`` are those of its check and trim readings; ``reuse`` serves the circle of a single-plane job
-    that no verdict covers yet. ``channels`` empty = all. Raises Refusal: no O run at the speed, or no such
-    channel.
+    that no verdict covers yet. ``channels`` empty = all. ``minus_slow_roll`` draws shaft vectors less the
+    slow roll. Raises Refusal: no O run at the speed, no such channel, or no slow roll to take off.
     """
     speed = speed_hz or default_speed_hz(story)
     scene = _scene(story, speed)
@@ -198,7 +222,8 @@ def polar_picture(
     slow = slow_rolls(scene)
     circles = _circles(scene, told[-1] if told else None, slow, reuse)
     shown = tuple(_channel(scene, name, told, slow.get(name), circles.get(name)) for name in names)
-    return _picture(scene, shown, told[-1] if told else None)
+    whole = _picture(scene, shown, told[-1] if told else None)
+    return _without(scene, whole, slow) if minus_slow_roll else whole
 
 
 def _scene(story: JobStory, speed_hz: float) -> Scene:
@@ -264,8 +289,10 @@ def _measured(scene: Scene, o: Observation, channel: str, number: int) -> PolarV
     reading = _reading_of(scene.story, o)
     vector = reading.vector(channel)
     known = vector is not None and abs(vector.value) > vector.noise_floor
-    flagged = bool(flags_of(reading.flags, channel))
-    return PolarVector(o.label.value, o.run_name, number, o.value, known, flagged)
+    run = scene.story.runs[o.run_index]
+    flags = flags_of(all_flags(scene.story, run, reading), channel)
+    floor = vector.noise_floor if vector is not None else 0.0
+    return PolarVector(o.label.value, o.run_name, number, o.value, known, flags, floor)
 
 
 def _predicted(verdicts: list[Verdict], o: Observation, channel: str) -> complex | None:
@@ -314,6 +341,41 @@ def _circles(
         )
         for c in used
     }
+
+
+def _without(scene: Scene, whole: PolarPicture, slow: Mapping[str, Observation]) -> PolarPicture:
+    """The picture less slow roll: shaft vectors and circles moved by it, the slow roll itself left out."""
+    if not any(c.channel in slow for c in whole.channels):
+        raise no_slow_roll(scene.story, scene.standing)
+    of = next(iter(slow.values()))
+    left = (c for c in scene.standing.set_up.channels if any(d.channel == c.name for d in whole.channels))
+    return replace(
+        whole,
+        channels=tuple(_less(scene, c, slow.get(c.channel)) for c in whole.channels),
+        slow_roll=(of.run_name, of.reading_number, of.speed_hz),
+        left_raw=tuple(why_left(c) for c in left if c.name not in slow),
+    )
+
+
+def _less(scene: Scene, channel: PolarChannel, slow: Observation | None) -> PolarChannel:
+    if slow is None:
+        return channel
+    own = _reading_of(scene.story, slow).vector(channel.channel)
+    floor = own.noise_floor if own is not None else 0.0
+
+    def moved(v: PolarVector) -> PolarVector:
+        value = less(v.value, slow.value)
+        return replace(v, value=value, lag_known=abs(value) > math.hypot(v.noise_floor, floor))
+
+    circle = channel.circle
+    return replace(
+        channel,
+        vectors=tuple(moved(v) for v in channel.vectors if v.role != "slow-roll"),
+        effects=tuple(
+            replace(e, start=less(e.start, slow.value), end=less(e.end, slow.value)) for e in channel.effects
+        ),
+        circle=None if circle is None else replace(circle, centre=less(circle.centre, slow.value)),
+    )
 
 
 # --- the rest ------------------------------------------------------------------------------------------

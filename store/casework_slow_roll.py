@@ -80,23 +80,25 @@ def runout_of(story: JobStory | None, run: Run) -> Runout:
         raise Refusal(f"The mount or the set-up of run {run.name} is not in the store.", "Check the store.")
     found = slow_rolls_in(story, standing, frozenset({run.origin}))
     if not found:
-        raise _none(story, standing)
+        raise no_slow_roll(story, standing)
     slow = {c: _slow_roll(story, c, o) for c, o in found.items()}
-    left = tuple(_why_left(c) for c in standing.set_up.channels if c.name not in slow)
+    left = tuple(why_left(c) for c in standing.set_up.channels if c.name not in slow)
     return Runout(slow, left)
 
 
-def _none(story: JobStory, standing: Standing) -> Refusal:
+def no_slow_roll(story: JobStory, standing: Standing) -> Refusal:
+    """Why no slow roll can be taken off."""
     channels = standing.set_up.channels
     if all(c.kind != "displacement" for c in channels):
         return Refusal(
-            f"Nothing can be taken off: {' '.join(_why_left(c) for c in channels)}",
+            f"Nothing can be taken off: {' '.join(why_left(c) for c in channels)}",
             "Do without --minus-slow-roll.",
         )
     return Refusal(f"Job {story.job.number} has no slow-roll reading of a displacement probe.", MARK_ONE)
 
 
-def _why_left(channel: ChannelSetUp) -> str:
+def why_left(channel: ChannelSetUp) -> str:
+    """Why a channel stays as measured where slow roll is taken off others, a sentence."""
     if channel.kind == "displacement":
         return f"{channel.name} has no slow-roll vector in that reading: left as measured."
     return why_raw(channel.name, channel.kind)

@@ -9,8 +9,10 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from functools import lru_cache
+from io import BytesIO
 from typing import Any
 
+import matplotlib
 from matplotlib.figure import Figure
 from matplotlib.font_manager import FontProperties, findfont, get_font
 from matplotlib.patches import Circle, Polygon
@@ -146,3 +148,13 @@ class Page:
         self._axes.add_patch(
             Polygon(corners, facecolor=colour, edgecolor="none", zorder=style.get("zorder", 3))
         )
+
+
+def encode(page: Page, form: str, dpi: int) -> bytes:
+    """The page as ``png``, ``svg`` or ``pdf``."""
+    held = BytesIO()
+    with matplotlib.rc_context():
+        matplotlib.rcdefaults()
+        dates: dict[str, None] = {"svg": {"Date": None}, "pdf": {"CreationDate": None}}.get(form, {})
+        page.figure.savefig(held, format=form, dpi=dpi, metadata=dates)
+    return held.getvalue()

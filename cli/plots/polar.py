@@ -10,7 +10,6 @@ import math
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import tzinfo
-from io import BytesIO
 from typing import Any
 
 import matplotlib
@@ -436,16 +435,3 @@ def _circle_sample(page: Page) -> Callable[[Point, Point], None]:
     return lambda start, end: page.line(
         [start, end], TOLERANCE, linewidth=1.3, linestyle=(0, (7, 2, 1.5, 2)), zorder=3
     )
-
-
-# --- to a file -----------------------------------------------------------------------------------------
-
-
-def encode(drawing: Drawing, form: str, dpi: int) -> bytes:
-    """The page as ``png``, ``svg`` or ``pdf``."""
-    held = BytesIO()
-    with matplotlib.rc_context():
-        matplotlib.rcdefaults()
-        dates: dict[str, None] = {"svg": {"Date": None}, "pdf": {"CreationDate": None}}.get(form, {})
-        drawing.page.figure.savefig(held, format=form, dpi=dpi, metadata=dates)
-    return held.getvalue()

@@ -9,8 +9,10 @@ from dataclasses import dataclass
 from datetime import UTC, datetime, tzinfo
 from itertools import groupby
 
+from cli.marked import words
 from cli.output import angle, clean
 from cli.plots.page import shorten, text_width, wrap
+from store.balance.slowroll import NEAR_CRITICAL
 from store.casework_answers import FittedPiece, PlaneVerdict, Verdict
 from store.casework_polar import (
     FittedAt,
@@ -21,6 +23,8 @@ from store.casework_polar import (
 )
 
 LONG_NAME = 12
+FLAGS = 24
+"""Most letters of a vector's flags in the key."""
 NO_BREAK = "\N{NO-BREAK SPACE}"
 
 
@@ -76,7 +80,18 @@ def zeros(picture: PolarPicture) -> str:
         f"Lag counts from the {picture.edge} edge of the once-per-rev pulse, "
         "weight angles from the rotor mark. "
         f"Once-per-rev sensor at {picture.sensor_deg:g} deg, clockwise seen from {clean(picture.seen_from)} "
-        f"(0 deg: {clean(picture.zero)}). Vectors as measured, runout included."
+        f"(0 deg: {clean(picture.zero)}). {runout(picture)}"
+    )
+
+
+def runout(picture: PolarPicture) -> str:
+    if picture.slow_roll is None:
+        return "Vectors as measured, runout included."
+    run, number, hz = picture.slow_roll
+    left = "".join(f" {clean(text)}" for text in picture.left_raw)
+    bow = NEAR_CRITICAL[0].upper() + NEAR_CRITICAL[1:]
+    return (
+        f"Vectors less the slow roll of run {clean(run)} reading {number}, {hz * 60:.0f} r/min.{left} {bow}."
     )
 
 
@@ -107,7 +122,8 @@ def role_label(vector: PolarVector, others: Sequence[PolarVector]) -> str:
 def key_label(vector: PolarVector) -> str:
     number = f" reading {vector.reading}" if vector.reading else ""
     role = "predicted for" if vector.role == "predicted" else vector.role
-    flag = " (flagged)" if vector.flagged and vector.role != "predicted" else ""
+    flagged = vector.flagged and vector.role != "predicted"
+    flag = f" (flagged: {words(list(vector.flags), FLAGS)})" if flagged else ""
     return f"{role} {clean(vector.run)}{number}{flag}"
 
 

@@ -304,6 +304,10 @@ class EdgeFinder:
             at = stop
         return np.concatenate(found) if found else np.empty(0)
 
+    def finish(self) -> Floats:
+        """Edges that what has come so far decides when nothing follows: with several pulses a turn."""
+        return self._teller.finish() if self._teller is not None else np.empty(0)
+
     def _scan(self, piece: NDArray[Any], first_index: int) -> Floats:
         trigger = self.trigger
         y = piece.astype(np.float64) * self._sign
@@ -461,7 +465,8 @@ def edges_in(
     for first, last, at in _held(column, params, rate_hz, start, stop, trigger):
         finder.hold(at)
         found.append(finder.feed(column[first:last], first))
-    return finder, np.concatenate(found) if found else np.empty(0)
+    found.append(finder.finish())
+    return finder, np.concatenate(found)
 
 
 def _held(
@@ -510,4 +515,4 @@ def find_edges(pulse: NDArray[Any], params: PulseParams, trigger: Trigger | None
         return np.empty(0)
     finder = EdgeFinder(params, 1.0, trigger)
     pieces = [finder.feed(pulse[i : i + PIECE], i) for i in range(0, len(pulse), PIECE)]
-    return np.concatenate(pieces) if pieces else np.empty(0)
+    return np.concatenate((*pieces, finder.finish()))

@@ -25,6 +25,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "mark": ("cli.mark:command", "Label a run's reading: O, O+T, check, trim, slow-roll."),
     "mount": ("cli.mount:command", "Say which machine stands on the stand, and how."),
     "plot": ("cli.plot:group", "Pictures of a job."),
+    "replay": ("cli.replay:command", "Measure a recording, without a daemon and a store."),
     "run": ("cli.run:group", "Runs and their readings."),
     "serve": ("cli.serve:command", "Run the daemon of a stand, in the foreground."),
     "sim": ("cli.sim:group", "Work the simulated rotor, or the next recording."),

@@ -20,17 +20,19 @@ from daq.board import Board, LiveVector, StandState
 from daq.clock import Clock
 from daq.drivers.base import SourceInfo
 from daq.plateau import PlateauWatch, Window
-from daq.pump import Notice, Pump
+from daq.ports import Incoming, Keeper, Reader
+from daq.pump import Notice
 from daq.raw_window import RawWindow
-from daq.readings import ReadingMaker
-from daq.recorder import Recorder
-from daq.ring import Chunk, RingReader
+from daq.readings import ReadingMaker, longest_window_s
+from daq.ring import Chunk
 from daq.runs import Began, Ended, Hop, RunWatch
 from daq.setup import signal_params
 from daq.signal.blocks import BlockFitter
-from daq.signal.health import ac_rms, still_vibrating
-from daq.signal.shapes import BlockFit
-from daq.signal.steadiness import CHANGE_SE, Probe, Verdict, block_seconds, judge, needed
+from daq.signal.health import LOST_PULSES, MARK_UNTOLD, ac_rms, still_vibrating
+from daq.signal.shapes import CIRCLE_95, BlockFit
+from daq.signal.steadiness import CHANGE_SE, Probe, block_seconds
+from daq.signal.watcher import SteadyWatch
+from daq.traces import Tracer
 from store.records import Origin, RunDraft
 
 HOP_S = 0.1
@@ -50,7 +52,7 @@ log = logging.getLogger("revmark.analysis")
 class Analysis:
     """One thread's state. ``want_fresh`` alone may be called by another thread."""
 
-    def __init__(self, stand: Stand, pump: Pump, recorder: Recorder, board: Board, clock: Clock) -> None:
+    def __init__(self, stand: Stand, pump: Incoming, recorder: Keeper, board: Board, clock: Clock) -> None:
         self._stand = stand
         self._pump = pump
         self._recorder = recorder
@@ -60,11 +62,11 @@ class Analysis:
         self._plateaus = PlateauWatch(self._limits.speed_band_pct)
         self._watch = RunWatch(stand.run.minimum_speed_hz, stand.run.minimum_duration_s)
         self._raw = RawWindow()
-        self._fits: list[BlockFit] = []
-        self._verdict: Verdict | None = None
         self._origin_sample = 0
         """Added to the source's sample index, so that indices grow over re-openings of the source."""
         self._segment = -1
+        self._run_from = 0
+        """Sample from which the open run counts."""
         self._taken = 0
         self._speed_hz: float | None = None
 
@@ -105,9 +107,19 @@ class Analysis:
             longest_turn_s=max(LONGEST_TURN_S, LONGEST_TURN_S / self._stand.run.minimum_speed_hz),
         )
         self._maker = ReadingMaker(self._stand, info, pulse, channels, self._clock)
+        self._tracer = Tracer(
+            channels,
+            tuple(c.unit for c in self._stand.channels),
+            info.rate_hz,
+            minimum_hz=self._stand.run.minimum_speed_hz,
+        )
         self._hop = max(1, int(HOP_S * info.rate_hz))
         self._units = tuple(c.units_per_count for c in channels)
-        self._probes = tuple(Probe(c.name, c.kind) for c in self._stand.channels)
+        self._steady = SteadyWatch(
+            self._limits,
+            [Probe(c.name, c.kind) for c in self._stand.channels],
+            longest_s=longest_window_s(self._stand, info),
+        )
         self._floors = np.array([self._limits.change_floor(c.kind) for c in self._stand.channels])
         self._past: deque[NDArray[np.float64]] = deque(maxlen=max(1, round(QUIET_RMS_S / HOP_S)))
         self._turning_rms = np.zeros(len(channels))
@@ -115,19 +127,19 @@ class Analysis:
         self._origin = Origin(info.origin)
         self._board.post(state=self._watch.state)
 
-    def _step(self, reader: RingReader) -> bool:
+    def _step(self, reader: Reader) -> bool:
         """Take one chunk or notice; False when there was neither."""
         if self._heed_until(reader.position):
             return True
         room = self._room(reader)
-        chunk = reader.read(room, READ_S, fewest=room)
+        chunk = reader.read(room, READ_S, fewest=room, whole=True)  # so that no pace changes a result
         if chunk is None:
             return bool(self._pump.notices)
         self._heed_until(reader.position - len(chunk.counts))  # what came while we waited for the chunk
         self._feed(replace(chunk, first_sample=chunk.first_sample + self._origin_sample))
         return True
 
-    def _room(self, reader: RingReader) -> int:
+    def _room(self, reader: Reader) -> int:
         """Frames to read at most: a hop, but not past the next notice."""
         if not self._pump.notices:
             return self._hop
@@ -165,6 +177,7 @@ class Analysis:
         self._taken = chunk.next_sample
         self._raw.add(chunk)
         fits = self._fitter.feed(chunk.counts, chunk.first_sample, chunk.segment)
+        self._tracer.feed(chunk, self._fitter.newest_edges)
         vibrating = self._vibrating(chunk)
         moved = self._watch.step(self._hop_of(chunk, vibrating=vibrating), chunk.segment)
         if isinstance(moved, Began):
@@ -173,6 +186,8 @@ class Analysis:
             self._take_fit(fit)
         if isinstance(moved, Ended):
             self._close(moved)
+        elif self._watch.open:
+            self._keep_traces()
         self._trim()
         self._post()
 
@@ -189,10 +204,10 @@ class Analysis:
 
     def _forget(self) -> None:
         """Nothing is computed across a gap."""
+        self._tracer.restart()
         self._raw.clear()
-        self._fits.clear()
         self._past.clear()
-        self._verdict = None
+        self._steady.forget()
 
     def _hop_of(self, chunk: Chunk, *, vibrating: bool) -> Hop:
         turning = self._fitter.clock
@@ -209,15 +224,17 @@ class Analysis:
     def _vibrating(self, chunk: Chunk) -> bool:
         self._past.append(ac_rms(chunk.counts[::QUIET_STEP, 1:]) * np.abs(self._units))
         now = np.sqrt(np.mean(np.square(np.stack(self._past)), axis=0))
-        if self._watch.state is StandState.TURNING and self._fits:
-            self._turning_rms = self._fits[-1].ac_rms
-        residual = self._fits[-1].residual_sd if self._fits else np.zeros(len(now))
+        newest = self._steady.newest
+        if self._watch.state is StandState.TURNING and newest is not None:
+            self._turning_rms = newest.ac_rms
+        residual = np.zeros(len(now)) if newest is None else newest.residual_sd
         return still_vibrating(now, self._turning_rms, residual)
 
     # --- runs and readings ---------------------------------------------------------------------------
 
     def _open(self, began: Began) -> None:
         self._plateaus.new_run()
+        self._run_from = began.sample
         mono_s = self._raw.mono_of(began.sample)
         draft = RunDraft(
             self._recorder.set_up_id,
@@ -232,23 +249,29 @@ class Analysis:
 
     def _close(self, ended: Ended | None, *, uses_up_mark: bool = True) -> None:
         if ended is not None:
+            self._tracer.stop()
+            self._keep_traces()
             now_us, why = self._clock.now_us(), self._why_no_reading()
             self._recorder.ended(ended, now_us, why, uses_up_mark=uses_up_mark)
+
+    def _keep_traces(self) -> None:
+        """Hand over the run-ups and coast-downs of the run that have ended."""
+        for trace in self._tracer.take(self._run_from, lambda s: self._maker.utc_of(self._raw.mono_of(s))):
+            self._recorder.trace(trace)
 
     def _why_no_reading(self) -> str:
         if self._plateaus.speeds_hz:
             speeds = ", ".join(f"{s * 60:.0f}" for s in dict.fromkeys(self._plateaus.speeds_hz))
             return f"it was steady only at {speeds} r/min."
-        return self._verdict.sentence if self._verdict is not None else "it was too short to be judged."
+        verdict = self._steady.verdict
+        return verdict.sentence if verdict is not None else "it was too short to be judged."
 
     def _take_fit(self, fit: BlockFit) -> None:
-        self._fits.append(fit)
-        self._verdict = judge(self._fits, self._limits, self._probes)
-        if not (self._watch.open and self._verdict.steady):
+        verdict, used = self._steady.take(fit), self._steady.used
+        if not (self._watch.open and verdict.steady):
             return
-        used = [f for f in self._fits if f.first_sample >= self._verdict.first_sample]
         if self._plateaus.takes(self._window(used)):
-            self._recorder.reading(self._maker.make(self._raw, used, self._verdict))
+            self._recorder.reading(self._maker.make(self._raw, used, verdict))
 
     def _window(self, used: Sequence[BlockFit]) -> Window:
         turns = np.array([f.revolutions for f in used], np.float64)
@@ -263,17 +286,17 @@ class Analysis:
 
     def _trim(self) -> None:
         """Let go of what no window will ask for again; samples before the first block wait for one."""
-        del self._fits[: needed(self._fits, self._limits)]
-        if self._fits and self._verdict is not None:
-            self._raw.trim(self._verdict.first_sample - self._maker.margin(self._fits[0]))
+        used = self._steady.used
+        if used:
+            self._raw.trim(used[0].first_sample - self._maker.margin(used[0]))
         else:
             blocks = round(IDLE_BLOCKS * block_seconds(self._limits) / HOP_S)
             self._raw.trim(self._taken - self._hop * (IDLE_HOPS + blocks))
 
     def _post(self) -> None:
         turning = self._watch.state is StandState.TURNING
-        newest = self._fits[-1] if self._fits and turning else None
-        verdict = self._verdict if self._watch.open else None
+        newest = self._steady.newest if turning else None
+        verdict = self._steady.verdict if self._watch.open else None
         self._board.post(
             state=self._watch.state,
             detail="",
@@ -282,12 +305,22 @@ class Analysis:
             segment=self._segment,
             steady=bool(verdict and verdict.steady),
             still_out="" if verdict is None or verdict.steady else verdict.sentence,
+            steadiness_notes=() if verdict is None else verdict.notes,
             vectors=() if newest is None else self._live(newest),
-            flags=() if newest is None else newest.flags,
+            flags=self._live_flags(newest),
         )
 
     def _live(self, fit: BlockFit) -> tuple[LiveVector, ...]:
+        size, lag = np.abs(fit.vectors), np.degrees(np.angle(fit.vectors)) % 360
+        known = size > CIRCLE_95 * fit.se
         return tuple(
-            LiveVector(c.name, c.unit, float(abs(v)), float(np.degrees(np.angle(v)) % 360))
-            for c, v in zip(self._stand.channels, fit.vectors, strict=True)
+            LiveVector(c.name, c.unit, float(size[i]), float(lag[i]) if known[i] else None, float(fit.se[i]))
+            for i, c in enumerate(self._stand.channels)
         )
+
+    def _live_flags(self, newest: BlockFit | None) -> tuple[str, ...]:
+        if self._watch.state is StandState.PULSES_LOST:
+            return (LOST_PULSES,)
+        if self._fitter.finder.mark_lost:
+            return (MARK_UNTOLD,)
+        return () if newest is None else newest.flags

@@ -164,6 +164,13 @@ class Ring:
             reader.wake()
         self._room.set()
 
+    def ends_before(self, position: int, frames: int) -> bool:
+        """Whether a border between segments lies within the ``frames`` after ``position``, or the ring is
+        closed: then no more will come to make them whole."""
+        with self._lock:
+            begun = any(position < span.start < position + frames for span in self._spans)
+            return begun or self._closed or position < self._begin - self.capacity_frames
+
     # --- for the readers ---------------------------------------------------------------------------------
 
     def _take(self, position: int, max_frames: int) -> tuple[Chunk | None, int]:
@@ -271,11 +278,14 @@ class RingReader:
         """Frames written and not yet taken by this reader (those already overwritten included)."""
         return self._ring.written - self._position
 
-    def read(self, max_frames: int, timeout_s: float, *, fewest: int = 1) -> Chunk | None:
+    def read(
+        self, max_frames: int, timeout_s: float, *, fewest: int = 1, whole: bool = False
+    ) -> Chunk | None:
         """Up to ``max_frames`` frames of one segment, as soon as ``fewest`` wait or the time is over.
 
-        Fewer come at a border between segments, and at the end of the time. None when nothing came within
-        ``timeout_s`` seconds, or when the ring is closed and empty."""
+        Fewer come at a border between segments, when the ring is closed, and at the end of the time unless
+        they must be ``whole``. None when nothing came within ``timeout_s`` seconds, or when the ring is
+        closed and empty."""
         if max_frames < 1:
             raise ValueError(f"max_frames must be at least 1, not {max_frames}")
         clock, self.fewest = self._ring._clock, fewest
@@ -287,7 +297,8 @@ class RingReader:
                 if chunk is not None or self._ring.closed:
                     return chunk
             if not clock.wait(self._news, max(0.0, deadline - clock.monotonic())):
-                return self._take(max_frames)
+                held = whole and self.backlog < fewest and not self._ring.ends_before(self._position, fewest)
+                return None if held else self._take(max_frames)
 
     def skip(self) -> int:
         """Give up all that waits; the number of frames given up. They are not counted as lost."""

@@ -13,6 +13,8 @@ from daq.board import StandState
 
 SHORTEST_QUIET_S = 1.0
 """Pulses have not ended before this time without one, however fast it turned."""
+ROUNDING_S = 1e-6
+"""Steps that fill a time exactly do so wherever they stand in the source."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,7 +73,7 @@ class RunWatch:
             return None
         if self._slow_since_s is None:
             self._slow_since_s = hop.t_s
-        if hop.t_s - self._slow_since_s >= self._minimum_s:
+        if hop.t_s - self._slow_since_s >= self._minimum_s - ROUNDING_S:
             return self._end("complete", "below minimum speed")
         return None
 
@@ -104,7 +106,7 @@ class RunWatch:
             return None
         if self._since is None:
             self._since = (hop.t_s, hop.sample, segment)
-        if hop.t_s - self._since[0] < self._minimum_s:
+        if hop.t_s - self._since[0] < self._minimum_s - ROUNDING_S:
             return None
         self.open, self._slow_since_s = True, None
         t_s, sample, first_segment = self._since

@@ -96,6 +96,7 @@ def test_a_corrected_sensitivity(measured: Bay) -> None:
             (found,) = history.coefficients(plane=plane, channel=channel)
             assert found.value == pytest.approx(by * value, rel=1e-12)
     assert measured.run("run", "recompute", "--job", "0142", "--json").json["count"]["apart"] == 0
+    check_angle_and_sense(measured)
 
 
 def test_the_same_request_is_one_act(measured: Bay) -> None:
@@ -109,9 +110,10 @@ def test_the_same_request_is_one_act(measured: Bay) -> None:
         assert {r.version for r in history.run("0142/1").readings} == {2}
     with pytest.raises(Refusal, match="was measured with that set-up already"):
         measured.post("/v1/run/revise", **{k: v for k, v in body.items() if k != "key"})
+    check_refusals(measured)
 
 
-def test_what_is_refused(measured: Bay) -> None:
+def check_refusals(measured: Bay) -> None:
     def said(*words: str, code: int = 1) -> str:
         done = measured.run("run", "revise", *words, "--why", "a test")
         no_traceback(done)
@@ -135,7 +137,7 @@ def test_what_is_refused(measured: Bay) -> None:
     assert f"Run {run} is still open." in said(run, "--angle", "probe 1=45 deg")
 
 
-def test_angle_and_sense(measured: Bay) -> None:
+def check_angle_and_sense(measured: Bay) -> None:
     """An angle changes no vector, a sense of positive turns it by half a turn."""
     with measured.history() as history:
         before = vectors(history.run("0142/1"))

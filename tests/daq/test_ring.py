@@ -298,3 +298,31 @@ def test_no_torn_read_under_threads() -> None:
         assert got + lost == total - total % size
         assert got > 0
     assert sum(lost for _, lost in seen) > 0
+
+
+def test_a_whole_read_waits_for_the_rest() -> None:
+    """4 of 6 frames are held back until the rest comes, and the 2 after them are held back again."""
+    ring = a_ring()
+    reader = ring.reader("analysis")
+    ring.write(block(0, 4))
+    assert reader.read(6, 0.1, fewest=6, whole=True) is None
+    assert reader.backlog == 4
+    ring.write(block(4, 4))
+    chunk = reader.read(6, 0.1, fewest=6, whole=True)
+    assert chunk is not None
+    assert chunk.counts[:, 0].tolist() == [0, 1, 2, 3, 4, 5]
+    assert reader.read(6, 0.1, fewest=6, whole=True) is None
+
+
+@pytest.mark.parametrize("close", [True, False], ids=["closed", "new segment"])
+def test_a_whole_read_does_not_wait_for_what_will_never_come(close: bool) -> None:
+    ring = a_ring()
+    reader = ring.reader("analysis")
+    ring.write(block(0, 4))
+    if close:
+        ring.close()
+    else:
+        ring.write(block(4, 1, segment=1))
+    chunk = reader.read(6, 0.1, fewest=6, whole=True)
+    assert chunk is not None
+    assert (len(chunk.counts), chunk.segment) == (4, 0)

@@ -226,10 +226,16 @@ def pieces(start: int, stop: int) -> list[tuple[int, int]]:
     return list(pairwise([*range(start, stop, PIECE_FRAMES), stop]))
 
 
-def turn_pieces(turns: Turns) -> Iterator[tuple[Floats, int, int]]:
-    """All samples in good turns, piece by piece: (fractions of a turn, first sample, stop sample)."""
+def stretch_pieces(turns: Turns) -> Iterator[tuple[Turns, int, int]]:
+    """All samples in good turns, piece by piece: (the stretch they lie in, first sample, stop sample)."""
     bounds = turns.first_samples
     for first, stop in turns.stretches():
         stretch = turns.part(first, stop)
         for a, b in pieces(int(bounds[first]), int(bounds[stop])):
-            yield turn_fractions(stretch, a, b), a, b
+            yield stretch, a, b
+
+
+def turn_pieces(turns: Turns) -> Iterator[tuple[Floats, int, int]]:
+    """The same with the samples' fractions of a turn."""
+    for stretch, a, b in stretch_pieces(turns):
+        yield turn_fractions(stretch, a, b), a, b

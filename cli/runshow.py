@@ -198,5 +198,5 @@ def _figures(one: Json, show: Show) -> Iterator[str]:
         if line["channel"] in units:
             vector = {"channel": line["channel"], "unit": units[line["channel"]], "lag_deg": None}
             size, unit, _ = shown({**vector, "amplitude_pk": line["amplitude"]}, show)
-            where = f"{clean(line['channel'])}: a line at {line['order']:.4g}X"
-            yield f"{where}, {size} {unit}, is taken out of the vectors"
+            where = f"{clean(line['channel'])}: vibration at {line['order']:.4g}X"
+            yield f"{where}, {size} {unit}, which is no order"

@@ -173,7 +173,7 @@ def reading_flags(story: JobStory | None, run: Run, reading: Reading) -> tuple[s
     """The flags that the records add to a reading's own; of a run of no job only what needs none."""
     if story is not None:
         return standing_flags.derived_flags(story, run, reading)
-    return tuple(f for f in standing_flags.floor_flags(reading) if f not in reading.flags)
+    return tuple(standing_flags.floor_flags(reading))
 
 
 def live_flags(history: History, vectors: Sequence[Vector], flags: Sequence[str]) -> tuple[str, ...]:

@@ -55,8 +55,9 @@ def flags_by_reading(story: JobStory) -> dict[UUID, tuple[str, ...]]:
 def floor_flags(reading: Reading) -> Iterator[str]:
     """1X below its own noise floor: needs no more than the reading."""
     for vector in reading.vectors:
-        if vector.order == 1 and below_floor(vector):
-            yield f"{BELOW_FLOOR}:{vector.channel}"
+        flag = f"{BELOW_FLOOR}:{vector.channel}"
+        if vector.order == 1 and below_floor(vector) and flag not in reading.flags:
+            yield flag
 
 
 def orbits_of(story: JobStory | None, run: Run, reading: Reading, set_up: SetUp) -> tuple[Orbit, ...]:

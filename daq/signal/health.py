@@ -18,6 +18,10 @@ CLIP_RUN = 3
 CLIP_SHARE = 0.001
 """Closer than this to the end of the scale, as a share of the scale."""
 FEWEST_PULSE_SAMPLES = 3
+MARGINAL = 2.0
+"""Dead bands, or four standard deviations of noise, that the level is clear of either side."""
+WIDE_SHARE = 0.5
+"""A pulse that fills more of the turn was begun at the wrong edge."""
 NO_END = (-(1 << 40), 1 << 40)
 """The scale of a channel that may reach its end."""
 TILE = 32
@@ -44,6 +48,7 @@ GAP = "gap_voltage"
 WEAK = "weak_1x"
 LEVEL = "level_marginal"
 WRONG_EDGE = "wrong_edge"
+MARK_UNTOLD = "mark_untold"
 NOISE = "noisy"
 HUNTING = "speed_hunting"
 BELOW_FLOOR = "below_floor"
@@ -63,6 +68,8 @@ SENTENCES: dict[str, str] = {
     "or doubled.",
     WRONG_EDGE: "The once-per-rev pulse fills more than half a turn, so the other edge may be meant; it "
     "shifts every phase by the width of the mark.",
+    MARK_UNTOLD: "Of several once-per-rev pulses it could not always be told which one counts; compare "
+    "pulses, marked and spacing of the stand file with the rotor.",
     FEW_SAMPLES: "The pulse or the turn has too few samples: the sampling rate is too low for this speed.",
     SAMPLES_LOST: "Samples were lost inside the window; nothing is computed across the gap.",
     CLIPPED: "{channel} is clipped: its voltage reaches the end of the input's range.",
@@ -73,7 +80,8 @@ SENTENCES: dict[str, str] = {
     NOISE: "{channel} is noisy: what is left beside the harmonics is above its noise_limit.",
     HUNTING: "The speed hunts inside the window, so amplitude and phase are averages over changing speeds.",
     BELOW_FLOOR: "{channel}: its 1X is below its own 95 % noise floor, so it has no phase.",
-    SUBSYNC: "{channel} shows strong vibration below running speed; it is taken out of the vector.",
+    SUBSYNC: "{channel} shows strong vibration below running speed; where it lasts all the window "
+    "it is taken out of the vector.",
     MAINS: "{channel}: mains hum lies too near 1X or a harmonic to be told apart in this window; the +- is "
     "wider for it.",
     NEIGHBOUR: "{channel}: a neighbour machine turns too near 1X or a harmonic to be told apart in this "
@@ -98,6 +106,7 @@ SHORT: dict[str, str] = {
     WEAK: "weak",
     LEVEL: "level",
     WRONG_EDGE: "edge?",
+    MARK_UNTOLD: "mark?",
     NOISE: "noisy",
     HUNTING: "hunting",
     BELOW_FLOOR: "floor",
@@ -242,6 +251,16 @@ def pulse_flags(missed: int, doubles: int, pulse_samples: float, samples_per_tur
     """Flags of the once-per-rev channel; ``pulse_samples`` is how long the pulse lasts, the shorter side."""
     few = pulse_samples < FEWEST_PULSE_SAMPLES or samples_per_turn < 2 * FEWEST_PULSE_SAMPLES
     tests = ((MISSED, missed > 0), (DOUBLES, doubles > 0), (FEW_SAMPLES, few))
+    return [code for code, bad in tests if bad]
+
+
+def mark_flags(margin: float, pulse_share: float, untold: int) -> list[str]:
+    """More of them: ``margin``, ``pulse_share`` and ``untold`` of a :class:`daq.signal.edges.EdgeFinder`."""
+    tests = (
+        (LEVEL, margin < MARGINAL),
+        (WRONG_EDGE, pulse_share > WIDE_SHARE),
+        (MARK_UNTOLD, untold > 0),
+    )
     return [code for code, bad in tests if bad]
 
 

@@ -150,7 +150,7 @@ def test_what_was_repaired_and_found_on_the_way() -> None:
     assert "once-per-rev: 2 pulses missed, 1 came twice; repaired" in lines
     assert "once-per-rev edge: 0.1 deg of each lag's +- stays however long it averages" in lines
     assert "speed: standard deviation 0.050 %" in lines  # 0.0125 of 25 Hz
-    assert "probe 1: a line at 0.43X, 6.200 um pp, is taken out of the vectors" in lines
+    assert "probe 1: vibration at 0.43X, 6.200 um pp, which is no order" in lines
 
 
 def test_a_reading_of_an_older_store_tells_what_it_has() -> None:

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.signal.edges import EdgeFinder, unresolved_deg
-from daq.signal.health import RangeScan, full_scales, probe_flags, pulse_flags
+from daq.signal.health import RangeScan, full_scales, mark_flags, probe_flags, pulse_flags
 from daq.signal.revolutions import MEDIAN_TURNS, RevolutionClock, Turns, turns_between
 from daq.signal.rhythm import Rhythm
 from daq.signal.shapes import BlockFit, ChannelParams, Floats, PulseParams, check_columns, median
@@ -68,6 +68,7 @@ class BlockFitter:
         self.finder = EdgeFinder(pulse, rate_hz)
         self.clock = RevolutionClock(rate_hz, longest_turn_s=longest_turn_s)
         """Speed and turning, as of the newest sample fed."""
+        self._untold = 0
         self.newest_edges: Floats = np.empty(0)
         """Those found with the counts fed last, source sample positions."""
         self._orders = tuple(orders)
@@ -231,10 +232,14 @@ class BlockFitter:
         vectors = fit.value(1) * self._scale * np.exp(2j * np.pi * speed_hz * self._skew_s)
         gap_v = fit.offset * self._volts
         residual_sd = fit.residual_sd * size
-        flags = pulse_flags(
-            self._missed, self._doubles, self.finder.pulse_length, self.rate_hz / speed_hz
-        ) + probe_flags(
-            self.channels, self._scan, gap_v, np.abs(vectors), residual_sd, self._min_signal_to_noise
+        finder, untold = self.finder, self.finder.untold - self._untold
+        self._untold = finder.untold
+        flags = (
+            pulse_flags(self._missed, self._doubles, finder.pulse_length, self.rate_hz / speed_hz)
+            + mark_flags(finder.margin, finder.pulse_share, untold)
+            + probe_flags(
+                self.channels, self._scan, gap_v, np.abs(vectors), residual_sd, self._min_signal_to_noise
+            )
         )
         return BlockFit(
             segment=self._segment or 0,

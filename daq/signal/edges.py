@@ -36,8 +36,6 @@ DRIFT_SHARE = 0.02
 """A window's level is followed when it moves by more than this share of the pulse."""
 MARGIN_NOISE = 4.0
 """Standard deviations of noise that the level should be clear of either side, if the dead band is less."""
-MARGINAL = 2.0
-"""Below this :attr:`EdgeFinder.margin` the level is marginal."""
 PIECE = 1 << 16
 """Samples of a window looked at together."""
 RING_SHARE = 0.05
@@ -262,14 +260,18 @@ class EdgeFinder:
 
     @property
     def margin(self) -> float:
-        """``Trigger.margin``: 5 for an automatic level and little noise, marginal below ``MARGINAL``; 0
-        without pulses."""
+        """``Trigger.margin``: 5 when automatic and free of noise, marginal below 2; 0 without pulses."""
         return self.trigger.margin if self.trigger is not None else 0.0
 
     @property
     def untold(self) -> int:
-        """Pulses of which nobody could tell whether they are the one that counts."""
+        """Pulses so far of which nobody could tell whether they are the one that counts."""
         return self._teller.untold if self._teller is not None else 0
+
+    @property
+    def mark_lost(self) -> bool:
+        """True while pulses come, and none can be told to be the one that counts."""
+        return self._teller is not None and self._teller.in_a_row > 2 * self._pulses
 
     @property
     def undecided(self) -> float | None:

@@ -48,8 +48,8 @@ class MarkTeller:
         self._spacing = Spacing(params.spacing_deg, self._window) if params.spacing_deg else None
         narrowest = min(params.spacing_deg or (360.0 / turn,)) / 360
         self._near = min(RHYTHM_SHARE * narrowest, RHYTHM_TURNS)
-        self.untold = 0
-        """Pulses of which it could not tell which they are."""
+        self.untold = self.in_a_row = 0
+        """Pulses of which it could not tell which they are, in all and since the last that counts."""
         self.restart()
 
     def restart(self) -> None:
@@ -112,6 +112,7 @@ class MarkTeller:
     def _marks(self, edges: Floats, places: Places) -> Floats:
         """Those of ``edges`` that count, told by the turn before where ``places`` do not tell."""
         if not (places == UNTOLD).any():
+            self.in_a_row = 0
             marks: Floats = edges[places == 0]
             self._newest = [*self._newest, *marks[-3:].tolist()][-3:]
             return marks
@@ -119,6 +120,7 @@ class MarkTeller:
         for edge, place in zip(edges.tolist(), places.tolist(), strict=True):
             if place == 0 or (place == UNTOLD and self._in_rhythm(edge)):
                 found.append(edge)
+                self.in_a_row = 0
                 self._newest = [*self._newest, edge][-3:]
         return np.array(found, np.float64)
 
@@ -129,6 +131,7 @@ class MarkTeller:
         turns = (edge - known[-1]) / turn if known else np.nan
         if not turns < 2.5:  # nan: nothing is known of the turn
             self.untold += 1
+            self.in_a_row += 1
             return False
         return bool(turns > 0.5 and abs(turns - round(turns)) <= self._near)
 

@@ -25,7 +25,8 @@ LEVEL_MEMORY_S = 4.0
 LEVEL_TAIL = 0.004
 """Share of the samples beyond the low and the high level: half of the shortest pulse, 0.8 % of a turn."""
 BAND_SHARE = 0.1
-"""Half of the dead band as a share of the pulse: 20 % in all (REUSE.md section 6)."""
+"""Half of the dead band as a share of the pulse: 20 % in all (REUSE.md section 6); half of the way to the
+nearer side for a given level that is closer to it."""
 NOISE_RATIO = 12.0
 """A pulse lower than this many standard deviations of the noise is no pulse; noise alone shows 5.3."""
 HISTOGRAM_BINS = 4096
@@ -67,10 +68,12 @@ class Trigger:
 
     @property
     def margin(self) -> float:
-        """How many dead bands (or four sd of the noise, if more) the nearer side is away from the level."""
+        """How far the nearer side is away from the level, over the dead band's half width, a tenth of the pulse
+        or four sd of the noise, whichever is most."""
         half = self.height / 2
         near = half if np.isnan(self.low) else half - abs(self.level - self.low - half)
-        return float(near / max(abs(self.band), MARGIN_NOISE * self.noise, 1e-9))
+        unit = max(abs(self.band), BAND_SHARE * self.height, MARGIN_NOISE * self.noise, 1e-9)
+        return float(near / unit)
 
 
 class PulseHistogram:
@@ -123,7 +126,11 @@ def choose_trigger(params: PulseParams, low: float, high: float, noise: float) -
     if height * abs(scale) < params.min_height_v or height < NOISE_RATIO * noise:
         return None
     level = (low + high) / 2 if params.level_v is None else params.level_v / scale
-    band = BAND_SHARE * height if params.hysteresis_v is None else abs(params.hysteresis_v / scale)
+    if params.hysteresis_v is None:
+        near = min(level - low, high - level)
+        band = min(BAND_SHARE * height, near / 2) if near > 0 else BAND_SHARE * height
+    else:
+        band = abs(params.hysteresis_v / scale)
     return Trigger(level, band, height, low, noise)
 
 

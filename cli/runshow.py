@@ -39,14 +39,15 @@ SIDE_BY_SIDE = 2
 @click.argument("run")
 @stand_option
 @minus_slow_roll_option
+@click.option("--version", type=click.IntRange(min=1), help="As it was measured then: 1 = live.")
 @json_option
-def show(run: str, stand: str | None, *, slow: bool, as_json: bool) -> None:
+def show(run: str, stand: str | None, version: int | None, *, slow: bool, as_json: bool) -> None:
     """One run with its readings: 1X, harmonics, overall, residual, gap, XY pairs, flags; its traces."""
     from cli.place import manner, reading
     from store import consult
 
     with reading(stand) as history:
-        told = consult.run_json(history, run, minus_slow_roll=slow)
+        told = consult.run_json(history, run, minus_slow_roll=slow, version=version)
     if as_json:
         print_json(told)
         return
@@ -77,11 +78,11 @@ def reading_lines(one: Json, show: Show, zero: str = "the stand's zero") -> Iter
     from daq.signal.health import describe
 
     label = f" {one['label']}" if one["label"] else ""
-    again = f", version {one['version']} of its arithmetic" if one.get("version", 1) > 1 else ""
     yield (
         f"reading {one['number']}{label}: {one['speed_rpm']:.1f} r/min, {one['revolutions']} revolutions "
-        f"in {one['duration_s']:.1f} s{again}"
+        f"in {one['duration_s']:.1f} s"
     )
+    yield from _versions(one)
     vectors = one["vectors"]
     yield vector_table([v for v in vectors if v["order"] == 1], show)
     if one.get("less_slow_roll"):
@@ -94,6 +95,17 @@ def reading_lines(one: Json, show: Show, zero: str = "the stand's zero") -> Iter
     quiet = (f"note: {clean(text)}" for text in one["steadiness"].get("notes", ()))
     notes = [*_figures(one, show), *quiet, *(f"flag: {clean(f)}" for f in describe(_flags(one)))]
     yield from ("", *notes) if notes else ()
+
+
+def _versions(one: Json) -> Iterator[str]:
+    """Which version of a reading's arithmetic it is, where there are several."""
+    told = {v["version"]: v for v in one.get("versions", ())}
+    newest = max(told, default=1)
+    if newest > 1:
+        why = told.get(one["version"], {"why": "live"})["why"]
+        yield f"version {one['version']} of {newest} of its arithmetic: {clean(why)}"
+    if "scaled" in one["figures"]:
+        yield f"scaled, not measured from its samples: {clean(one['figures']['scaled']['why'])}"
 
 
 def _flags(one: Json) -> list[str]:

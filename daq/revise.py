@@ -14,6 +14,7 @@ from config.errors import Refusal
 from daq.build import this_build
 from daq.recompute import Again, again
 from daq.signal.setting import Setting
+from store.again import scale_factors
 from store.history import History
 from store.records import ChannelSetUp, Level, Measured, Reading, SetUp, SetUpDraft, Vector
 
@@ -109,7 +110,7 @@ def scaled(stored: Measured, then: SetUp, now: SetUpDraft, why: str, why_scaled:
     """A measurement with another scale: amplitudes go with old sensitivity over new, times the senses.
 
     Gap voltages stay, and so do the flags, none of which hangs on a scale but the noise limit."""
-    by = _factors(then, now)
+    by = scale_factors(then, now)
     build = this_build()
     return replace(
         stored,
@@ -126,11 +127,6 @@ def scaled(stored: Measured, then: SetUp, now: SetUpDraft, why: str, why_scaled:
         at_us=0,
         who="",
     )
-
-
-def _factors(then: SetUp, now: SetUpDraft) -> dict[str, float]:
-    by = {c.name: c.volts_per_unit * c.positive for c in then.channels}
-    return {name: by[name] / (v["volts_per_unit"] * v["positive"]) for name, v in _scales(then, now).items()}
 
 
 def _scaled_vector(v: Vector, by: float) -> Vector:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from uuid import UUID
 
-from store.records import Measured, SetUpDraft
+from store.records import Measured, SetUp, SetUpDraft
 
 
 @dataclass(frozen=True, slots=True)
@@ -29,3 +29,15 @@ class RunAgain:
     set_up: SetUpDraft | None
     """The corrected one; None = as it was."""
     readings: tuple[Remeasured, ...]
+
+
+def scale_factors(then: SetUp | SetUpDraft, now: SetUp | SetUpDraft) -> dict[str, float]:
+    """By channel whose scale differs, what a length measured ``then`` is multiplied with to be as ``now``
+    would have it: old sensitivity over new, times the senses of positive."""
+    new = {c.name: c for c in now.channels}
+    both = [(c, new[c.name]) for c in then.channels if c.name in new]
+    return {
+        a.name: a.volts_per_unit / b.volts_per_unit * (a.positive * b.positive)
+        for a, b in both
+        if (a.volts_per_unit, a.positive) != (b.volts_per_unit, b.positive)
+    }

@@ -21,6 +21,7 @@ from store.records import (
     Level,
     Machine,
     Mark,
+    Measured,
     Mount,
     Reading,
     Run,
@@ -86,6 +87,19 @@ def level_json(level: Level) -> Json:
         "residual_rms": level.residual_sd,
         "ac_rms": level.ac_rms,
         "gap_v": level.gap_v,
+    }
+
+
+def version_json(made: Measured) -> Json:
+    """How a version of a reading's arithmetic came about."""
+    return {
+        "version": made.version,
+        "why": made.why,
+        "who": made.who,
+        "at_utc": utc(made.at_us),
+        "software": made.software,
+        "numpy": made.numpy,
+        "processor": made.processor,
     }
 
 

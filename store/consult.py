@@ -120,9 +120,13 @@ def weight_entries(history: History, mounts: Iterable[Mount]) -> list[Json]:
     return found
 
 
-def run_json(history: History, name: str, *, minus_slow_roll: bool = False) -> Json:
-    """A run with all that its probes told, as ``revmark run show --json`` prints it."""
-    return run_told(history, history.run(name), minus_slow_roll=minus_slow_roll)
+def run_json(
+    history: History, name: str, *, minus_slow_roll: bool = False, version: int | None = None
+) -> Json:
+    """A run with all that its probes told, as ``revmark run show --json`` prints it; of the arithmetic that
+    stands, or of an earlier version."""
+    run = history.run(name) if version is None else history.run_as(name, version)
+    return run_told(history, run, minus_slow_roll=minus_slow_roll)
 
 
 def run_told(history: History, run: Run, *, minus_slow_roll: bool = False) -> Json:
@@ -130,11 +134,14 @@ def run_told(history: History, run: Run, *, minus_slow_roll: bool = False) -> Js
 
     Raises Refusal when a slow roll is to be taken off and there is none."""
     story = _story_of(history, run)
-    set_up, traces = history.set_up(run.set_up_id), history.traces(run.id)
+    set_up, traces = history.set_up(run.set_up_id), history.traces(run.id, run.set_up_id)
     flags = {r.id: reading_flags(story, run, r) for r in run.readings}
     seen = {r.id: standing_flags.orbits_of(story, run, r, set_up) for r in run.readings}
     runout = runout_of(story, run) if minus_slow_roll else None
-    told = {**asjson.run_json(run, flags, seen), "zero": set_up.zero}
+    told = {**asjson.run_json(run, flags, seen), "zero": set_up.zero, "set_up_revision": set_up.revision}
+    versions = history.versions(run.id)
+    for reading, one in zip(run.readings, told["readings"], strict=True):
+        one["versions"] = [asjson.version_json(m) for m in versions.get(reading.id, ())]
     if runout is not None:
         told["slow_roll"] = _runout_json(run, runout, traces)
         for reading, one in zip(run.readings, told["readings"], strict=True):

@@ -157,11 +157,17 @@ class History:
         with self._read() as c:
             run = recall_runs.run_named(c, name)
             found = [recall_measured.reading_as(c, r.id, version) for r in run.readings]
+            set_up_id = recall_measured.set_up_then(c, run.id, version) or run.set_up_id
         readings = tuple(r for r in found if r is not None)
         if not readings:
             newest = max((r.version for r in run.readings), default=0)
             raise Refusal(f"Run {run.name} has no version {version} of any reading.", f"Newest: {newest}.")
-        return replace(run, readings=readings)
+        return replace(run, readings=readings, set_up_id=set_up_id)
+
+    def versions(self, run_id: UUID) -> Mapping[UUID, tuple[Measured, ...]]:
+        """By reading, how each version came about (without vectors and levels), oldest first."""
+        with self._read() as c:
+            return recall_measured.heads(c, run_id)
 
     def measured(self, reading_id: UUID) -> tuple[Measured, ...]:
         """How a reading was measured, oldest version first; empty when that was not recorded."""
@@ -183,10 +189,10 @@ class History:
         with self._read() as c:
             return recall_runs.reading_raw(c, reading_id)
 
-    def traces(self, run_id: UUID) -> tuple[Trace, ...]:
+    def traces(self, run_id: UUID, set_up_id: UUID | None = None) -> tuple[Trace, ...]:
         """The run's run-ups and coast-downs, each apart, in order; empty when it has none."""
         with self._read() as c:
-            return recall_traces.traces_of_run(c, run_id)
+            return recall_traces.traces_of_run(c, run_id, set_up_id)
 
     def weights(self, mount_id: UUID) -> tuple[WeightEvent, ...]:
         """What is on the rotor now: fitted and not removed, and drilled."""

@@ -12,7 +12,7 @@ from sqlalchemy import Connection, Row, Table, select
 
 from store.recall_runs import reading_by_id, to_level, to_vector
 from store.records import Level, Measured, Reading, Vector
-from store.tables import level, measured, measured_vector, reading, vector
+from store.tables import level, measured, measured_vector, reading, run, vector
 
 
 def versions(c: Connection, reading_id: UUID) -> tuple[Measured, ...]:
@@ -29,6 +29,33 @@ def versions(c: Connection, reading_id: UUID) -> tuple[Measured, ...]:
         levels[v.version].append(to_level(v))
     live = [to_vector(v) for v in _placed(c, vector, reading_id)]
     return tuple(_measured(r, live if r.version == 1 else later[r.version], levels[r.version]) for r in rows)
+
+
+def heads(c: Connection, run_id: UUID) -> dict[UUID, tuple[Measured, ...]]:
+    """By reading of a run, how each version came about, without vectors and levels."""
+    rows = c.execute(
+        select(measured)
+        .join(reading, reading.c.id == measured.c.reading_id)
+        .where(reading.c.run_id == run_id)
+        .order_by(measured.c.version)
+    )
+    found: dict[UUID, list[Measured]] = defaultdict(list)
+    for row in rows:
+        found[row.reading_id].append(_measured(row, (), ()))
+    return {i: tuple(m) for i, m in found.items()}
+
+
+def set_up_then(c: Connection, run_id: UUID, version: int) -> UUID | None:
+    """The set-up that a version of a run's readings was measured with; None when it has no such version."""
+    row = c.execute(
+        select(measured.c.set_up_id)
+        .join(reading, reading.c.id == measured.c.reading_id)
+        .where(reading.c.run_id == run_id, measured.c.version == version)
+        .order_by(measured.c.seq)
+    ).first()
+    if row is None and version == 1:
+        row = c.execute(select(run.c.set_up_id).where(run.c.id == run_id)).first()
+    return None if row is None else row.set_up_id
 
 
 def _placed(c: Connection, table: Table, reading_id: UUID) -> Sequence[Row[Any]]:

@@ -8,10 +8,12 @@ from typing import Any
 import pytest
 from store_kit import SET_UP, Stand, measured, reading, vector
 
+from cli.runshow import reading_lines
 from config.errors import Refusal
+from store import consult
 from store.again import Remeasured, RunAgain
 from store.casework import correction_for
-from store.records import Label, SetUpDraft
+from store.records import Label, SetUpDraft, Trace, TracePoint
 
 
 def with_sensitivity(volts_per_unit: float) -> SetUpDraft:
@@ -148,3 +150,39 @@ def test_a_vector_of_another_version_is_not_mixed_in(stand: Stand) -> None:
     )
     (now,) = stand.history.run("0142/1").readings
     assert ([v.value for v in now.vectors], now.levels) == ([9 + 0j], ())
+
+
+def test_traces_follow_a_corrected_sensitivity(stand: Stand) -> None:
+    """A trace has no counts: half the sensitivity, the other sense of positive, so -2 times the vectors."""
+    stand.mount()
+    run = stand.begin()
+    step = TracePoint(0.5, 12.0, 1, (3 + 4j, 2j), (0.1, 0.1), (-9.8, -10.1))
+    stand.ledger.add_trace(run.id, Trace("up", ("probe 1", "probe 2"), ("um", "um"), 1000, 1.0, (step,)))
+    stand.ledger.add_reading(run.id, reading(measured=measured()), slow_roll_limit_hz=5.0)
+    stand.end(run.id)
+    half = with_sensitivity(3937.0)
+    first, second = half.channels
+    stand.again("0142/1", -20 + 0j, replace(half, channels=(replace(first, positive=1), second)))
+    (trace,) = stand.history.traces(run.id)
+    (point,) = trace.points
+    assert (point.vectors, point.se, point.gap_v) == ((-6 - 8j, 2j), (0.2, 0.1), (-9.8, -10.1))
+    (before,) = stand.history.traces(run.id, run.set_up_id)
+    assert before.points == (step,)
+    assert stand.history.run_as("0142/1", 1).set_up_id == run.set_up_id
+
+
+def test_run_show_tells_the_versions(stand: Stand) -> None:
+    a_job(stand)
+    stand.again("0142/1", 11 + 0j, with_sensitivity(3937.0), why="other probe")
+    told = consult.run_json(stand.history, "0142/1")
+    (one,) = told["readings"]
+    assert (told["set_up_revision"], one["version"]) == (2, 2)
+    assert [(v["version"], v["why"], v["who"]) for v in one["versions"]] == [
+        (1, "live", ""),
+        (2, "other probe", "ana"),
+    ]
+    assert one["vectors"][0]["amplitude_pk"] == 11.0
+    first = consult.run_json(stand.history, "0142/1", version=1)
+    assert (first["set_up_revision"], first["readings"][0]["version"]) == (1, 1)
+    assert first["readings"][0]["vectors"][0]["amplitude_pk"] == 10.0
+    assert list(reading_lines(one, {}))[1] == "version 2 of 2 of its arithmetic: other probe"

@@ -6,15 +6,16 @@ of its own tells the whole of it, as far as noise lets it.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
 
 from daq.signal.shapes import Complexes, Floats
 
-STEPS_PER_CYCLE = 4
-"""Trial frequencies lie this part of one cycle over the stretch apart."""
+STEPS = ((1.0, 40), (3.0, 10), (np.inf, 6))
+"""Up to so many cycles over the stretch, trial frequencies differ by this part of a cycle: below one, where
+the offset makes the travel hang on the frequency, they lie close. Between two it reads 4 % low at most."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -48,6 +49,12 @@ class Swing:
     per_se: Floats
     """Standard error of the travel over that of one block, in the direction known worst."""
     period_s: Floats
+
+    def apart(self) -> tuple[Swing, Swing]:
+        """The first column, and the others."""
+        first = {f.name: getattr(self, f.name)[:1] for f in fields(self)}
+        others = {f.name: getattr(self, f.name)[1:] for f in fields(self)}
+        return Swing(**first), Swing(**others)
 
 
 def swing(
@@ -87,13 +94,22 @@ def told_over_block_se(times_s: Floats, slowest_s: float, sd: float) -> float:
 def _trials(
     times_s: Floats, block_s: float, slowest_s: float
 ) -> tuple[Floats, Floats, tuple[Floats, Floats, Floats], Floats, Floats]:
-    length_s = times_s[-1] - times_s[0] + block_s
-    step = 1.0 / (STEPS_PER_CYCLE * length_s)
-    hz = np.arange(1.0 / slowest_s, 0.5 / block_s + 0.01 * step, step)
+    hz = _trial_hz(times_s[-1] - times_s[0] + block_s, block_s, slowest_s)
     cos, sin, moments = _waves(times_s, hz)
     good = _least(*moments) > 1e-6 * len(times_s)  # at two blocks a period one of the two may vanish
     cc, ss, cs = (m[good] for m in moments)
     return cos[good], sin[good], (cc, ss, cs), np.sinc(hz[good] * block_s), hz[good]
+
+
+def _trial_hz(length_s: float, block_s: float, slowest_s: float) -> Floats:
+    """Frequencies from the slowest to two blocks a period."""
+    at, last = length_s / slowest_s, 0.5 * length_s / block_s + 0.01
+    parts = []
+    for until, steps in STEPS:
+        parts.append(np.arange(at, min(until, last), 1.0 / steps))
+        at = max(at, min(until, last))
+    found: Floats = np.concatenate(parts) / length_s
+    return found
 
 
 def _waves(times_s: Floats, hz: Floats) -> tuple[Floats, Floats, tuple[Floats, Floats, Floats]]:

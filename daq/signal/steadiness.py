@@ -6,6 +6,7 @@ judged against its own uncertainty, and what noise may still hide: DEVELOPERS.md
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
@@ -16,7 +17,7 @@ from config.steadiness import SteadinessLimits
 from daq.signal.averaging import colour, widening
 from daq.signal.revolutions import REPAIR_LIMIT_PCT
 from daq.signal.shapes import BlockFit, Complexes, Floats
-from daq.signal.slow import swing, told_over_block_se, trend
+from daq.signal.slow import Swing, swing, told_over_block_se, trend
 
 FEWEST_PULSE_SAMPLES = 3.0
 """A once-per-rev pulse lasts so many samples at least."""
@@ -391,21 +392,23 @@ def _vectors(
     swing_seen = np.abs(vectors[:, None] - vectors[None, :]).max(axis=(0, 1))
     scatter = np.sqrt(np.sum(np.abs(vectors - vectors.mean(axis=0)) ** 2, axis=0) / (2 * (len(vectors) - 1)))
     allowed = _allowed(blocks, limits, probes)
-    line = trend(blocks.times_s, vectors)
-    drift = np.abs(line.rate) * blocks.shortest_s(limits)
-    drift_se = _drift_se(blocks, limits)
-    for i, probe in enumerate(probes):
-        unit = UNITS[probe.kind]
-        if earlier is not None and later is not None:
-            change = abs(later.vectors[i] - earlier.vectors[i])
-            se = float(np.hypot(earlier.se[i], later.se[i]) * np.sqrt(blocks.widening[i]))
-            yield _at_most("change", probe.name, change, max(allowed[i], CHANGE_SE * se), unit)
-        yield _at_most("swing", probe.name, swing_seen[i], max(allowed[i], SWING_SE * one_se[i]), unit)
-        most = max(allowed[i] - MARGIN_SE * drift_se[i], PLANE_SE * drift_se[i])
-        yield _at_most("drift", probe.name, drift[i], most, unit)
-        floor = limits.change_floor(probe.kind)
-        spread = max(limits.scatter_pct / 100 * blocks.size[i], floor, CHANGE_SE * one_se[i])
-        yield _at_most("scatter", probe.name, scatter[i], spread, unit)
+    if earlier is not None and later is not None:
+        change = np.abs(later.vectors - earlier.vectors)
+        se = np.hypot(earlier.se, later.se) * np.sqrt(blocks.widening)
+        yield from _each("change", probes, change, np.maximum(allowed, CHANGE_SE * se))
+    yield from _each("swing", probes, swing_seen, np.maximum(allowed, SWING_SE * one_se))
+    drift = np.abs(trend(blocks.times_s, vectors).rate) * blocks.shortest_s(limits)
+    se = _drift_se(blocks, limits)
+    yield from _each("drift", probes, drift, np.maximum(allowed - MARGIN_SE * se, PLANE_SE * se))
+    floors = np.array([limits.change_floor(p.kind) for p in probes])
+    spread = np.maximum(np.maximum(limits.scatter_pct / 100 * blocks.size, floors), CHANGE_SE * one_se)
+    yield from _each("scatter", probes, scatter, spread)
+
+
+def _each(name: str, probes: Sequence[Probe], values: Floats, most: Floats) -> Iterator[Figure]:
+    """A figure of each probe."""
+    for probe, value, limit in zip(probes, values.tolist(), most.tolist(), strict=True):
+        yield Figure(name, probe.name, value, limit, UNITS[probe.kind], value <= limit)
 
 
 def _drift_se(blocks: _Blocks, limits: SteadinessLimits) -> Floats:
@@ -439,25 +442,23 @@ def _compared(
 def _slow(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]) -> Iterator[Figure]:
     """Swings of a period up to two windows, of speed and vectors, of which the window may hold a half."""
     slowest_s = SLOWEST * blocks.shortest_s(limits)
-    yield _hunting(blocks, limits, slowest_s)
-    count = len(blocks.times_s)
-    found = swing(blocks.times_s, blocks.vectors, blocks.block_s, slowest_s)
-    freedom = 2 * count - 7
+    columns: Complexes = np.column_stack((blocks.speeds, blocks.vectors)).astype(np.complex128)
+    speed, found = swing(blocks.times_s, columns, blocks.block_s, slowest_s).apart()
+    yield _hunting(speed, blocks, limits)
+    freedom = 2 * len(blocks.times_s) - 7
     noise2 = blocks.block_se2 * colour(found.left / freedom, blocks.block_se2, freedom)
     se = found.per_se * np.sqrt(noise2)
     chance = found.travel * np.sqrt(BEAT_SE2 * noise2 / np.maximum(found.explained, 1e-300))
     allowed = _allowed(blocks, limits, probes)
     told = np.sqrt(noise2) * told_over_block_se(blocks.times_s, slowest_s, TOLD_SD)
     told = np.maximum(told, DRIFT_TOLD_SE * _drift_se(blocks, limits))
-    for i, probe in enumerate(probes):
-        unit = UNITS[probe.kind]
-        most = max(allowed[i] - MARGIN_SE * se[i], min(chance[i], found.travel[i] * 10))
-        yield _at_most("beat", probe.name, found.travel[i], most, unit)
-        yield _by_averaging("told", probe.name, told[i], allowed[i], unit, blocks.length_s, 1.5)
+    most = np.maximum(allowed - MARGIN_SE * se, np.minimum(chance, 10 * found.travel))
+    yield from _each("beat", probes, found.travel, most)
+    for probe, value, limit in zip(probes, told.tolist(), allowed.tolist(), strict=True):
+        yield _by_averaging("told", probe.name, value, limit, UNITS[probe.kind], blocks.length_s, 1.5)
 
 
-def _hunting(blocks: _Blocks, limits: SteadinessLimits, slowest_s: float) -> Figure:
-    found = swing(blocks.times_s, blocks.speeds[:, None], blocks.block_s, slowest_s)
+def _hunting(found: Swing, blocks: _Blocks, limits: SteadinessLimits) -> Figure:
     per_sd = 100 / blocks.speed_hz / np.sqrt(8.0)  # the standard deviation of a sine from its travel
     noise = float(np.sqrt(found.left[0] / (len(blocks.times_s) - 4)))
     limit = max(limits.speed_sd_pct, HUNTING_SE * noise * float(found.per_se[0]) * per_sd)
@@ -466,24 +467,20 @@ def _hunting(blocks: _Blocks, limits: SteadinessLimits, slowest_s: float) -> Fig
 
 def _averaged(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]) -> Iterator[Figure]:
     """Whether each vector is known as well as is asked for."""
-    phase = np.radians(limits.phase_target_deg)
-    for name, kind, size, se in zip(
-        (p.name for p in probes), (p.kind for p in probes), blocks.size, blocks.se, strict=True
-    ):
-        floor, share = limits.target_floor(kind), limits.amplitude_target_pct / 100
+    share, phase, length_s = limits.amplitude_target_pct / 100, limits.phase_target_deg, blocks.length_s
+    for probe, size, se in zip(probes, blocks.size.tolist(), blocks.se.tolist(), strict=True):
+        floor, name = limits.target_floor(probe.kind), probe.name
         if share * size > floor:
-            yield _by_averaging("averaged", name, 100 * se / size, 100 * share, "%", blocks.length_s)
+            yield _by_averaging("averaged", name, 100 * se / size, 100 * share, "%", length_s)
         else:
-            yield _by_averaging("averaged", name, se, floor, UNITS[kind], blocks.length_s)
-        if phase * size > floor:
-            deg = float(np.degrees(se / size))
-            yield _by_averaging("phase", name, deg, limits.phase_target_deg, "deg", blocks.length_s)
+            yield _by_averaging("averaged", name, se, floor, UNITS[probe.kind], length_s)
+        if math.radians(phase) * size > floor:
+            yield _by_averaging("phase", name, math.degrees(se / size), phase, "deg", length_s)
 
 
 def _by_averaging(
     name: str, channel: str, value: float, limit: float, unit: str, length_s: float, power: float = 0.5
 ) -> Figure:
     """A figure that falls with the window's length to the ``-power``."""
-    longer = (value / limit) ** (1 / power) if limit > 0 else float("inf")
-    more_s = float(length_s * max(0.0, longer - 1))
-    return Figure(name, channel, float(value), float(limit), unit, bool(value <= limit), more_s)
+    more_s = length_s * max(0.0, (value / limit) ** (1 / power) - 1)
+    return Figure(name, channel, value, limit, unit, value <= limit, more_s)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 import wave
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
@@ -13,6 +14,8 @@ import pytest
 from numpy.typing import NDArray
 
 from daq.signal.shapes import ChannelParams, PulseParams
+
+sys.path.insert(0, str(Path(__file__).parent))  # for records
 
 RECORDINGS = Path(__file__).resolve().parents[1] / "recordings"
 VOLTS_PER_UM = 0.007874  # 200 mV/mil

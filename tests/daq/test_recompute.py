@@ -24,8 +24,9 @@ from daq.requests import ChannelBody, RecomputeAsked, ReviseAsked
 from daq.revise import ChannelChange, Correction, corrected, scaled
 from daq.signal.setting import Setting
 from daq.signal.shapes import ChannelParams, PulseParams, Surroundings
+from store import consult
 from store.database import create_store
-from store.records import Level
+from store.records import Label, Level
 
 SCALE = (-32768, 32767)
 
@@ -284,3 +285,42 @@ def test_processor_family(tmp_path, monkeypatch):
     assert is_one_thread()
     assert not build.processor().endswith("threads")
     assert len(build.processor()) > len(build.platform.machine())
+
+
+def test_the_correction_moves_by_what_the_sensitivity_was_wrong(stand, desk):
+    """Job 0142: 10 um, and 4 + 3j um with 3 g at 140 mm (420 g.mm, U). Job 0150, typed 10 % too sensitive:
+    10 um read 10 / 1.1, and no history fits it. Put right, -10 U / (-6 + 3j) is wanted,
+    420 x 10 / sqrt(45) = 626.10 g.mm; with the vector as it was read it would have been 1.1 times less."""
+    stand.run(Label.O)
+    stand.fit()
+    stand.run(Label.O_T, 4 + 3j)
+    wrong = replace(
+        SET_UP, channels=tuple(replace(c, volts_per_unit=1.1 * c.volts_per_unit) for c in SET_UP.channels)
+    )
+    stand.set_up_id = stand.ledger.set_up(wrong).id
+    stand.mount(job_number="0150")
+    stand.run(Label.O, 10 / 1.1)
+    with pytest.raises(Refusal):
+        consult.correction(stand.history, "0150", reuse=True, planes=(1,))
+    right = tuple(ChannelBody(channel=c.name, volts_per_unit=7874.0, unit="um") for c in SET_UP.channels)
+    desk.revise(ReviseAsked(key="key-00000001", runs=("0150/1",), channels=right, why="typed wrong"), "ana")
+    (plane,) = consult.correction(stand.history, "0150", reuse=True, planes=(1,)).planes
+    assert abs(plane.add) == pytest.approx(626.099, abs=0.001)
+
+
+def test_an_own_coefficient_and_its_verdict_follow_too(stand, desk):
+    """Both runs 10 % too sensitive: each vector and the coefficient grow by 1.1, the weights needed stay."""
+    stand.run(Label.O)
+    stand.fit()
+    stand.run(Label.O_T, 4 + 3j)
+    before = consult.correction(stand.history, "0142", reuse=False, planes=(1,)).planes[0]
+    (coefficient,) = stand.history.coefficients(plane=1, channel="probe 1")
+    less = tuple(ChannelBody(channel=c.name, volts_per_unit=7874.0 / 1.1, unit="um") for c in SET_UP.channels)
+    runs = ("0142/1", "0142/2")
+    desk.revise(ReviseAsked(key="key-00000001", runs=runs, channels=less, why="typed wrong"), "ana")
+    now = consult.correction(stand.history, "0142", reuse=False, planes=(1,)).planes[0]
+    assert now.add == pytest.approx(before.add, rel=1e-9)
+    (found,) = stand.history.coefficients(plane=1, channel="probe 1")
+    assert found.value == pytest.approx(1.1 * coefficient.value, rel=1e-12)
+    values = [v.value for v in stand.history.run("0142/2").readings[0].vectors[:2]]
+    assert values == pytest.approx([4.4 + 3.3j] * 2, rel=1e-12)

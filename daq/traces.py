@@ -20,7 +20,8 @@ from numpy.typing import NDArray
 from daq.ring import Chunk
 from daq.signal.basis import basis
 from daq.signal.blocks import usable_orders
-from daq.signal.revolutions import MEDIAN_TURNS, Turns, turns_of
+from daq.signal.revolutions import MEDIAN_TURNS, Turns, turns_between
+from daq.signal.rhythm import Mended, Rhythm
 from daq.signal.shapes import ChannelParams, Complexes, Floats, median
 from daq.signal.vectors import turn_pieces
 from store.records import Direction, Trace, TracePoint
@@ -44,8 +45,6 @@ KEPT_TURNS, KEPT_S = 12, 15.0
 ORDERS = (1, 2, 3)
 FEW = 4
 """With fewer samples than so many for each unknown only offset and 1X are fitted."""
-AHEAD = MEDIAN_TURNS // 2
-"""Edges that must be known after a turn before it is judged."""
 
 Span = tuple[float, float]
 """First and last edge of a step, source sample positions."""
@@ -92,10 +91,13 @@ class Tracer:
         self._minimum_hz = minimum_hz
         """Steps below this speed are left out, as runs are."""
         self._done: deque[Stretch] = deque(maxlen=8)
-        self._edges: Floats = np.empty(0)
+        self._fresh: Floats = np.empty(0)
+        """Edges that the rhythm has not seen: it is asked when the speed does not plainly hold."""
         self._extreme = (0.0, 0)
         """Speed and turn up to which the stretch has come."""
         self._next = -1
+        self._newest: float | None = None
+        """The newest edge."""
         self._clear()
 
     def feed(self, chunk: Chunk, edges: Floats) -> None:
@@ -106,9 +108,10 @@ class Tracer:
         self._measure.hold(chunk.first_sample, chunk.counts)
         if len(edges):
             holds = self._holds(edges)
-            self._edges = np.concatenate((self._edges, edges))
+            self._fresh = np.concatenate((self._fresh, edges))
+            self._newest = float(edges[-1])
             if not holds:
-                self._judge_new(AHEAD)
+                self._judge_new(last=False)
         self._trim()
 
     def take(self, since: float, at_us: Callable[[int], int]) -> list[Trace]:
@@ -142,10 +145,11 @@ class Tracer:
 
     def stop(self) -> None:
         """The pulses or the run have ended: what goes on ends here."""
-        self._judge_new(0)
+        self._judge_new(last=True)
         if self._direction:
             self._finish(self._last_of_stretch())
         self._hold_from(None)
+        self._rhythm, self._judged = Rhythm(), 0
 
     def restart(self) -> None:
         """Samples are missing: nothing is joined across the gap."""
@@ -156,9 +160,13 @@ class Tracer:
 
     def _clear(self) -> None:
         self._measure.clear()
-        self._edges = np.empty(0)
-        self._seen = -np.inf
-        """Position up to which turns are judged."""
+        self._fresh = np.empty(0)
+        self._newest = None
+        self._turn = 0.0
+        """Length of the newest turns, samples."""
+        self._rhythm = Rhythm()
+        self._judged = 0
+        """Turns of the rhythm's edges that have been taken over."""
         self._starts: Floats = np.empty(0)
         self._stops: Floats = np.empty(0)
         self._speeds: Floats = np.empty(0)
@@ -179,31 +187,32 @@ class Tracer:
 
     def _holds(self, edges: Floats) -> bool:
         """Quick look: all new turns lie well within the band in which the speed holds."""
-        if self._direction or not self._anchored or not len(self._edges):
+        if self._direction or not self._anchored or self._newest is None:
             return False
-        before = np.concatenate((self._edges[-1:], edges[:-1]))
-        speeds = self._rate_hz / (edges - before)
+        speeds = self._rate_hz / (edges - np.concatenate(([self._newest], edges[:-1])))
         lowest, highest = float(speeds.min()), float(speeds.max())
         half = REVERSAL / 2
         return lowest > self._high[0] * (1 - half) and highest < self._low[0] * (1 + half)
 
-    def _judge_new(self, ahead: int) -> None:
-        """Judge the turns that are ready; ``ahead`` edges must be known after them."""
-        ready = len(self._edges) - 1 - ahead
-        if ready < 1:
-            return
-        first = max(0, int(np.searchsorted(self._edges, self._seen)) - MEDIAN_TURNS)
-        turns = turns_of(self._edges[first:])
-        new = turns.good & (turns.edges[:-1] >= self._seen) & (turns.edges[1:] <= self._edges[ready])
-        self._seen = float(self._edges[ready])
-        self._starts = np.concatenate((self._starts, turns.edges[:-1][new]))
-        self._stops = np.concatenate((self._stops, turns.edges[1:][new]))
-        self._speeds = np.concatenate((self._speeds, self._rate_hz / turns.periods[new]))
+    def _judge_new(self, *, last: bool) -> None:
+        """Judge the turns that have come; ``last``: nothing follows them."""
+        self._rhythm.feed(self._fresh)
+        self._fresh = np.empty(0)
+        if last:
+            self._rhythm.finish()
+        mended, first = self._rhythm.mended, self._judged
+        self._judged = max(0, len(mended.edges) - 1)
+        new = between_marks(mended)[first:]
+        starts, stops = mended.edges[first:-1][new], mended.edges[first + 1 :][new]
+        self._starts = np.concatenate((self._starts, starts))
+        self._stops = np.concatenate((self._stops, stops))
+        self._speeds = np.concatenate((self._speeds, self._rate_hz / (stops - starts)))
         if not len(self._speeds):
             return
-        width = max(1, int(np.ceil(SMOOTH_SAMPLES * median(self._speeds) / self._rate_hz)))
+        self._turn = self._rate_hz / median(self._speeds[-MEDIAN_TURNS:])
+        width = max(1, int(np.ceil(SMOOTH_SAMPLES / self._turn)))
         self._smooth = smoothed(self._speeds, width)
-        unsettled = 2 + width // 2 if ahead else 0
+        unsettled = 0 if last else 2 + width // 2
         self._judge(self._base + len(self._smooth) - unsettled)
         self._measure_steps()
 
@@ -301,7 +310,7 @@ class Tracer:
         self._spans.append((begin, end))
 
     def _measure_steps(self) -> None:
-        found = self._measure.steps(self._spans, self._edges)
+        found = self._measure.steps(self._spans, self._rhythm.mended) if self._spans else []
         self._steps += [s for s in found if s.speed_hz >= self._minimum_hz]
         self._spans = []
 
@@ -315,11 +324,16 @@ class Tracer:
 
     def _trim(self) -> None:
         """Let go of samples, edges and turns that no step will ask for again."""
-        turn = float(self._edges[-1] - self._edges[-2]) if len(self._edges) > 1 else 0.0
-        kept = min(WINDOW_S * self._rate_hz + KEPT_TURNS * turn, KEPT_S * self._rate_hz)
+        kept = min(WINDOW_S * self._rate_hz + KEPT_TURNS * self._turn, KEPT_S * self._rate_hz)
         before = self._next - kept
         self._measure.let_go(before)
-        self._edges = self._edges[max(0, int(np.searchsorted(self._edges, before)) - MEDIAN_TURNS) :]
+        if len(self._fresh) and self._fresh[0] < before:
+            self._fresh = self._fresh[int(np.searchsorted(self._fresh, before)) :]
+            self._rhythm, self._judged = Rhythm(), 0
+        gone = int(np.searchsorted(self._rhythm.mended.edges, before)) - MEDIAN_TURNS
+        if min(gone, self._judged) > 0:
+            self._rhythm.mended.drop(min(gone, self._judged))
+            self._judged -= min(gone, self._judged)
         gone = min(int(np.searchsorted(self._starts, before)), self._at - self._base)
         if gone > 0:
             self._base += gone
@@ -348,11 +362,12 @@ class StepFitter:
         while self._chunks and self._chunks[0][0] + len(self._chunks[0][1]) <= before:
             self._chunks.popleft()
 
-    def steps(self, spans: Sequence[Span], edges: Floats) -> list[Step]:
-        """The steps of whole turns between pairs of ``edges``, in order; those that can be measured."""
-        if not spans:
-            return []
-        turns = turns_of(edges)
+    def steps(self, spans: Sequence[Span], mended: Mended) -> list[Step]:
+        """The steps of whole turns between pairs of edges, in order; those that can be measured."""
+        real = Mended()
+        real.join(mended)
+        real.good = between_marks(mended)
+        turns = turns_between(real)
         at = [(_nearest(turns.edges, a), _nearest(turns.edges, b)) for a, b in spans]
         held = self._chunks[0][0] if self._chunks else np.inf
         at = [(i, k) for i, k in at if turns.first_samples[i] >= held and turns.good[i:k].any()]
@@ -405,6 +420,15 @@ class StepFitter:
             if at < stop and at + len(counts) > start
         ]
         return parts[0] if len(parts) == 1 else np.concatenate(parts)
+
+
+def between_marks(mended: Mended) -> NDArray[np.bool_]:
+    """Shape (edges - 1,): the good turns that begin and end with a pulse that came. Where one is filled in on
+    a fast ramp its place is a guess, and a step is often a single turn."""
+    filled = mended.missed > 0
+    found: NDArray[np.bool_] = mended.good & ~filled
+    found[1:] &= ~filled[:-1]
+    return found
 
 
 def _nearest(edges: Floats, position: float) -> int:

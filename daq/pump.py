@@ -27,8 +27,8 @@ RING_S = 20.0
 FIRST_BACK_OFF_S, LONGEST_BACK_OFF_S = 0.5, 5.0
 ACT_WITHIN_S = 10.0
 ROOM_S = 0.2
-REMARK_S = 60.0
-"""A source that says what is wrong with what it delivers is heard so often."""
+REMARK_S, LOOK_S = 60.0, 0.5
+"""A source that says what is wrong with what it delivers is heard so often, and asked so often."""
 
 log = logging.getLogger("revmark.driver")
 
@@ -134,6 +134,7 @@ class Pump:
         now_s = self._clock.monotonic()
         if now_s < self._remark_due_s:
             return
+        self._remark_due_s = now_s + LOOK_S
         found = self._driver.remarks()
         if found and found != self._remarks:
             self._remarks, self._remark_due_s = found, now_s + REMARK_S
@@ -151,7 +152,7 @@ class Pump:
         self.ring.write(block)
 
     def _do_acts(self) -> None:
-        while True:
+        while not self._acts.empty():
             try:
                 verb, arguments, future = self._acts.get_nowait()
             except queue.Empty:

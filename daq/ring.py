@@ -244,14 +244,16 @@ class Ring:
         at = position % self.capacity_frames
         head = min(len(counts), self.capacity_frames - at)
         self._data[at : at + head] = counts[:head]
-        self._data[: len(counts) - head] = counts[head:]
+        if head < len(counts):
+            self._data[: len(counts) - head] = counts[head:]
 
     def _copy_out(self, start: int, stop: int) -> NDArray[Any]:
         out = np.empty((stop - start, self.channels), self.dtype)
         at = start % self.capacity_frames
         head = min(stop - start, self.capacity_frames - at)
         out[:head] = self._data[at : at + head]
-        out[head:] = self._data[: stop - start - head]
+        if head < len(out):
+            out[head:] = self._data[: stop - start - head]
         return out
 
 

@@ -10,7 +10,6 @@ import logging
 import threading
 from abc import ABC, abstractmethod
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from enum import StrEnum
 from pathlib import Path
@@ -400,17 +399,30 @@ class Driver(ABC, Generic[OptionsT]):
             self._count.errors += 1
             self.log.warning("source %s did not close cleanly", self.name, exc_info=True)
 
-    @contextmanager
-    def _border(self, doing: str, passes: type[RevmarkError] = DriverError) -> Iterator[None]:
-        try:
-            yield
-        except passes as error:
-            self._count.errors += isinstance(error, DriverError)
-            raise
-        except Exception as error:
-            self._count.errors += 1
-            raise DriverError(
-                f"Source {self.name} failed while it was {doing}: {type(error).__name__}: {error}.",
-                "The log holds the details.",
-                kind="protocol",
-            ) from error
+    def _border(self, doing: str, passes: type[RevmarkError] = DriverError) -> _Border:
+        return _Border(self, doing, passes)
+
+
+class _Border:
+    """What a driver raises becomes ours here and is counted; a generator would cost more, block by block."""
+
+    __slots__ = ("_doing", "_driver", "_passes")
+
+    def __init__(self, driver: Driver[Any], doing: str, passes: type[RevmarkError]) -> None:
+        self._driver, self._doing, self._passes = driver, doing, passes
+
+    def __enter__(self) -> None: ...
+
+    def __exit__(self, _: object, error: BaseException | None, __: object) -> None:
+        if not isinstance(error, Exception):
+            return
+        count = self._driver._count
+        if isinstance(error, self._passes):
+            count.errors += isinstance(error, DriverError)
+            return
+        count.errors += 1
+        raise DriverError(
+            f"Source {self._driver.name} failed while it was {self._doing}: {type(error).__name__}: {error}.",
+            "The log holds the details.",
+            kind="protocol",
+        ) from error

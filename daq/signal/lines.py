@@ -177,17 +177,15 @@ class _Search:
         best, at = STANDS_OUT, None
         beat = int(np.ceil(1 / self.rows.turns / float(orders[1])))  # a skirt of what is nearer is no line
         away = np.min(np.abs(orders[:, None] - np.array(self.fitted)), axis=1)
-        for p, column in enumerate(power.T):
-            scatters = self._scatters[p] * np.maximum(1, np.pi * self._part_turns * away)
-            least = np.minimum(LEAST_SHARE * self._first[p], scatters)
-            flat = np.where(free & (column > least**2), column / _blockwise(column), 0.0)
-            for k in np.argpartition(flat, -CANDIDATES)[-CANDIDATES:].tolist():
-                ratio = column[k] / self._around(orders, column, k)
-                if (
-                    flat[k] > 0
-                    and ratio > best
-                    and column[k] >= column[max(0, k - beat) : k + beat + 1].max()
-                ):
+        scatters = self._scatters * np.maximum(1, np.pi * self._part_turns * away)[:, None]
+        least = np.minimum(LEAST_SHARE * self._first, scatters)
+        flat = np.where(free[:, None] & (power > least**2), power / _blockwise(power), 0.0)
+        for p in np.flatnonzero(flat.max(axis=0) > STANDS_OUT / 4).tolist():
+            column = power[:, p]
+            for k in np.argpartition(flat[:, p], -CANDIDATES)[-CANDIDATES:].tolist():
+                top = column[k] == column[max(0, k - beat) : k + beat + 1].max()
+                ratio = column[k] / self._around(orders, column, k) if top and flat[k, p] > 0 else 0.0
+                if ratio > best:
                     best, at = ratio, float(orders[k])
         return at
 
@@ -259,6 +257,8 @@ class _Search:
     def weights(self) -> tuple[Floats, NDArray[np.bool_]]:
         """Cosine and sine of each line in each probe, 0 where it does not stand out there, and which lines
         stand out in any."""
+        if not len(self.found):
+            return np.empty((0, self.rows.values.shape[1])), np.zeros(0, bool)
         _, told = self._fit()
         weights = told[self._given.shape[1] :]
         noise = np.array([self._noise(order) for order in self.found]).reshape(-1, weights.shape[1])
@@ -279,12 +279,13 @@ class _Search:
         hidden = np.zeros(values.shape)
         for i, order in enumerate(self.fitted):
             beside = np.flatnonzero(np.abs(orders - order) <= self.near)
-            for p, column in enumerate(power.T):
-                k = int(beside[np.argmax(column[beside])]) if len(beside) else 0
-                size = float(np.sqrt(column[k]))
-                large = size > NEAR_SHARE * abs(values[i, p])
-                if len(beside) and large and column[k] > STANDS_OUT * self._around(orders, column, k):
-                    hidden[i, p] = size
+            if not len(beside):
+                continue
+            top = beside[np.argmax(power[beside], axis=0)]
+            size = np.sqrt(power[top, np.arange(len(top))])
+            for p in np.flatnonzero(size > NEAR_SHARE * np.abs(values[i])).tolist():
+                if size[p] ** 2 > STANDS_OUT * self._around(orders, power[:, p], int(top[p])):
+                    hidden[i, p] = size[p]
         return hidden
 
     def mains(self, near: Surroundings, speed_hz: float) -> Floats:
@@ -328,13 +329,12 @@ class _Search:
 
 
 def _blockwise(power: Floats) -> Floats:
-    """A coarse neighbourhood of each point: the median of its block, block by block; as long as ``power``."""
-    whole = len(power) // SIDE * SIDE
-    medians = np.median(power[:whole].reshape(-1, SIDE), axis=1)
-    spread: Floats = np.repeat(medians, SIDE)
-    tail = np.full(len(power) - whole, medians[-1])
-    whole_range = np.concatenate((spread, tail))
-    return np.asarray(np.maximum(whole_range, 1e-12), np.float64)
+    """A coarse neighbourhood of each point of (points, probes): the median of its block of points."""
+    blocks = len(power) // SIDE
+    middles = np.partition(power[: blocks * SIDE].reshape(blocks, SIDE, -1), SIDE // 2, axis=1)[:, SIDE // 2]
+    spread = np.repeat(middles, SIDE, axis=0)
+    tail = np.broadcast_to(middles[-1], (len(power) - len(spread), power.shape[1]))
+    return np.asarray(np.maximum(np.concatenate((spread, tail)), 1e-12), np.float64)
 
 
 def _solved(design: Floats, values: Floats) -> Floats:

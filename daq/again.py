@@ -25,6 +25,9 @@ Json = dict[str, Any]
 Prepared = tuple[list[RunAgain], list[Json]]
 """What the ledger shall keep, and what is said of each run."""
 
+MOST_READINGS = 3000
+"""In one request: storing 700 a second (2 vectors each, measured) holds up the writer for some seconds."""
+
 
 class AgainDesk:
     """Recompute and revise, as operators ask for them."""
@@ -108,6 +111,12 @@ class AgainDesk:
                 raise Refusal(f"Run {run.name} is still open.", "Wait until it has ended.")
         if len({run.id for run in runs}) < len(runs):
             raise Refusal("A run is named twice.", "Name each run once.")
+        readings = sum(len(run.readings) for run in runs)
+        if readings > MOST_READINGS:
+            raise Refusal(
+                f"The runs hold {readings} readings, and {MOST_READINGS} may be measured again at once.",
+                "Name fewer runs at a time.",
+            )
         return runs
 
     def _left_behind(self, told: Json) -> list[str]:

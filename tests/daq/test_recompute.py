@@ -21,7 +21,7 @@ from daq.board import Board
 from daq.build import Build
 from daq.recompute import NOT_RECORDED, again, differences
 from daq.requests import ChannelBody, RecomputeAsked, ReviseAsked
-from daq.revise import ChannelChange, Correction, corrected, scaled
+from daq.revise import ChannelChange, Correction, corrected, revised, scaled
 from daq.signal.setting import Setting
 from daq.signal.shapes import ChannelParams, PulseParams, Surroundings
 from store import consult
@@ -255,6 +255,49 @@ def test_one_at_a_time(desk):
     asked = ReviseAsked(key="key-00000001", runs=("0142/1",), sensor_angle_deg=9.0, why="x")
     with desk._alone(), pytest.raises(Refusal, match="being measured again just now"):
         desk.revise(asked, "ana")
+
+
+def test_the_arithmetic_is_not_the_writers(stand, monkeypatch):
+    """While counts are worked on the writer is free: nothing is worked on inside what it is asked."""
+    inside, worked = [], []
+
+    class Watched(AtOnce):
+        def ask(self, act):
+            inside.append(1)
+            try:
+                return super().ask(act)
+            finally:
+                inside.clear()
+
+    def watched(*args):
+        worked.append(list(inside))
+        return revised(*args)
+
+    monkeypatch.setattr("daq.again.revised", watched)
+    a_real_reading(stand)
+    asked = ReviseAsked(key="key-00000001", runs=("0142/1",), sensor_angle_deg=9.0, why="x")
+    AgainDesk(Watched(stand.ledger), stand.history, Board(FakeClock())).revise(asked, "ana")
+    assert worked == [[]]
+
+
+def test_a_daemon_that_stops_keeps_nothing(stand):
+    board = Board(FakeClock())
+    desk = AgainDesk(AtOnce(stand.ledger), stand.history, board)
+    a_real_reading(stand)
+    board.close()
+    asked = ReviseAsked(key="key-00000001", runs=("0142/1",), sensor_angle_deg=9.0, why="x")
+    with pytest.raises(Refusal, match="is stopping; nothing was kept"):
+        desk.revise(asked, "ana")
+    assert stand.history.run("0142/1").readings[0].version == 1
+
+
+def test_too_many_at_once_are_refused(stand, desk, monkeypatch):
+    monkeypatch.setattr("daq.again.MOST_READINGS", 1)
+    stand.run(None)
+    stand.run(None)
+    asked = RecomputeAsked(key="key-00000001", runs=("0142/1", "0142/2"))
+    with pytest.raises(Refusal, match="hold 2 readings, and 1 may be measured again at once"):
+        desk.recompute(asked, "ana")
 
 
 # --- the build -------------------------------------------------------------------------------------------

@@ -42,7 +42,9 @@ PIECE = 1 << 16
 RING_SHARE = 0.05
 """A rest between two pulses shorter than this share of those around it: the pulse before it still rings."""
 RING_MEMORY = 16
-"""Rests looked at for that."""
+"""Rests looked at for that: the second longest of them (a standstill is longer than any) ..."""
+RING_FIRST = 6
+"""... but the longest of all before so many have been seen."""
 NEWEST = 64
 """Pulses whose width, spacing and slope are remembered."""
 ON_EDGE = 1.9
@@ -68,8 +70,8 @@ class Trigger:
 
     @property
     def margin(self) -> float:
-        """How far the nearer side is away from the level, over the dead band's half width, a tenth of the pulse
-        or four sd of the noise, whichever is most."""
+        """How far the nearer side is away from the level, over the dead band's half width, a tenth of the
+        pulse or four sd of the noise, whichever is most."""
         half = self.height / 2
         near = half if np.isnan(self.low) else half - abs(self.level - self.low - half)
         unit = max(abs(self.band), BAND_SHARE * self.height, MARGIN_NOISE * self.noise, 1e-9)
@@ -309,9 +311,18 @@ class EdgeFinder:
             piece = pulse[at:stop]
             found.append(self._scan(piece, first_index + at))
             if self._follower is not None:
+                before = self._follower.trigger
                 self._follower.feed(piece)
+                self._mind_jump(before, self._follower.trigger)
             at = stop
         return np.concatenate(found) if found else np.empty(0)
+
+    def _mind_jump(self, before: Trigger | None, now: Trigger | None) -> None:
+        """The level may jump across a signal that stands still: the mark's edge has stopped under the sensor,
+        and the pulses before are forgotten. That is no edge."""
+        if before is not None and now is not None and abs(now.level - before.level) > before.band:
+            self._armed, self._since = False, None
+            self._first_cross = self._last_cross = self._slope = np.nan
 
     def finish(self) -> Floats:
         """Edges that what has come so far decides when nothing follows: with several pulses a turn."""
@@ -426,11 +437,12 @@ class EdgeFinder:
         """Shape (n,): the pulse begins after a rest, not while the one before it rings."""
         every = np.concatenate((self._rests, rest))
         self._rests = every[len(every) - (RING_MEMORY - 1) :]
-        if every.min() >= self._ring_share * every.max():
+        if every.min() >= self._ring_share * every.max() > 0:
             return np.ones(len(rest), bool)
         around = np.lib.stride_tricks.sliding_window_view(every, RING_MEMORY)
-        second = np.partition(around, RING_MEMORY - 2, axis=1)[:, RING_MEMORY - 2]
-        return np.asarray(rest >= self._ring_share * second)
+        second, longest = np.partition(around, (RING_MEMORY - 2, RING_MEMORY - 1), axis=1)[:, -2:].T
+        early = around[:, RING_MEMORY - RING_FIRST] == 0
+        return np.asarray(rest >= self._ring_share * np.where(early, longest, second))
 
 
 def _newest(held: Floats, added: Floats) -> Floats:

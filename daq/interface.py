@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import cmath
-import math
 from collections.abc import Mapping
 from dataclasses import asdict
 from typing import Any
@@ -16,15 +14,13 @@ from daq.board import Board, Live
 from daq.clock import Clock
 from daq.control import Act, Question
 from daq.desk import Desk
+from daq.live_flags import LiveFlags
 from daq.marks import MarkDesk
 from daq.pump import Pump
 from daq.rotor_desk import RotorDesk
-from daq.signal.health import BELOW_FLOOR, flag
-from daq.signal.shapes import CIRCLE_95
 from daq.writer import Writer
-from store import asjson, consult
+from store import asjson
 from store.history import History
-from store.records import Vector
 
 Json = dict[str, Any]
 NO_PARAMETERS: frozenset[str] = frozenset()
@@ -74,10 +70,10 @@ def questions(
 ) -> tuple[Question, ...]:
     marks = mark_desk(stand, writer, history, board, analysis, clock)
 
-    served = stand_file_stamp(stand)
+    served, flags = stand_file_stamp(stand), LiveFlags(history, clock)
 
     def status(_given: Mapping[str, str]) -> Json:
-        told = status_json(stand, history, board)
+        told = status_json(stand, history, board.read(), flags)
         return {**told, "stand_file_changed": stand_file_stamp(stand) != served}
 
     return (
@@ -108,12 +104,11 @@ def shows(stand: Stand) -> dict[str, str]:
     return {c.name: c.display.name for c in stand.channels}
 
 
-def status_json(stand: Stand, history: History, board: Board) -> Json:
+def status_json(stand: Stand, history: History, live: Live, flags: LiveFlags) -> Json:
     """What ``revmark status --json`` prints."""
-    live, mount, pending, info = board.read(), history.current_mount(), history.pending_mark(), history.info()
+    mount, pending, info = history.current_mount(), history.pending_mark(), history.info()
     number = next((j.number for j in history.jobs() if mount and j.id == mount.job_id), None)
-    told = asdict(live)
-    told["derived_flags"] = _derived(history, live)
+    told = {**asdict(live), "derived_flags": flags.of(live)}
     speed = told.pop("speed_hz")
     return {
         "stand": stand.name,
@@ -126,14 +121,3 @@ def status_json(stand: Stand, history: History, board: Board) -> Json:
         "wal_reset_safe": info.sqlite_wal_reset_safe,
         "wal_bytes": info.wal_bytes,
     }
-
-
-def _derived(history: History, live: Live) -> list[str]:
-    """Flags of the live vectors that need the job's records; and those below their noise floor."""
-    low = [flag(BELOW_FLOOR, v.channel) for v in live.vectors if v.lag_deg is None]
-    vectors = [
-        Vector(v.channel, 1, cmath.rect(v.amplitude_pk, math.radians(v.lag_deg)), v.se_pk**2, v.se_pk**2,
-               0.0, CIRCLE_95 * v.se_pk, v.unit)
-        for v in live.vectors if v.lag_deg is not None
-    ]  # fmt: skip
-    return [*low, *consult.live_flags(history, vectors, live.flags)]

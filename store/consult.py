@@ -183,13 +183,17 @@ def reading_flags(story: JobStory | None, run: Run, reading: Reading) -> tuple[s
     return tuple(standing_flags.floor_flags(reading))
 
 
-def live_flags(history: History, vectors: Sequence[Vector], flags: Sequence[str]) -> tuple[str, ...]:
-    """What the records add to the flags of the vectors as they stand now, of the run that is open."""
-    run = history.open_run() if vectors else None
+def open_run_told(history: History) -> tuple[JobStory, Run] | None:
+    """The run that is open, with its job's story; None when there is none or it belongs to no job."""
+    run = history.open_run()
     if run is None or run.job_number is None:
-        return ()
-    now = Reading(run.id, run.id, 0, 0, 0.0, 0.0, 0, {}, tuple(flags), tuple(vectors))
-    return standing_flags.derived_flags(history.job_story(run.job_number), run, now)
+        return None
+    return history.job_story(run.job_number), run
+
+
+def reading_now(run: Run, vectors: Sequence[Vector], flags: Sequence[str]) -> Reading:
+    """Vectors as they stand now, as a reading of the open run that nobody stored."""
+    return Reading(run.id, run.id, 0, 0, 0.0, 0.0, 0, {}, tuple(flags), tuple(vectors))
 
 
 def reading_json(history: History, reading: Reading, job: str) -> Json:

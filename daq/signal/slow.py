@@ -7,6 +7,7 @@ of its own tells the whole of it, as far as noise lets it.
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -61,71 +62,81 @@ def swing(
     times_s: Floats, values: NDArray[np.complex128 | np.float64], block_s: float, slowest_s: float
 ) -> Swing:
     """Fit offset, cosine and sine to ``values`` (n, columns) at periods from two blocks to ``slowest_s``."""
-    cos, sin, moments, gain, hz = _trials(times_s, block_s, slowest_s)
-    centred = values - values.mean(axis=0)
-    cc, ss, cs = moments
-    along_c, along_s = cos @ centred, sin @ centred
-    det = (cc * ss - cs**2)[:, None]
-    a = (ss[:, None] * along_c - cs[:, None] * along_s) / det
-    b = (cc[:, None] * along_s - cs[:, None] * along_c) / det
-    explained = np.real(np.conj(a) * along_c + np.conj(b) * along_s)
+    trials = _trials(_in_blocks(times_s, block_s), round(slowest_s / block_s, 2))
+    centred = np.asarray(values - values.mean(axis=0), np.complex128)
+    along = (trials.pairs @ centred.view(np.float64)).reshape(2, -1, centred.shape[1], 2)
+    explained = np.einsum("pfci,pfci->fc", along, along)
     best = np.argmax(explained, axis=0)
     columns = np.arange(centred.shape[1])
-    worst = 1 / np.sqrt(_least(cc, ss, cs))
-    total = np.sum(np.abs(centred) ** 2, axis=0)
+    first, second = along[0, best, columns].view(np.complex128), along[1, best, columns].view(np.complex128)
+    b = second[:, 0] * trials.second[best]
+    a = first[:, 0] * trials.first[best] - b * trials.mixed[best]
     taken = explained[best, columns]
     return Swing(
-        travel=_travel(a[best, columns], b[best, columns]) / gain[best],
+        travel=_travel(a, b) / trials.gain[best],
         explained=taken,
-        left=np.maximum(0.0, total - taken),
-        per_se=2 * worst[best] / gain[best],
-        period_s=1 / hz[best],
+        left=np.maximum(0.0, np.sum(np.abs(centred) ** 2, axis=0) - taken),
+        per_se=2 * trials.worst[best] / trials.gain[best],
+        period_s=block_s / trials.per_block[best],
     )
 
 
-def told_over_block_se(times_s: Floats, slowest_s: float, sd: float) -> float:
+def told_over_block_se(times_s: Floats, block_s: float, slowest_s: float, sd: float) -> float:
     """Amplitude of a swing of the slowest period that noise cannot hide, over the standard error per
     component of one block: ``sd`` times its own standard error in the direction known worst."""
-    hz = np.array([1.0 / slowest_s])
-    _, _, moments = _waves(times_s, hz)
-    return sd / float(np.sqrt(_least(*moments)[0]))
+    return sd * float(_trials(_in_blocks(times_s, block_s), round(slowest_s / block_s, 2)).worst[0])
 
 
-def _trials(
-    times_s: Floats, block_s: float, slowest_s: float
-) -> tuple[Floats, Floats, tuple[Floats, Floats, Floats], Floats, Floats]:
-    hz = _trial_hz(times_s[-1] - times_s[0] + block_s, block_s, slowest_s)
-    cos, sin, moments = _waves(times_s, hz)
-    good = _least(*moments) > 1e-6 * len(times_s)  # at two blocks a period one of the two may vanish
-    cc, ss, cs = (m[good] for m in moments)
-    return cos[good], sin[good], (cc, ss, cs), np.sinc(hz[good] * block_s), hz[good]
+@dataclass(frozen=True, slots=True, eq=False)
+class _Trials:
+    """Of each trial frequency (in cycles a block) cosine and sine about their means, made orthonormal."""
+
+    pairs: Floats
+    """Shape (2 trials, n): the first of all pairs, then the second of all."""
+    first: Floats
+    """What makes the coefficient of the cosine from the projections; the sine's from ``second``."""
+    second: Floats
+    mixed: Floats
+    gain: Floats
+    """What a block's mean leaves of it."""
+    worst: Floats
+    """Standard error of the amplitude over that of one block, in the direction known worst."""
+    per_block: Floats
 
 
-def _trial_hz(length_s: float, block_s: float, slowest_s: float) -> Floats:
-    """Frequencies from the slowest to two blocks a period."""
-    at, last = length_s / slowest_s, 0.5 * length_s / block_s + 0.01
+def _in_blocks(times_s: Floats, block_s: float) -> tuple[float, ...]:
+    """Times from the middle, to a thousandth of a block: at a steady speed the same again and again."""
+    found: list[float] = np.round((times_s - times_s.mean()) / block_s, 3).tolist()
+    return tuple(found)
+
+
+@lru_cache(maxsize=8)
+def _trials(at: tuple[float, ...], slowest: float) -> _Trials:
+    per_block = _trial_frequencies(len(at), slowest)
+    turns = 2 * np.pi * np.outer(per_block, at)
+    cos, sin = np.cos(turns), np.sin(turns)
+    cos -= cos.mean(axis=1, keepdims=True)
+    sin -= sin.mean(axis=1, keepdims=True)
+    cc, ss, cs = (np.einsum("ij,ij->i", p, q) for p, q in ((cos, cos), (sin, sin), (cos, sin)))
+    least = (cc + ss) / 2 - np.hypot((cc - ss) / 2, cs)
+    good = least > 1e-6 * len(at)  # at two blocks a period one of the two may vanish
+    cos, sin, cc, ss, cs = cos[good], sin[good], cc[good], ss[good], cs[good]
+    first, mixed = 1 / np.sqrt(cc), cs / cc
+    second = 1 / np.sqrt(ss - cs * mixed)
+    pairs = np.concatenate((first[:, None] * cos, second[:, None] * (sin - mixed[:, None] * cos)))
+    per_block = per_block[good]
+    return _Trials(pairs, first, second, mixed, np.sinc(per_block), 1 / np.sqrt(least[good]), per_block)
+
+
+def _trial_frequencies(blocks: int, slowest: float) -> Floats:
+    """Cycles a block, from one in ``slowest`` blocks to one in two; closer below a cycle seen."""
+    at, last = blocks / slowest, 0.5 * blocks + 0.01
     parts = []
     for until, steps in STEPS:
         parts.append(np.arange(at, min(until, last), 1.0 / steps))
         at = max(at, min(until, last))
-    found: Floats = np.concatenate(parts) / length_s
+    found: Floats = np.concatenate(parts) / blocks
     return found
-
-
-def _waves(times_s: Floats, hz: Floats) -> tuple[Floats, Floats, tuple[Floats, Floats, Floats]]:
-    """Cosines and sines (trials, n) about their means, and their sums of squares and of products."""
-    turns = 2 * np.pi * np.outer(hz, times_s - times_s.mean())
-    cos, sin = np.cos(turns), np.sin(turns)
-    cos -= cos.mean(axis=1, keepdims=True)
-    sin -= sin.mean(axis=1, keepdims=True)
-    sums = tuple(np.einsum("ij,ij->i", p, q) for p, q in ((cos, cos), (sin, sin), (cos, sin)))
-    return cos, sin, (sums[0], sums[1], sums[2])
-
-
-def _least(cc: Floats, ss: Floats, cs: Floats) -> Floats:
-    """Smaller eigenvalue of each [[cc, cs], [cs, ss]]."""
-    least: Floats = (cc + ss) / 2 - np.hypot((cc - ss) / 2, cs)
-    return least
 
 
 def _travel(a: Complexes, b: Complexes) -> Floats:

@@ -450,7 +450,7 @@ def _slow(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]) ->
     se = found.per_se * np.sqrt(noise2)
     chance = found.travel * np.sqrt(BEAT_SE2 * noise2 / np.maximum(found.explained, 1e-300))
     allowed = _allowed(blocks, limits, probes)
-    told = np.sqrt(noise2) * told_over_block_se(blocks.times_s, slowest_s, TOLD_SD)
+    told = np.sqrt(noise2) * told_over_block_se(blocks.times_s, blocks.block_s, slowest_s, TOLD_SD)
     told = np.maximum(told, DRIFT_TOLD_SE * _drift_se(blocks, limits))
     most = np.maximum(allowed - MARGIN_SE * se, np.minimum(chance, 10 * found.travel))
     yield from _each("beat", probes, found.travel, most)

@@ -36,7 +36,7 @@ def test_what_noise_hides_of_half_a_period() -> None:
     """Worst is a cosine about the middle of half its period: its variance about its own mean is
     1/2 - (2/pi)**2 = 0.0947 (integrals by hand), so its amplitude has sd 1 / sqrt(0.0947 n) of a block's."""
     times = (np.arange(800) + 0.5) * 0.00375
-    assert told_over_block_se(times, 6.0, 5.0) == pytest.approx(5 / np.sqrt(800 * 0.0947), rel=2e-3)
+    assert told_over_block_se(times, 0.00375, 6.0, 5.0) == pytest.approx(5 / np.sqrt(800 * 0.0947), rel=2e-3)
 
 
 def test_noise_alone_seldom_makes_a_swing() -> None:

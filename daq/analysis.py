@@ -11,6 +11,7 @@ import threading
 from collections import deque
 from collections.abc import Callable, Sequence
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -69,6 +70,7 @@ class Analysis:
         """Sample from which the open run counts."""
         self._taken = 0
         self._speed_hz: float | None = None
+        self._shown: tuple[BlockFit, tuple[LiveVector, ...]] | None = None
 
     def want_fresh(self, from_sample: int) -> None:
         """Take a reading whose samples all lie at or after ``from_sample``, as soon as it is steady."""
@@ -121,7 +123,8 @@ class Analysis:
             longest_s=longest_window_s(self._stand, info),
         )
         self._floors = np.array([self._limits.change_floor(c.kind) for c in self._stand.channels])
-        self._past: deque[NDArray[np.float64]] = deque(maxlen=max(1, round(QUIET_RMS_S / HOP_S)))
+        self._past: deque[NDArray[Any]] = deque(maxlen=max(1, round(QUIET_RMS_S / HOP_S)))
+        """Of each hop every ``QUIET_STEP``-th sample of the probes; once asked for, their rms instead."""
         self._turning_rms = np.zeros(len(channels))
         self._recorder.set_up(info)
         self._origin = Origin(info.origin)
@@ -222,9 +225,15 @@ class Analysis:
         )
 
     def _vibrating(self, chunk: Chunk) -> bool:
-        self._past.append(ac_rms(chunk.counts[::QUIET_STEP, 1:]) * np.abs(self._units))
+        """Whether the probes move as they did while it turned; nobody asks while pulses come."""
+        self._past.append(chunk.counts[::QUIET_STEP, 1:])
+        newest, turning = self._steady.newest, self._fitter.clock
+        if turning.since_edge_s <= turning.patience_s:
+            return True
+        for i, counts in enumerate(self._past):
+            if counts.ndim == 2:
+                self._past[i] = ac_rms(counts) * np.abs(self._units)
         now = np.sqrt(np.mean(np.square(np.stack(self._past)), axis=0))
-        newest = self._steady.newest
         if self._watch.state is StandState.TURNING and newest is not None:
             self._turning_rms = newest.ac_rms
         residual = np.zeros(len(now)) if newest is None else newest.residual_sd
@@ -306,11 +315,19 @@ class Analysis:
             steady=bool(verdict and verdict.steady),
             still_out="" if verdict is None or verdict.steady else verdict.sentence,
             steadiness_notes=() if verdict is None else verdict.notes,
-            vectors=() if newest is None else self._live(newest),
+            vectors=self._live(newest),
             flags=self._live_flags(newest),
         )
 
-    def _live(self, fit: BlockFit) -> tuple[LiveVector, ...]:
+    def _live(self, fit: BlockFit | None) -> tuple[LiveVector, ...]:
+        """Vectors of the newest block, made once for each."""
+        if fit is None:
+            return ()
+        if self._shown is None or self._shown[0] is not fit:
+            self._shown = fit, self._made_live(fit)
+        return self._shown[1]
+
+    def _made_live(self, fit: BlockFit) -> tuple[LiveVector, ...]:
         size, lag = np.abs(fit.vectors), np.degrees(np.angle(fit.vectors)) % 360
         known = size > CIRCLE_95 * fit.se
         return tuple(

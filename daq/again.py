@@ -26,7 +26,7 @@ Prepared = tuple[list[RunAgain], list[Json]]
 """What the ledger shall keep, and what is said of each run."""
 
 MOST_READINGS = 3000
-"""In one request: storing 700 a second (2 vectors each, measured) holds up the writer for some seconds."""
+"""In one request: storing them (700 a second, with 3 vectors each) holds up the writer for some seconds."""
 
 
 class AgainDesk:

@@ -20,6 +20,7 @@ from cli.main import main
 from config.errors import DriverError, Refusal
 from config.stand import load_stand
 from config.templates import template_text
+from daq.drivers.wav import WavRecording
 from daq.recording import driver_options, replay
 
 RECORDINGS = Path(__file__).parents[1] / "recordings"
@@ -75,6 +76,20 @@ def test_channels_are_taken_by_input_from_another_driver_s_stand(tmp_path):
     swapped = measured(other, file, full_scale="30 V", columns={"tacho": 1, "x": 3, "y": 2})
     values = [v.value for v in swapped.plateaus[0].draft.vectors]
     assert values == [v.value for v in (*same.draft.vectors[3:], *same.draft.vectors[:3])]
+
+
+def test_a_csv_file_of_the_same_volts_gives_the_same_bits(tmp_path):
+    """24 bits over 30 V, written so that each count comes back; columns by the names of the header."""
+    wav = WavRecording(RECORDINGS / "fan-O.wav")
+    volts = wav.read(80_000) * (30 / (1 << 23))
+    wav.close()
+    header = "# rate_hz = 12800, full_scale = 30 V\ntacho,x,y\n"
+    rows = "\n".join(",".join(f"{v:.9g}" for v in row) for row in volts.tolist())
+    (tmp_path / "fan.csv").write_text(header + rows + "\n")
+    named = [(f'input = "{n}"', f'input = "{name}"') for n, name in ((1, "tacho"), (2, "x"), (3, "y"))]
+    (one,) = measured(stand(tmp_path, *named), tmp_path / "fan.csv").plateaus
+    (other,) = measured(stand(tmp_path), RECORDINGS / "fan-O.wav").plateaus
+    assert one.draft.vectors == other.draft.vectors
 
 
 def test_a_recording_of_nothing_says_so(tmp_path):

@@ -349,6 +349,7 @@ class StepFitter:
         self._scale = np.array([c.units_per_count for c in channels])
         self._volts = np.array([c.volts_per_count for c in channels])
         self._skew_s = np.array([c.skew_s for c in channels])
+        self._memory: Floats = np.empty((0, 1 + len(channels)))
         self.clear()
 
     def clear(self) -> None:
@@ -387,9 +388,9 @@ class StepFitter:
             return []
         bounds = turns.first_samples[[at[0][0], *(k for _, k in at)]]
         sums = [_Sums(1 + 2 * len(orders), 1 + len(self._scale)) for _ in at]
-        reference = np.rint(self._samples(bounds[0], bounds[1])[:256].mean(axis=0, dtype=np.float64))
+        reference = np.rint(self._less(0.0, int(bounds[0]), int(bounds[1]))[:256].mean(axis=0))
         for fractions, a, b in turn_pieces(whole):
-            rows, y = basis(fractions, orders), self._samples(a, b) - reference
+            rows, y = basis(fractions, orders), self._less(reference, a, b)
             for n in range(int(np.searchsorted(bounds, a, "right")) - 1, len(at)):
                 low, high = max(int(bounds[n]), a) - a, min(int(bounds[n + 1]), b) - a
                 if low >= high:
@@ -413,13 +414,17 @@ class StepFitter:
             gap_v=(offset + reference)[1:] * self._volts,
         )
 
-    def _samples(self, start: int, stop: int) -> NDArray[Any]:
-        parts = [
-            counts[max(start - at, 0) : stop - at]
-            for at, counts in self._chunks
-            if at < stop and at + len(counts) > start
-        ]
-        return parts[0] if len(parts) == 1 else np.concatenate(parts)
+    def _less(self, reference: Floats | float, start: int, stop: int) -> Floats:
+        """Counts of samples ``start`` to ``stop`` less ``reference``, in memory that is used again."""
+        frames = stop - start
+        if len(self._memory) < frames:
+            self._memory = np.empty((frames, 1 + len(self._scale)))
+        y = self._memory[:frames]
+        for at, counts in self._chunks:
+            low, high = max(start, at), min(stop, at + len(counts))
+            if low < high:
+                np.subtract(counts[low - at : high - at], reference, out=y[low - start : high - start])
+        return y
 
 
 def between_marks(mended: Mended) -> NDArray[np.bool_]:

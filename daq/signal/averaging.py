@@ -6,11 +6,9 @@ trend by more, noise is coloured, and the scatter tells it, roughly: that of 8 b
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
 import numpy as np
 
-from daq.signal.shapes import BlockFit, Complexes, Floats
+from daq.signal.shapes import Complexes, Floats
 
 BEYOND_SD = 3.1
 """A scatter beyond so many standard deviations of chance (0.1 %, one side) shows coloured noise."""
@@ -52,18 +50,17 @@ def _scatter(vectors: Complexes) -> tuple[Floats, int]:
     return square / freedom / len(vectors), freedom
 
 
-def widening(fits: Sequence[BlockFit]) -> Floats:
-    """Shape (probes,): factor on the white variance of a mean of blocks like ``fits`` (in order of time)."""
-    vectors = np.stack([f.vectors for f in fits])
-    white = np.mean(np.stack([f.se for f in fits]) ** 2, axis=0)
-    if len(fits) < 4:
+def widening(vectors: Complexes, white: Floats) -> Floats:
+    """Shape (probes,): factor on the white variance of a mean of blocks; ``vectors`` (blocks, probes) in
+    order of time, ``white`` (probes,) the variance per component of one of them."""
+    count = len(vectors)
+    if count < 4:
         return np.ones(len(white))
     found = colour(*_own(vectors, white))
     together = 2
-    while len(fits) // together >= FEWEST_GROUPS:
-        groups = len(fits) // together
-        newest = vectors[len(fits) - groups * together :]
-        means = newest.reshape(groups, together, -1).mean(axis=1)
+    while count // together >= FEWEST_GROUPS:
+        groups = count // together
+        means = vectors[count - groups * together :].reshape(groups, together, -1).mean(axis=1)
         scatter, own, freedom = _own(means, white / together)
         slow = scatter > own * chi_square_quantile(freedom, BEYOND_SD)
         found = np.where(slow, np.maximum(found, colour(scatter, own, freedom)), found)

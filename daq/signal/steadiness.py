@@ -282,22 +282,25 @@ class _Blocks:
 
     def __init__(self, window: Sequence[BlockFit]) -> None:
         self.window = window
-        turns = np.array([f.revolutions for f in window], np.float64)
-        self.share: Floats = turns / turns.sum()
-        self.times_s: Floats = np.array([(f.t_start_s + f.t_end_s) / 2 for f in window])
-        self.speeds: Floats = np.array([f.speed_hz for f in window])
+        told = np.array([(f.revolutions, f.t_start_s, f.t_end_s, f.speed_hz, f.speed_sd_hz) for f in window])
+        self.share: Floats = told[:, 0] / told[:, 0].sum()
+        self.times_s: Floats = (told[:, 1] + told[:, 2]) / 2
+        self.speeds: Floats = told[:, 3]
+        self.speed_sd: Floats = told[:, 4]
         self.speed_hz = float(self.share @ self.speeds)
         self.length_s = window[-1].t_end_s - window[0].t_start_s
         self.block_s = self.length_s / len(window)
-        self.vectors: Complexes = np.stack([f.vectors for f in window])
+        self.vectors: Complexes = np.array([f.vectors for f in window])
         self.mean: Complexes = self.share @ self.vectors
         self.size: Floats = np.abs(self.mean)
-        se2 = np.stack([f.se for f in window]) ** 2
-        self.block_se2: Floats = se2.mean(axis=0)
+        self.se2: Floats = np.array([f.se for f in window]) ** 2
+        self.block_se2: Floats = self.se2.mean(axis=0)
         """White, of one block."""
-        self.widening: Floats = widening(window)
-        self.se: Floats = np.sqrt(self.share**2 @ se2 * self.widening)
+        self.widening: Floats = widening(self.vectors, self.block_se2)
+        self.se: Floats = np.sqrt(self.share**2 @ self.se2 * self.widening)
         """Of the mean, coloured noise included."""
+        away = self.times_s - self.times_s.mean()
+        self.spread_s = math.sqrt(float(away @ away))
 
     def shortest_s(self, limits: SteadinessLimits) -> float:
         """Length of the shortest window at this speed."""
@@ -311,8 +314,7 @@ def _mean_speed(window: Sequence[BlockFit]) -> float:
 
 def _speed(window: Sequence[BlockFit], blocks: _Blocks, limits: SteadinessLimits) -> Iterator[Figure]:
     mean, count = blocks.speed_hz, len(window)
-    within = np.array([f.speed_sd_hz for f in window])
-    sd = np.sqrt(np.var(blocks.speeds, ddof=1) + np.mean(within**2))
+    sd = np.sqrt(np.var(blocks.speeds, ddof=1) + np.mean(blocks.speed_sd**2))
     line = trend(blocks.times_s, blocks.speeds[:, None])
     slope = float(line.rate[0].real)
     left = blocks.speeds - mean - slope * (blocks.times_s - blocks.times_s.mean())
@@ -367,12 +369,9 @@ class _Mean:
     se: Floats
 
 
-def _mean(fits: Sequence[BlockFit]) -> _Mean:
-    turns = np.array([f.revolutions for f in fits], np.float64)
-    share = turns / turns.sum()
-    vectors = np.stack([f.vectors for f in fits])
-    se = np.stack([f.se for f in fits])
-    return _Mean(share @ vectors, np.sqrt((share**2) @ se**2))
+def _mean(blocks: _Blocks, part: slice = slice(None)) -> _Mean:
+    share = blocks.share[part] / blocks.share[part].sum()
+    return _Mean(share @ blocks.vectors[part], np.sqrt(share**2 @ blocks.se2[part]))
 
 
 def _allowed(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]) -> Floats:
@@ -385,7 +384,7 @@ def _allowed(blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe])
 def _vectors(
     history: Sequence[BlockFit], blocks: _Blocks, limits: SteadinessLimits, probes: Sequence[Probe]
 ) -> Iterator[Figure]:
-    earlier, later, looked = _compared(history, blocks.window, limits)
+    earlier, later, looked = _compared(history, blocks, limits)
     if limits.lookback_s > 0:
         yield looked
     one_se, vectors = np.sqrt(blocks.block_se2), blocks.vectors
@@ -413,27 +412,26 @@ def _each(name: str, probes: Sequence[Probe], values: Floats, most: Floats) -> I
 
 def _drift_se(blocks: _Blocks, limits: SteadinessLimits) -> Floats:
     """Standard error per component of what the trend makes of the vectors from one window to the next."""
-    spread_s = float(np.sqrt(np.sum((blocks.times_s - blocks.times_s.mean()) ** 2)))
-    found: Floats = np.sqrt(blocks.block_se2 * blocks.widening) * blocks.shortest_s(limits) / spread_s
+    scale = blocks.shortest_s(limits) / blocks.spread_s
+    found: Floats = np.sqrt(blocks.block_se2 * blocks.widening) * scale
     return found
 
 
 def _compared(
-    history: Sequence[BlockFit], window: Sequence[BlockFit], limits: SteadinessLimits
+    history: Sequence[BlockFit], blocks: _Blocks, limits: SteadinessLimits
 ) -> tuple[_Mean | None, _Mean | None, Figure]:
     """The two means whose distance is the change: the halves of the window, or the window now and the one
     that lies ``lookback_s`` back; and how far back the vectors go."""
     reach_s = history[-1].t_end_s - history[0].t_start_s
-    length_s = window[-1].t_end_s - window[0].t_start_s
-    figure = _at_least("lookback", reach_s, limits.lookback_s + length_s, "s")
+    figure = _at_least("lookback", reach_s, limits.lookback_s + blocks.length_s, "s")
     if limits.lookback_s <= 0:
-        half = len(window) // 2
-        return _mean(window[:half]), _mean(window[-half:]), figure
-    past = [f for f in history if f.t_end_s <= window[-1].t_end_s - limits.lookback_s]
+        half = len(blocks.window) // 2
+        return _mean(blocks, slice(None, half)), _mean(blocks, slice(-half, None)), figure
+    past = [f for f in history if f.t_end_s <= history[-1].t_end_s - limits.lookback_s]
     then = shortest(past, limits)
     if not all(f.ok for f in _filled(then, limits)):
         return None, None, Figure("lookback", None, reach_s, figure.limit, "s", ok=False)
-    return _mean(then), _mean(window), figure
+    return _mean(_Blocks(then)), _mean(blocks), figure
 
 
 # --- what is slow, and what is noise ----------------------------------------------------------------------

@@ -7,15 +7,6 @@ import pytest
 from numpy.typing import NDArray
 
 from daq.signal.averaging import chi_square_quantile, colour, widening
-from daq.signal.shapes import BlockFit
-
-
-def fits(vectors: NDArray[np.complex128], se: float) -> list[BlockFit]:
-    nothing = np.zeros(vectors.shape[1])
-    return [
-        BlockFit(0, k, k + 1, float(k), k + 1.0, 40, 40.0, 0.0, v, nothing + se, nothing, nothing, nothing)
-        for k, v in enumerate(vectors)
-    ]
 
 
 def complex_noise(rng: np.random.Generator, n: int, columns: int) -> NDArray[np.complex128]:
@@ -33,7 +24,7 @@ def test_chi_square(freedom: int, sd: float, quantile: float) -> None:
 
 def test_white_noise_is_seldom_widened_by_much() -> None:
     rng = np.random.default_rng(1)
-    factors = widening(fits(complex_noise(rng, 8, 20_000), 1.0))
+    factors = widening(complex_noise(rng, 8, 20_000), np.ones(20_000))
     assert factors.min() == 1.0
     assert np.mean(factors) < 1.25
     # beyond chance in 0.1 % of cases only, by its definition; then the factor is about 3 or more
@@ -53,7 +44,7 @@ def test_coloured_noise_is_not_taken_for_white(blocks: int, memory: float, large
     for k in range(1, len(noise)):
         noise[k] += memory * noise[k - 1]
     noise = noise[20:]
-    se = np.sqrt(widening(fits(noise, 1.0)) / blocks)
+    se = np.sqrt(widening(noise, np.ones(4000)) / blocks)
     plain = np.mean(np.abs(noise.mean(axis=0)) > 2.448 / np.sqrt(blocks))
     assert plain > 0.8  # by the residuals alone
     assert np.mean(np.abs(noise.mean(axis=0)) > 2.448 * se) < largest_share
@@ -61,7 +52,7 @@ def test_coloured_noise_is_not_taken_for_white(blocks: int, memory: float, large
 
 def test_a_slow_drift_is_no_noise() -> None:
     drifting = np.linspace(10, 11, 8)[:, None] + 0j
-    assert widening(fits(drifting, 0.01)) == pytest.approx([1.0])
+    assert widening(drifting, np.array([1e-4])) == pytest.approx([1.0])
 
 
 def test_scatter_below_the_white_error_is_luck() -> None:

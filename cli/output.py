@@ -162,6 +162,11 @@ def figures(value: float) -> str:
     return f"{value:.{min(9, max(0, 2 - math.floor(math.log10(abs(value)))))}f}"
 
 
+def count(number: int, what: str) -> str:
+    """``1 run``, ``2 runs``."""
+    return f"{number} {what}{'' if number == 1 else 's'}"
+
+
 def local(at_utc: str | None, zone: tzinfo) -> str:
     """A time of the JSON answers in a time zone, to the second and without the zone's name."""
     from datetime import datetime

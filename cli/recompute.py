@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from cli.client import Client, find, new_key
-from cli.output import clean, json_option, operator_option, print_json, say, stand_option, warn
+from cli.output import clean, count, json_option, operator_option, print_json, say, stand_option, warn
 from cli.typed import OfChannel, Quantity, parse_sense_of_positive, parse_stand_angle
 from config.onethread import one_thread
 from config.units import BASE_UNIT, parse_sensitivity
@@ -86,7 +86,7 @@ def _report(found: Iterable[Again], *, quiet: bool, as_json: bool) -> int:
 
 def _summed(counts: Mapping[str, int]) -> Iterator[str]:
     yield (
-        f"{sum(counts.values())} readings: {counts['identical']} identical to the last bit, "
+        f"{count(sum(counts.values()), 'reading')}: {counts['identical']} identical to the last bit, "
         f"{counts['within']} within rounding, {counts['apart']} apart, {counts['not']} not measured again"
     )
 
@@ -200,7 +200,7 @@ def _print_revised(answer: Json) -> None:
     for one in answer["runs"]:
         again = [r for r in one["readings"] if not r["why_not"]]
         scaled = [r for r in one["readings"] if r["why_not"]]
-        say(f"Run {clean(one['run'])} has the corrected set-up: {len(again)} readings measured again"
+        say(f"Run {clean(one['run'])} has the corrected set-up: {count(len(again), 'reading')} measured again"
             + (f", {len(scaled)} scaled." if scaled else "."))  # fmt: skip
         for r in scaled:
             say(f"  reading {r['reading']} was scaled exactly, not measured: {clean(r['why_not'])}")

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from cli.output import clean, json_option, print_json, say, warn
+from cli.output import clean, count, json_option, print_json, say, warn
 from config.onethread import one_thread
 
 if TYPE_CHECKING:
@@ -59,14 +59,10 @@ def command(
     if as_json:
         print_json(_json(file, told, found))
         return
-    say("", f"{clean(found.source)}, {found.seconds:.1f} s: {_count(found.runs, 'run')}, "
-            f"{_count(len(found.plateaus), 'steady plateau')}; nothing was stored")  # fmt: skip
+    say("", f"{clean(found.source)}, {found.seconds:.1f} s: {count(found.runs, 'run')}, "
+            f"{count(len(found.plateaus), 'steady plateau')}; nothing was stored")  # fmt: skip
     for note in found.notes:
         warn(f"note: {clean(note)}")
-
-
-def _count(number: int, what: str) -> str:
-    return f"{number} {what}{'' if number == 1 else 's'}"
 
 
 def _json(file: Path, stand: Stand, found: Found) -> Json:

@@ -33,6 +33,8 @@ SKIRT = 4.0
 LOWEST = 3.0
 """No line is looked for below this over the length of the window: drift lives there."""
 STEPS = 6
+BLOCK = 128
+"""Rows multiplied at once."""
 CANDIDATES = 5
 """Points of a spectrum that are looked at closely."""
 STRONG_SHARE = 0.25
@@ -55,6 +57,8 @@ class Found:
     """Shape (lines,): frequency over speed."""
     weights: Floats
     """Shape (2 lines, probes): of cosine and sine from ``origin`` on; 0 where a line is not in a probe."""
+    power: Floats
+    """Shape (probes,): mean square that the lines take from the residual."""
     origin: float
     """Angle zero of the lines, in turns from the first edge."""
     hidden: Floats
@@ -78,6 +82,7 @@ def nothing(orders: int, probes: int) -> Found:
     return Found(
         orders=np.empty(0),
         weights=np.empty((0, probes)),
+        power=np.zeros(probes),
         origin=0.0,
         hidden=np.zeros((orders, probes)),
         mains=False,
@@ -98,7 +103,7 @@ def search(
     look = _Search(rows, fit, parts)
     while len(look.found) < MOST_LINES and look.another():
         pass
-    weights, shown = look.weights()
+    weights, shown, power = look.weights()
     hidden = np.zeros(values.shape)
     by_peaks = look.beside_orders(values)
     by_mains = look.mains(near, speed_hz)
@@ -110,6 +115,7 @@ def search(
     return Found(
         orders=look.found[shown],
         weights=weights[np.repeat(shown, 2)],
+        power=power,
         origin=look.rows.middle,
         hidden=hidden,
         mains=bool(by_mains.any()),
@@ -124,6 +130,7 @@ class _Search:
     def __init__(self, rows: Rows, fit: Fit, parts: int) -> None:
         self.rows = rows
         self.fitted = fit.orders
+        self._values = fit.values
         self._first = np.abs(fit.value(1))
         self._part_turns = rows.turns / max(parts, 1)
         self._scatters = SCATTERS * fit.residual_sd * np.sqrt(2 * parts / max(fit.samples, 1))
@@ -139,19 +146,22 @@ class _Search:
         """What cannot be told apart, in orders."""
         return NEAR / self.rows.turns
 
+    def _model(self) -> Floats:
+        """Offset and orders: shape (n, 1 + 2 orders)."""
+        turning = self.rows.columns(np.array(self.fitted, np.float64))
+        return np.concatenate((np.ones((len(turning), 1)), turning), axis=1)
+
     def _nuisance(self) -> Floats:
         """Offset, the orders, and a drift of each: shape (n, 2 + 4 orders)."""
-        rows = self.rows
-        along = (rows.angle - rows.middle) / max(rows.turns / 2, 1e-9)
-        turning = rows.columns(np.array(self.fitted, np.float64))
-        fixed = np.column_stack((np.ones(len(along)), along))
-        return np.concatenate((fixed, turning, turning * along[:, None]), axis=1)
+        fixed = self._model()
+        along = (self.rows.angle - self.rows.middle) / max(self.rows.turns / 2, 1e-9)
+        return np.concatenate((fixed, fixed * along[:, None]), axis=1)
 
     def _fit(self) -> tuple[Floats, Floats]:
         """Least squares of all that is known; leaves what remains. Returns (design, coefficients)."""
         design = np.concatenate((self._given, self.rows.columns(self.found)), axis=1)
         told = _solved(design, self.rows.values)
-        self._rest, self._spectrum = self.rows.values - design @ told, None
+        self._rest, self._spectrum = self.rows.values - _applied(design, told), None
         return design, told
 
     # --- a new line --------------------------------------------------------------------------------------
@@ -246,24 +256,41 @@ class _Search:
         curve, pull = np.zeros((count, count)), np.zeros(count)
         for p, rest in enumerate(self._rest.T):
             slopes = lean * (lines[:, ::2] * weights[1::2, p] - lines[:, 1::2] * weights[::2, p])
-            left = slopes - design @ _solved(design, slopes)
-            curve += left.T @ left / noise[p]
-            pull += left.T @ rest / noise[p]
+            left = slopes - _applied(design, _solved(design, slopes))
+            curve += _crossed(left, left) / noise[p]
+            pull += _crossed(left, rest[:, None])[:, 0] / noise[p]
         curve[np.diag_indices(count)] *= 1 + 1e-9
         return np.asarray(np.linalg.solve(curve, pull), np.float64)
 
     # --- what it amounts to ------------------------------------------------------------------------------
 
-    def weights(self) -> tuple[Floats, NDArray[np.bool_]]:
-        """Cosine and sine of each line in each probe, 0 where it does not stand out there, and which lines
-        stand out in any."""
+    def weights(self) -> tuple[Floats, NDArray[np.bool_], Floats]:
+        """Cosine and sine of each line in each probe beside offset and orders, 0 where it does not stand out
+        there; which lines stand out in any; by how much they lessen the mean square of the residual."""
+        rows, fixed = self.rows, self._model()
         if not len(self.found):
-            return np.empty((0, self.rows.values.shape[1])), np.zeros(0, bool)
-        _, told = self._fit()
-        weights = told[self._given.shape[1] :]
-        noise = np.array([self._noise(order) for order in self.found]).reshape(-1, weights.shape[1])
-        shown = weights[::2] ** 2 + weights[1::2] ** 2 > SIGNIFICANT * noise
-        return weights * np.repeat(shown, 2, axis=0), np.asarray(shown.any(axis=1))
+            return np.empty((0, rows.values.shape[1])), np.zeros(0, bool), np.zeros(rows.values.shape[1])
+        noise = np.array([self._noise(order) for order in self.found])
+        before = self._without_orders(fixed)
+        design = np.concatenate((fixed, rows.columns(self.found)), axis=1)
+        told = _solved(design, rows.values)
+        after = rows.values - _applied(design, told)
+        weights = told[fixed.shape[1] :]
+        squared = weights[::2] ** 2 + weights[1::2] ** 2
+        lost = np.array([1 - np.mean(rows.pull(order) ** 2) for order in self.found])
+        less = np.average(before**2 - after**2, axis=0, weights=rows.size) + lost @ squared / 2
+        shown = squared > SIGNIFICANT * noise
+        return weights * np.repeat(shown, 2, axis=0), np.asarray(shown.any(axis=1)), less * shown.any(axis=0)
+
+    def _without_orders(self, fixed: Floats) -> Floats:
+        """What the fit over all samples leaves of the bins: its values, not those of a fit of the bins, so
+        that squares of bins and of samples belong to one residual."""
+        orders = np.array(self.fitted)[:, None]
+        turned = self._values * np.exp(-2j * np.pi * ((orders * self.rows.middle) % 1.0))
+        told = np.zeros((fixed.shape[1], turned.shape[1]))
+        told[1::2], told[2::2] = turned.real, turned.imag
+        left = self.rows.values - _applied(fixed, told)
+        return left - np.average(left, axis=0, weights=self.rows.size)
 
     def _noise(self, order: float) -> Floats:
         """Mean squared amplitude that noise would show at ``order``; shape (probes,)."""
@@ -339,9 +366,26 @@ def _blockwise(power: Floats) -> Floats:
 
 def _solved(design: Floats, values: Floats) -> Floats:
     """Least squares by the normal equations; the columns are near orthogonal."""
-    gram = design.T @ design
+    gram = _crossed(design, design)
     gram[np.diag_indices_from(gram)] *= 1 + 1e-12
-    return np.asarray(np.linalg.solve(gram, design.T @ values), np.float64)
+    return np.asarray(np.linalg.solve(gram, _crossed(design, values)), np.float64)
+
+
+def _crossed(one: Floats, other: Floats) -> Floats:
+    """``one.T @ other`` in blocks so small that no library spreads them over threads: quicker on a busy
+    machine, and the same bits on any."""
+    total = np.zeros((one.shape[1], other.shape[1]))
+    for i in range(0, len(one), BLOCK):
+        total += one[i : i + BLOCK].T @ other[i : i + BLOCK]
+    return total
+
+
+def _applied(design: Floats, told: Floats) -> Floats:
+    """``design @ told``, in blocks for the same reason."""
+    out = np.empty((len(design), told.shape[1]))
+    for i in range(0, len(design), BLOCK):
+        np.matmul(design[i : i + BLOCK], told, out=out[i : i + BLOCK])
+    return out
 
 
 def leak(rows: Rows, orders: Sequence[int], found: Found, first: int, stop: int) -> Floats:

@@ -160,10 +160,11 @@ def _without_lines(sums: _Sums, rows: Rows, found: lines.Found) -> _Sums:
         _turned(fit, lines.leak(rows, orders, found, first, stop) @ found.weights)
         for (first, stop), fit in zip(sums.cuts, sums.parts, strict=True)
     ]
-    all_turns = 0, len(sums.turns.good)
-    whole = _turned(sums.fit, lines.leak(rows, orders, found, *all_turns) @ found.weights)
-    before = whole.residual_sd**2
-    after = np.maximum(before - (found.amplitudes**2).sum(axis=0) / 2, 0.0)
+    extra = lines.leak(rows, orders, found, 0, len(sums.turns.good)) @ found.weights
+    whole = _turned(sums.fit, extra)
+    before, free = whole.residual_sd**2, whole.samples - 1 - 2 * len(orders)
+    left = before * free - found.power * whole.samples
+    after = np.maximum(left / (free - 3 * len(found.orders)), 0.0)
     share = np.divide(after, before, out=np.ones_like(before), where=before > 0)
     less = replace(whole, residual_sd=np.sqrt(after), cov=whole.cov * share[None, :, None, None])
     return replace(sums, fit=less, parts=parts)

@@ -65,7 +65,7 @@ def test_bias_with_a_gap_harmonics_and_a_ramp_in_sixteen_bits(
     assert np.degrees(se) < 0.02
     assert only(m, order=2).value / probe[2] == pytest.approx(1.0, abs=2e-3)
     assert only(m, order=3).value / probe[3] == pytest.approx(1.0, abs=4e-3)
-    assert m.flags == ()
+    assert m.flags == (("speed_hunting",) if ramp else ())  # 1 %/s over 3 s: sd 0.87 %
     level = m.level("probe 1")
     assert level is not None
     assert level.gap_v == pytest.approx(-10.0, abs=1e-3)
@@ -254,8 +254,10 @@ def test_clipped_flat_gap_and_weak_are_flagged_by_channel(signal: Callable[..., 
         "weak_1x:probe 1",  # three samples at the end of the scale are noise of many um
         "weak_1x:probe 2",
         "flat:probe 3",
+        "below_floor:probe 3",
         "gap_voltage:probe 4",
         "weak_1x:probe 5",
+        "below_floor:probe 5",
     }
     assert describe(m.flags)[0].startswith("probe 1 is clipped")
     assert len(m.vectors) == 15  # a flag takes nothing away
@@ -277,13 +279,13 @@ def blank_pulses(s: Any, counts: NDArray[Any], turns: list[int]) -> None:
     counts[np.isin(at, turns), 0] = int(-8.0 / s.volts_per_count)
 
 
-def test_missed_pulses_cost_their_turns_and_nothing_else(signal: Callable[..., Any]) -> None:
+def test_missed_pulses_are_filled_in(signal: Callable[..., Any]) -> None:
     s = signal()
     counts = s.counts()
     blank_pulses(s, counts, [20, 50, 51, 90])
     m = measure(counts, s.pulse, s.channels, s.rate_hz)
     assert (m.missed, m.doubles) == (4, 0)
-    assert m.revolutions == 124 - 7
+    assert m.revolutions == 124  # at a steady speed everybody knows where they would have come
     assert m.flags == ("missed_pulses",)
     assert only(m).value == pytest.approx(s.probes[0][1], abs=1e-3)
 

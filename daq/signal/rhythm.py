@@ -29,15 +29,20 @@ FARTHEST = 0.45
 """Tolerance after several turns: places must not overlap."""
 EVEN = 0.9
 """Turns follow each other evenly when neither is shorter than this share of the other ..."""
+CHANGED = 0.7
+"""... a new length of the turn is between this share of the old one and the old one over it ..."""
 EVEN_TURNS = 4
 """... so many in a row are a rhythm at once; otherwise the most frequent length among ``TRIED`` edges is."""
-TRIED = 16
+TRIED = 32
 ALIKE = 0.2
 """Turns are of one length within this share."""
 PROBATION = 16
 """Of the first so many turns of a rhythm half may be repaired; with more it was the wrong one."""
 STRIDE = 256
 """Edges looked at together."""
+_BEFORE = np.arange(STRIDE)[:, None] + np.arange(HISTORY)
+_NEWEST = np.arange(STRIDE)[:, None] + np.arange(SCATTER)
+"""Rows of windows that move on by one."""
 
 
 def _weights(points: int, ahead: int) -> Floats:
@@ -148,7 +153,7 @@ class Rhythm:
     def _find(self, *, last: bool) -> bool:
         """Find a rhythm among the edges that wait, and go back from there to the first of them."""
         held = self._waiting
-        run = _even_run(held) or (_commonest(held) if last or len(held) >= TRIED else None)
+        run = _even_run(held[:TRIED]) or (_commonest(held) if last or len(held) >= TRIED else None)
         if run is None:
             if last:
                 alone = Mended()
@@ -194,11 +199,11 @@ class Rhythm:
             return False
         new = self._waiting[:STRIDE]
         every = np.concatenate((self._history, new))
-        place = sliding_window_view(every, HISTORY)[: len(new)] @ WEIGHTS[HISTORY][0]
+        place = every[_BEFORE[: len(new)]] @ WEIGHTS[HISTORY][0]
         turn = place - every[HISTORY - 1 : -1]
         off = np.abs(new - place) / turn
         scatter = np.concatenate((self._scatter, off))
-        median_off = np.partition(sliding_window_view(scatter, SCATTER)[: len(new)], 7, axis=1)[:, 7]
+        median_off = np.partition(scatter[_NEWEST[: len(new)]], 7, axis=1)[:, 7]
         allowed = np.clip(MISSES * median_off, *TOLERANCE)
         follows = np.append(self._waiting[1 : len(new)], self._waiting[len(new) :][:1])
         alone = follows > (place + allowed * turn)[: len(follows)]
@@ -218,7 +223,8 @@ class Rhythm:
         """Settle the next edge of the mark, one to four turns on, with the doubles before it; or give the
         rhythm up where there is none. False when edges must come first."""
         history, waiting = self._history, self._waiting
-        now, turn = float(history[-1]), float(history[-1] - history[-2])
+        now = float(history[-1])
+        turn = float(history @ WEIGHTS[len(history)][0]) - now
         allowed = float(np.clip(MISSES * median(self._scatter), *TOLERANCE))
         for turns, weights in enumerate(WEIGHTS[len(history)], start=1):
             place = float(history @ weights)
@@ -229,6 +235,10 @@ class Rhythm:
             if abs(waiting[nearest] - place) <= reach:
                 self._settle(nearest, turns, abs(float(waiting[nearest]) - place) / turn)
                 return True
+            if turns == 1 and not last and len(waiting) == 1:
+                return False
+            if turns == 1 and _changed(np.append(history[-1:], waiting[:2]), turn, allowed / 2):
+                break
         self._history = history[:0]
         if last and waiting[-1] <= now + FARTHEST * turn + turn:
             self.mended.book(len(waiting))
@@ -251,12 +261,22 @@ class Rhythm:
             self._history = self._history[:0]
 
 
+def _changed(edges: Floats, turn: float, apart: float) -> bool:
+    """Whether two turns are alike, and both longer or both shorter than the last ``turn``, by the share
+    ``apart`` at least, but not by much: then the rhythm changed, and no pulse is at fault."""
+    turns = (edges[1:] - edges[:-1]) / turn
+    short, long = float(turns.min()), float(turns.max())
+    beside = long < 1 - apart or short > 1 + apart
+    return len(turns) > 1 and beside and short >= max(CHANGED, EVEN * long) and long <= 1 / CHANGED
+
+
 def _scatter_of(edges: Floats) -> float:
     """How far edges foretold from these few may be from their places, turns."""
-    if len(edges) <= EVEN_TURNS:
+    if len(edges) < 3:
         return FIRST_SCATTER[1]
-    third = edges[3:] - 3 * edges[2:-1] + 3 * edges[1:-2] - edges[:-3]
-    sd = float(np.sqrt(np.mean(third**2) / 20)) / float(edges[-1] - edges[-2])
+    order, size = (3, 20) if len(edges) > EVEN_TURNS else (2, 6)
+    uneven = np.diff(edges, order)
+    sd = float(np.sqrt(np.mean(uneven**2) / size)) / float(edges[-1] - edges[-2])
     return min(max(2 * sd, FIRST_SCATTER[0]), FIRST_SCATTER[1])
 
 
@@ -281,8 +301,8 @@ def _even_run(edges: Floats) -> tuple[int, int] | None:
 
 
 def _commonest(edges: Floats) -> tuple[int, int] | None:
-    """First and stop edge of turns of the length that most of the first ``TRIED`` have: two of them where two
-    follow each other, else one; None when there is no turn."""
+    """First and stop edge of turns of the length that most of the first ``TRIED`` have: the two that are most
+    alike of those that follow each other, else one; None when there is no turn."""
     turns = np.diff(edges[:TRIED])
     if not len(turns):
         return None
@@ -290,7 +310,7 @@ def _commonest(edges: Floats) -> tuple[int, int] | None:
     ours = alike[int(alike.sum(axis=1).argmax())]
     pairs = ours[1:] & ours[:-1]
     if pairs.any():
-        at = int(pairs.argmax())
+        at = int(np.where(pairs, np.abs(turns[1:] - turns[:-1]), np.inf).argmin())
         return at, at + 3
     at = int(ours.argmax())
     return at, at + 2

@@ -116,8 +116,14 @@ def _lines(one: Again) -> Iterator[str]:
 def _difference(d: Difference) -> str:
     where = "" if d.channel is None else f" of {clean(d.channel)}"
     order = "" if d.order is None else f" {d.order}X"
-    by = f"differs by {d.apart:.1e} (allowed {d.tolerance:.0e})" if d.apart < 1e300 else "differs"
+    by = f"differs by {d.apart:.1e} (allowed {d.tolerance:.0e})"
+    if d.apart == float("inf"):
+        by = f"was {clean(_told(d.stored))}, is {clean(_told(d.now))}"
     return f"{d.what}{where}{order}: {by}"
+
+
+def _told(value: object) -> str:
+    return "not there" if value is None else f"{value:.6g}" if isinstance(value, float) else str(value)
 
 
 def _keep(runs: tuple[str, ...], stand: str | None, operator: str, *, as_json: bool) -> int:

@@ -41,6 +41,18 @@ class Difference:
     apart: float
     """Relative: see the tolerances; inf where it cannot be said (a flag, another number of vectors)."""
     tolerance: float
+    stored: Any = None
+    """The figure as it is stored; None where there is none."""
+    now: Any = None
+
+    def to_dict(self) -> dict[str, Any]:
+        """JSON has no inf, so what cannot be said is null; a vector is [re, im]."""
+        told = {"stored": _plain(self.stored), "now": _plain(self.now)}
+        return {**asdict(self), **told, "apart": None if self.apart == inf else self.apart}
+
+
+def _plain(value: Any) -> Any:
+    return [value.real, value.imag] if isinstance(value, complex) else value
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,15 +79,14 @@ class Again:
         return "within" if all(d.apart <= d.tolerance for d in self.differences) else "apart"
 
     def to_dict(self) -> dict[str, Any]:
-        """For ``--json``; JSON has no inf, so what cannot be said is null."""
-        listed = [{**asdict(d), "apart": None if d.apart == inf else d.apart} for d in self.differences]
+        """For ``--json``."""
         return {
             "run": self.run,
             "reading": self.reading.number,
             "version": self.beside,
             "result": self.same,
             "why_not": self.why_not or None,
-            "differences": listed,
+            "differences": [d.to_dict() for d in self.differences],
             "build": list(self.build),
         }
 
@@ -133,20 +144,21 @@ def differences(then: Measured, now: Measured) -> Iterator[Difference]:
     yield from _of_vectors(then.vectors, now.vectors)
     yield from _of_levels(then, now)
     for flag in sorted(set(then.flags) ^ set(now.flags)):
-        yield Difference(f"flag {_code(flag)}", flag.partition(":")[2] or None, None, inf, 0.0)
+        had, has = flag in then.flags, flag in now.flags
+        yield Difference(f"flag {_code(flag)}", flag.partition(":")[2] or None, None, inf, 0.0, had, has)
     yield from _of_figures("", then.figures, now.figures)
 
 
 def _unlike(what: str, a: object, b: object) -> Iterator[Difference]:
     if a != b:
-        yield Difference(what, None, None, inf, 0.0)
+        yield Difference(what, None, None, inf, 0.0, a, b)
 
 
 def _apart(
     what: str, channel: str | None, order: int | None, a: complex, b: complex, size: float, tolerance: float
 ) -> Iterator[Difference]:
     if a != b:
-        yield Difference(what, channel, order, abs(a - b) / size if size else inf, tolerance)
+        yield Difference(what, channel, order, abs(a - b) / size if size else inf, tolerance, a, b)
 
 
 def _of_vectors(then: tuple[Vector, ...], now: tuple[Vector, ...]) -> Iterator[Difference]:

@@ -118,6 +118,11 @@ def test_what_is_not_rounding():
         found = list(differences(then, now))
         assert [d.what.split()[0] for d in found] == [what]
         assert not any(d.apart <= d.tolerance for d in found)
+    (flag,) = differences(then, cases["flag"])
+    assert (flag.channel, flag.stored, flag.now) == ("probe 1", False, True)
+    (vector_apart,) = (d.to_dict() for d in differences(then, cases["vector"]))
+    assert vector_apart["stored"] == [10.0, 0.0]
+    assert vector_apart["apart"] == pytest.approx(1e-9, rel=1e-6)
     fewer = list(differences(then, replace(then, vectors=then.vectors[:2])))
     assert [(d.what, d.channel, d.order) for d in fewer] == [("vector", "probe 1", 2)]
 

@@ -345,15 +345,16 @@ def _circles(
 
 def _without(scene: Scene, whole: PolarPicture, slow: Mapping[str, Observation]) -> PolarPicture:
     """The picture less slow roll: shaft vectors and circles moved by it, the slow roll itself left out."""
-    if not any(c.channel in slow for c in whole.channels):
-        raise no_slow_roll(scene.story, scene.standing)
+    drawn = {c.channel for c in whole.channels}
+    channels = [c for c in scene.standing.set_up.channels if c.name in drawn]
+    if not drawn & slow.keys():
+        raise no_slow_roll(scene.story, channels)
     of = next(iter(slow.values()))
-    left = (c for c in scene.standing.set_up.channels if any(d.channel == c.name for d in whole.channels))
     return replace(
         whole,
         channels=tuple(_less(scene, c, slow.get(c.channel)) for c in whole.channels),
         slow_roll=(of.run_name, of.reading_number, of.speed_hz),
-        left_raw=tuple(why_left(c) for c in left if c.name not in slow),
+        left_raw=tuple(why_left(c) for c in channels if c.name not in slow),
     )
 
 

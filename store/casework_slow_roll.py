@@ -7,7 +7,7 @@ The newest reading labelled slow-roll that the run's mount and set-up allow is i
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -80,15 +80,14 @@ def runout_of(story: JobStory | None, run: Run) -> Runout:
         raise Refusal(f"The mount or the set-up of run {run.name} is not in the store.", "Check the store.")
     found = slow_rolls_in(story, standing, frozenset({run.origin}))
     if not found:
-        raise no_slow_roll(story, standing)
+        raise no_slow_roll(story, standing.set_up.channels)
     slow = {c: _slow_roll(story, c, o) for c, o in found.items()}
     left = tuple(why_left(c) for c in standing.set_up.channels if c.name not in slow)
     return Runout(slow, left)
 
 
-def no_slow_roll(story: JobStory, standing: Standing) -> Refusal:
-    """Why no slow roll can be taken off."""
-    channels = standing.set_up.channels
+def no_slow_roll(story: JobStory, channels: Sequence[ChannelSetUp]) -> Refusal:
+    """Why no slow roll can be taken off any of these channels."""
     if all(c.kind != "displacement" for c in channels):
         return Refusal(
             f"Nothing can be taken off: {' '.join(why_left(c) for c in channels)}",

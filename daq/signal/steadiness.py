@@ -1,7 +1,7 @@
 """Is the machine steady? Judged on the newest blocks; the answer says what is still out and by how much.
 
 Limits and their sources: ``config.steadiness``. All amplitudes are 0-peak in the probe's base unit. What is
-judged against its own uncertainty, and what noise may still hide: DEVELOPERS.md, decision 13.
+judged against its own uncertainty, and what noise may still hide: DEVELOPERS.md, decisions.
 """
 
 from __future__ import annotations

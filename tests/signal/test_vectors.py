@@ -9,7 +9,7 @@ import scipy.signal
 import scipy.stats
 from numpy.typing import NDArray
 
-from daq.signal.basis import basis, cos_sin
+from daq.signal.basis import basis
 from daq.signal.covariance import scatter_covariance, small_sample_factor, stated_covariance
 from daq.signal.vectors import Accumulator, Fit
 
@@ -121,21 +121,6 @@ def test_a_large_gap_costs_a_small_vector_no_digits() -> None:
     assert got.value(1)[0] == pytest.approx(want[1] + 1j * want[2], rel=1e-12)
     assert got.offset[0] + 2_796_203 == pytest.approx(want[0], abs=1e-8)
     assert got.residual_sd[0] == pytest.approx(np.std(deviation - a @ want, ddof=7), rel=1e-10)
-
-
-def test_cosine_and_sine_are_those_of_the_library() -> None:
-    u = np.concatenate((np.random.default_rng(9).uniform(0, 1, 100_000), np.arange(2049) / 2048))
-    cos, sin = cos_sin(u)
-    assert np.abs(cos - np.cos(2 * np.pi * u)).max() < 1e-15
-    assert np.abs(sin - np.sin(2 * np.pi * u)).max() < 1e-15
-
-
-def test_multiples_by_recurrence_are_cosines_and_sines() -> None:
-    u = np.random.default_rng(3).uniform(0, 1, 500)
-    rows = basis(u, (1, 3, 8))
-    for i, k in enumerate((1, 3, 8)):
-        assert rows[1 + 2 * i] == pytest.approx(np.cos(2 * np.pi * k * u), abs=1e-14)
-        assert rows[2 + 2 * i] == pytest.approx(np.sin(2 * np.pi * k * u), abs=1e-14)
 
 
 def test_parts_combined_are_the_whole_whatever_their_reference() -> None:

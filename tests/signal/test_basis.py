@@ -161,7 +161,7 @@ def test_multiples_by_recurrence_are_cosines_and_sines() -> None:
 
 
 def bits() -> str:
-    """Digest of every bit of what ``measure`` says of 20 channels, 24 and 16 bits, tiles and single angles."""
+    """Digest of all bits of what ``measure`` says of 20 channels, 24 and 16 bits, tiles and single angles."""
     from daq.signal.measure import measure
     from daq.signal.shapes import ChannelParams, PulseParams
 

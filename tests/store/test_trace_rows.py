@@ -7,7 +7,7 @@ from dataclasses import replace
 from uuid import uuid4
 
 import pytest
-from store_kit import Stand
+from store_kit import SET_UP, Stand
 
 from config.errors import Refusal
 from store.records import Trace, TracePoint
@@ -46,6 +46,21 @@ def test_traces_follow_a_run_that_is_given_to_a_job(stand: Stand) -> None:
     stand.mount()
     stand.ledger.assign_run("U/1", "0142", "ana")
     assert len(stand.history.traces(stand.history.run("0142/1").id)) == 1
+
+
+def test_a_corrected_sensitivity_scales_the_traces(stand: Stand) -> None:
+    """Of probe 1: twice the volts per um and the other sense: minus half the amplitude, half the error."""
+    run = stand.begin()
+    stand.ledger.add_trace(run.id, replace(UP, channels=("probe 1", "probe 2"), units=("um", "um")))
+    stand.end(run.id)
+    one, two = SET_UP.channels
+    right = replace(one, volts_per_unit=2 * one.volts_per_unit, positive=-one.positive)
+    told = stand.ledger.set_up(replace(SET_UP, channels=(right, two)))
+    stand.ledger.revise_run("U/1", told.id, "read again", "ana")
+    (found,) = stand.history.traces(run.id)
+    assert found.points[0].vectors == (-1.5 - 2j, 0.5j)
+    assert found.points[0].se == (0.05, 0.02)
+    assert found.points[0].gap_v == (-9.8, 0.0)
 
 
 @pytest.mark.parametrize(

@@ -1,8 +1,9 @@
 """Errors of the stored vectors against the least that any estimator can have.
 
-The bound is computed here from METHODS, never by the package: 8.2 [M: Kay] var of each component 2 s^2/N over
-whole turns, where offset and harmonics are orthogonal to 1X; 8.3 noise s on a slope S, linear interpolation at
-any fraction: sd t = (s/S) sqrt(2/3); 8.4 jitter e rad a turn over M turns: phase sd e/sqrt(M) for small e.
+The bound is computed here from METHODS, never by the package: 8.2 [M: Kay] var of each component 2 s^2/N
+over whole turns, where offset and harmonics are orthogonal to 1X; 8.3 noise s on a slope S, linear
+interpolation at any fraction: sd t = (s/S) sqrt(2/3); 8.4 jitter e rad a turn, M turns: phase sd e/sqrt(M)
+for small e.
 More of the grid: tests/bench/bench_bound.py.
 """
 

@@ -1,4 +1,4 @@
-"""The function that makes stored vectors: bias, noise, ramps, scale, an independent estimator, recordings."""
+"""The function that makes stored vectors: bias, noise, ramps, scale, flags, recordings."""
 
 from __future__ import annotations
 
@@ -12,7 +12,6 @@ from typing import Any
 import numpy as np
 import pytest
 from numpy.typing import NDArray
-from scipy.interpolate import CubicSpline
 
 from daq.signal.health import describe
 from daq.signal.measure import measure
@@ -180,36 +179,6 @@ def test_jitter_of_the_edges_costs_what_methods_say() -> None:
     v = np.array(got)
     assert np.degrees(np.std(np.angle(v))) == pytest.approx(0.25, rel=0.12)
     assert 0.99939 - 1e-4 < np.abs(v).mean() < 1.0001
-
-
-def independent_vector(
-    counts: NDArray[Any], level_count: float, um_per_count: float, per_turn: int = 128
-) -> tuple[complex, int]:
-    """Synchronous average and FFT: spline through the samples, equal angles between edges found sample by
-    sample, mean over turns, FFT. Shares nothing with the package."""
-    pulse, probe = counts[:, 0].astype(float), counts[:, 1].astype(float)
-    edges = []
-    for i in range(1, len(pulse)):
-        if pulse[i - 1] >= level_count > pulse[i]:
-            edges.append(i - 1 + (pulse[i - 1] - level_count) / (pulse[i - 1] - pulse[i]))
-    at_angle = CubicSpline(np.arange(len(edges)), edges)
-    spline = CubicSpline(np.arange(len(probe)), probe)
-    grid = np.arange((len(edges) - 1) * per_turn) / per_turn
-    turns = spline(at_angle(grid)).reshape(-1, per_turn)
-    spectrum = np.fft.rfft(turns.mean(axis=0)) / per_turn * 2
-    return complex(spectrum[1].conj() * um_per_count), len(turns)
-
-
-@pytest.mark.parametrize("ramp", [0.0, 0.02])
-def test_an_independent_estimator_agrees(signal: Callable[..., Any], ramp: float) -> None:
-    """The two see the same noise: their difference is small beside the stated uncertainty of 0.5 um noise."""
-    s = signal(noise_um=0.5, pulse_noise_v=0.002, ramp=ramp, probes=(HARMONICS,))
-    m = run(s)
-    um = s.volts_per_count / 0.007874
-    want, turns = independent_vector(s.counts(), -11.5 / s.volts_per_count, um)
-    assert turns == m.revolutions
-    assert abs(only(m).value - want) < 2 * only(m).se
-    assert abs(only(m).value - HARMONICS[1]) < 4 * only(m).se
 
 
 def test_the_same_counts_give_the_same_bits_wherever_they_lie(signal: Callable[..., Any]) -> None:

@@ -125,7 +125,8 @@ class Analysis:
         self._floors = np.array([self._limits.change_floor(c.kind) for c in self._stand.channels])
         self._past: deque[NDArray[Any]] = deque(maxlen=max(1, round(QUIET_RMS_S / HOP_S)))
         """Of each hop every ``QUIET_STEP``-th sample of the probes; once asked for, their rms instead."""
-        self._turning_rms = np.zeros(len(channels))
+        self._turning_rms = self._turning_noise = np.zeros(len(channels))
+        """Of the newest block while it turned; kept across a gap, after which it may have stopped or not."""
         self._recorder.set_up(info)
         self._origin = Origin(info.origin)
         self._board.post(state=self._watch.state)
@@ -228,16 +229,15 @@ class Analysis:
         """Whether the probes move as they did while it turned; nobody asks while pulses come."""
         self._past.append(chunk.counts[::QUIET_STEP, 1:])
         newest, turning = self._steady.newest, self._fitter.clock
+        if newest is not None and self._watch.state is StandState.TURNING:
+            self._turning_rms, self._turning_noise = newest.ac_rms, newest.residual_sd
         if turning.since_edge_s <= turning.patience_s:
             return True
         for i, counts in enumerate(self._past):
             if counts.ndim == 2:
                 self._past[i] = ac_rms(counts) * np.abs(self._units)
         now = np.sqrt(np.mean(np.square(np.stack(self._past)), axis=0))
-        if self._watch.state is StandState.TURNING and newest is not None:
-            self._turning_rms = newest.ac_rms
-        residual = np.zeros(len(now)) if newest is None else newest.residual_sd
-        return still_vibrating(now, self._turning_rms, residual)
+        return still_vibrating(now, self._turning_rms, self._turning_noise)
 
     # --- runs and readings ---------------------------------------------------------------------------
 

@@ -29,10 +29,11 @@ FARTHEST = 0.45
 """Tolerance after several turns: places must not overlap."""
 EVEN = 0.9
 """Turns follow each other evenly when neither is shorter than this share of the other ..."""
-CHANGED = 0.7
-"""... a new length of the turn is between this share of the old one and the old one over it ..."""
 EVEN_TURNS = 4
 """... so many in a row are a rhythm at once; otherwise the most frequent length among ``TRIED`` edges is."""
+CHANGED_TURNS, CHANGED = 3, 0.7
+"""The speed has changed when so many turns are even, all shorter or all longer than the last one, and between
+this share of it and it over this share."""
 TRIED = 32
 ALIKE = 0.2
 """Turns are of one length within this share."""
@@ -235,9 +236,9 @@ class Rhythm:
             if abs(waiting[nearest] - place) <= reach:
                 self._settle(nearest, turns, abs(float(waiting[nearest]) - place) / turn)
                 return True
-            if turns == 1 and not last and len(waiting) == 1:
+            if turns == 1 and not last and len(waiting) < CHANGED_TURNS:
                 return False
-            if turns == 1 and _changed(np.append(history[-1:], waiting[:2]), turn, allowed / 2):
+            if turns == 1 and _changed(np.append(history[-1:], waiting[:CHANGED_TURNS]), turn, allowed / 2):
                 break
         self._history = history[:0]
         if last and waiting[-1] <= now + FARTHEST * turn + turn:
@@ -262,12 +263,14 @@ class Rhythm:
 
 
 def _changed(edges: Floats, turn: float, apart: float) -> bool:
-    """Whether two turns are alike, and both longer or both shorter than the last ``turn``, by the share
+    """Whether these turns are alike, and all longer or all shorter than the last ``turn``, by the share
     ``apart`` at least, but not by much: then the rhythm changed, and no pulse is at fault."""
     turns = (edges[1:] - edges[:-1]) / turn
     short, long = float(turns.min()), float(turns.max())
     beside = long < 1 - apart or short > 1 + apart
-    return len(turns) > 1 and beside and short >= max(CHANGED, EVEN * long) and long <= 1 / CHANGED
+    return (
+        len(turns) == CHANGED_TURNS and beside and short >= max(CHANGED, EVEN * long) and long <= 1 / CHANGED
+    )
 
 
 def _scatter_of(edges: Floats) -> float:

@@ -55,7 +55,8 @@ def prepared(channels: int, frames: int = LOOP_BLOCKS * BLOCK) -> NDArray[np.int
     t = np.arange(frames)
     angle = 2 * np.pi * (t + 0.37) / TURN_SAMPLES
     volts = np.empty((len(t), channels))
-    volts[:, 0] = np.where((angle / (2 * np.pi)) % 1 < 0.04, -15.0, -8.0)
+    turn = (angle / (2 * np.pi)) % 1
+    volts[:, 0] = -8.0 - 7.0 * np.clip(np.minimum(turn, 0.04 - turn) * 250, 0, 1)
     for i in range(1, channels):
         volts[:, i] = -10 + 0.2 * np.cos(angle - i) + 0.05 * np.cos(2 * angle + i)
     volts += rng.normal(0, 0.004, volts.shape)

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.signal.folding import Rows
-from daq.signal.shapes import Complexes, Floats, Surroundings
+from daq.signal.shapes import Floats, Surroundings
 from daq.signal.vectors import Fit
 
 MOST_LINES = 6
@@ -40,13 +40,29 @@ CANDIDATES = 5
 STRONG_SHARE = 0.25
 """A line below the speed is strong from this share of 1X on. [J]"""
 LEAST_SHARE = 0.02
-"""Lines below this share of 1X are passed over, unless they scatter the parts of the window. [J]"""
+"""Lines below this share of 1X are passed over, unless they scatter the parts of the window [J]"""
+LEAST_COUNTS = 0.5
+"""... and below half a step of the converter, whose own pattern has lines where there is no noise."""
 SCATTERS = 0.5
 """... by so much of the noise of a part's vector."""
 NEAR_SHARE = 0.05
 """A peak beside an order counts as a neighbour from this share of it on; less may be a bent drift. [J]"""
 FLOOR_SD = 3.0
 """Hum that may be there but shows nowhere is taken as so many standard deviations of a line. [J]"""
+
+
+@dataclass(frozen=True, slots=True)
+class Place:
+    """Where and how long it turned."""
+
+    speed_hz: float
+    turns: int
+    near: Surroundings
+
+    @property
+    def apart(self) -> float:
+        """What the whole window cannot tell apart, in orders: 2/T over the speed."""
+        return NEAR / self.turns
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -77,51 +93,64 @@ class Found:
         return size
 
 
-def nothing(orders: int, probes: int) -> Found:
-    """Nothing found, nothing hidden."""
-    return Found(
-        orders=np.empty(0),
-        weights=np.empty((0, probes)),
-        power=np.zeros(probes),
-        origin=0.0,
-        hidden=np.zeros((orders, probes)),
-        mains=False,
-        neighbours=(),
-        modelled=False,
-    )
-
-
-def search(
-    rows: Rows | None, fit: Fit, speed_hz: float, near: Surroundings, parts: int, *, complete: bool
-) -> Found:
+def search(rows: Rows | None, fit: Fit, place: Place, parts: int, *, complete: bool) -> Found:
     """Lines in a folded window whose orders are ``fit`` (probes only) and which is cut into ``parts``.
 
-    ``complete``: all of the window is in ``rows``; None when there is nothing to look at."""
-    values = fit.values
-    if rows is None:
-        return nothing(*values.shape)
-    look = _Search(rows, fit, parts)
-    while len(look.found) < MOST_LINES and look.another():
-        pass
-    weights, shown, power = look.weights()
-    hidden = np.zeros(values.shape)
-    by_peaks = look.beside_orders(values)
-    by_mains = look.mains(near, speed_hz)
-    by_neighbours = look.neighbours(near, speed_hz)
-    for part in (by_peaks, by_mains, by_neighbours):
-        hidden = np.maximum(hidden, part)
-    beside = (by_peaks > NEAR_SHARE * np.abs(fit.value(1))).any(axis=0)
-    seen = by_neighbours.any(axis=0) | (beside & ~by_mains.any())
+    ``complete``: all of the window is in ``rows``; with None (too few turns or samples) only what is known of
+    the surroundings is judged."""
+    look = _Search(rows, fit, parts) if rows is not None else None
+    by_mains, by_neighbours = _mains(place, fit, look), _neighbours(place, fit, look)
+    hidden, seen = np.maximum(by_mains, by_neighbours), by_neighbours.any(axis=0)
+    orders, weights = np.empty(0), np.empty((0, fit.values.shape[1]))
+    power, origin = np.zeros(fit.values.shape[1]), 0.0
+    if look is not None:
+        weights, shown, power = look.weights()
+        orders, weights = look.found[shown], weights[np.repeat(shown, 2)]
+        beside, origin = look.beside_orders(), look.rows.middle
+        hidden = np.maximum(hidden, beside)
+        strong = (beside > NEAR_SHARE * np.abs(fit.value(1))).any(axis=0)
+        seen = seen | (strong & ~by_mains.any())
     return Found(
-        orders=look.found[shown],
-        weights=weights[np.repeat(shown, 2)],
+        orders=orders,
+        weights=weights,
         power=power,
-        origin=look.rows.middle,
+        origin=origin,
         hidden=hidden,
         mains=bool(by_mains.any()),
         neighbours=tuple(np.flatnonzero(seen).tolist()),
-        modelled=complete,
+        modelled=complete and rows is not None,
     )
+
+
+def _mains(place: Place, fit: Fit, look: _Search | None) -> Floats:
+    """Hum that may hide in the fitted orders: the largest at the other multiples of mains, or the floor.
+    Shape (orders, probes), zero where no multiple comes near."""
+    hidden = np.zeros(fit.values.shape)
+    if place.near.mains_hz is None:
+        return hidden
+    base = place.near.mains_hz / place.speed_hz
+    multiples: Floats = base * np.arange(1.0, max(2, int(max(fit.orders) / base) + 3))
+    close = [bool(np.min(np.abs(multiples - order)) < place.apart) for order in fit.orders]
+    if any(close):
+        hidden[close] = _largest(multiples, fit, look)
+    return hidden
+
+
+def _neighbours(place: Place, fit: Fit, look: _Search | None) -> Floats:
+    """What a neighbour known to turn near a fitted order may add; shape (orders, probes)."""
+    hidden = np.zeros(fit.values.shape)
+    for hz in place.near.neighbours_hz:
+        line = hz / place.speed_hz
+        for i, order in enumerate(fit.orders):
+            if abs(line - order) < place.apart:
+                hidden[i] = np.maximum(hidden[i], _largest(np.array([line]), fit, look))
+    return hidden
+
+
+def _largest(orders: Floats, fit: Fit, look: _Search | None) -> Floats:
+    """The largest amplitude at those of ``orders`` that can be told apart, at least the floor; (probes,)."""
+    floor: Floats = FLOOR_SD * fit.residual_sd * np.sqrt(2 / max(fit.samples, 1))
+    return floor if look is None else look.largest(orders, floor)
 
 
 class _Search:
@@ -140,6 +169,8 @@ class _Search:
         self._refused: list[float] = []
         self._spectrum: tuple[Floats, Floats] | None = None
         self._fit()
+        while len(self.found) < MOST_LINES and self.another():
+            pass
 
     @property
     def near(self) -> float:
@@ -188,7 +219,7 @@ class _Search:
         beat = int(np.ceil(1 / self.rows.turns / float(orders[1])))  # a skirt of what is nearer is no line
         away = np.min(np.abs(orders[:, None] - np.array(self.fitted)), axis=1)
         scatters = self._scatters * np.maximum(1, np.pi * self._part_turns * away)[:, None]
-        least = np.minimum(LEAST_SHARE * self._first, scatters)
+        least = np.maximum(np.minimum(LEAST_SHARE * self._first, scatters), LEAST_COUNTS)
         flat = np.where(free[:, None] & (power > least**2), power / _blockwise(power), 0.0)
         for p in np.flatnonzero(flat.max(axis=0) > STANDS_OUT / 4).tolist():
             column = power[:, p]
@@ -300,55 +331,33 @@ class _Search:
         mean: Floats = around / np.log(2)
         return mean / 1.5  # median to mean; the Hann window takes in 1.5 times the noise
 
-    def beside_orders(self, values: Complexes) -> Floats:
-        """Amplitude of a peak nearer to a fitted order than can be told apart; shape as ``values``."""
+    def beside_orders(self) -> Floats:
+        """Amplitude of a peak nearer to a fitted order than can be told apart; shape (orders, probes)."""
         orders, power = self.spectrum()
-        hidden = np.zeros(values.shape)
+        hidden = np.zeros(self._values.shape)
         for i, order in enumerate(self.fitted):
             beside = np.flatnonzero(np.abs(orders - order) <= self.near)
             if not len(beside):
                 continue
             top = beside[np.argmax(power[beside], axis=0)]
             size = np.sqrt(power[top, np.arange(len(top))])
-            for p in np.flatnonzero(size > NEAR_SHARE * np.abs(values[i])).tolist():
+            least = np.maximum(NEAR_SHARE * np.abs(self._values[i]), LEAST_COUNTS)
+            for p in np.flatnonzero(size > least).tolist():
                 if size[p] ** 2 > STANDS_OUT * self._around(orders, power[:, p], int(top[p])):
                     hidden[i, p] = size[p]
         return hidden
 
-    def mains(self, near: Surroundings, speed_hz: float) -> Floats:
-        """Hum that may hide in the fitted orders: the largest at the other multiples of mains, or the floor.
-        Shape (orders, probes), zero where no multiple comes near."""
-        probes = self.rows.values.shape[1]
-        hidden = np.zeros((len(self.fitted), probes))
-        if near.mains_hz is None:
-            return hidden
-        base = near.mains_hz / speed_hz
-        multiples = base * np.arange(1, max(2, int(max(self.fitted) / base) + 3))
-        close = [bool(np.min(np.abs(multiples - order)) < self.near) for order in self.fitted]
-        if any(close):
-            reach = multiples[multiples < self.rows.bins / 2 - 1]
-            apart = reach[np.abs(reach - np.rint(reach)) > self.near]
-            hidden[close] = self._largest(apart)
-        return hidden
-
-    def neighbours(self, near: Surroundings, speed_hz: float) -> Floats:
-        """What a neighbour known to turn near a fitted order may add; shape (orders, probes)."""
-        hidden = np.zeros((len(self.fitted), self.rows.values.shape[1]))
-        for hz in near.neighbours_hz:
-            for i, order in enumerate(self.fitted):
-                off = abs(hz / speed_hz - order)
-                if off < self.near:
-                    told = np.array([hz / speed_hz] if off > self.near / 2 else [])
-                    hidden[i] = np.maximum(hidden[i], self._largest(told))
-        return hidden
-
-    def _largest(self, orders: Floats) -> Floats:
-        """The largest amplitude at ``orders`` (any number), at least the floor; shape (probes,)."""
-        white = np.sqrt(2 * np.mean(self._rest**2, axis=0) / len(self._rest))
-        largest = FLOOR_SD * white
+    def largest(self, orders: Floats, floor: Floats) -> Floats:
+        """The largest amplitude at any of ``orders`` that lies in reach and apart from the multiples of the
+        speed, at least ``floor``; shape (probes,)."""
+        largest = floor
         for order in orders:
-            known = np.min(np.abs(self.found - order)) < self.near if len(self.found) else False
-            there = self.found[np.abs(self.found - order) < self.near] if known else np.array([order])
+            beside = abs(order - np.rint(order))
+            fitted = bool(np.rint(order) in self.fitted)
+            if order > self.rows.bins / 2 - 1 or beside < self.near / (2 if fitted else 1):
+                continue
+            known = self.found[np.abs(self.found - order) < self.near]
+            there = known if len(known) else np.array([order])
             design = np.concatenate((self._given, self.rows.columns(there)), axis=1)
             told = _solved(design, self.rows.values)[self._given.shape[1] :]
             largest = np.maximum(largest, np.hypot(told[::2], told[1::2]).max(axis=0))

@@ -86,7 +86,8 @@ def measure(
         + health.lost_flags(counts[_end(turns) : stop, 1:], rate_hz / speed_hz, *_swing(sums.fit))
     )
     rows, parts = sums.fold.rows(), len(sums.parts)
-    found = lines.search(rows, sums.fit, speed_hz, surroundings, parts, complete=sums.fold.complete)
+    place = lines.Place(speed_hz, int(turns.good.sum()), surroundings)
+    found = lines.search(rows, sums.fit, place, parts, complete=sums.fold.complete)
     if found.modelled and rows is not None:
         sums = _without_lines(sums, rows, found)
     edge_deg = unresolved_deg(finder.edge_samples, rate_hz / speed_hz)

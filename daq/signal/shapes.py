@@ -164,7 +164,7 @@ class ChannelLevel:
     gap_v: float
     """Mean voltage."""
     residual_sd: float
-    """Noise left by offset and orders, base units."""
+    """Noise left by offset, orders and lines, base units."""
     peak_to_peak: float
     """Overall, median over the parts of the window, base units."""
     ac_rms: float

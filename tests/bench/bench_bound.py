@@ -1,4 +1,4 @@
-"""Errors of stored vectors over their bound, and how often the stated regions hold the truth, on a larger grid.
+"""Errors of stored vectors over their bound, and how often stated regions hold the truth, on a large grid.
 
     python tests/bench/bench_bound.py [errors a point]
 
@@ -16,8 +16,8 @@ import sys
 from itertools import product
 from pathlib import Path
 
-ROOT = Path(__file__).resolve().parents[2]
-sys.path[:0] = [str(ROOT), str(ROOT / "tests" / "signal")]
+sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
+sys.path.insert(0, str(Path(__file__).resolve().parents[1] / "signal"))
 
 import numpy as np
 from window_kit import Window, covariances, first_orders, inside

@@ -145,6 +145,24 @@ def test_a_known_neighbour_near_1x_and_one_far_away() -> None:
     assert far.vectors == w.measured(counts).vectors
 
 
+def test_a_window_too_short_to_search_still_knows_its_surroundings() -> None:
+    """8 turns at 50 Hz: 2/T is 12.5 Hz, so mains at 60 Hz cannot be told apart, whatever it is."""
+    w = Window(per_turn=128.3, turns=8)
+    m = w.measured(w.counts(np.zeros((w.frames, 1))), surroundings=Surroundings(60.0, (38.0,)))
+    assert m.flags == ("near_mains:p0", "near_neighbour:p0")
+
+
+def test_a_line_in_a_window_of_1500_turns_is_named_and_averages_out() -> None:
+    """Only the first 1024 turns are searched; over 1500 the line costs at most 1/1500 of it (METHODS 8.6)."""
+    rng = np.random.default_rng(10)
+    w = Window(per_turn=24.3, turns=1500, stamped=True)
+    m = w.measured(w.counts(line(w, 0.43, 6.0, np.arange(3.0)) + rng.normal(0, 0.3, (w.frames, 3))))
+    assert [round(found.order, 3) for found in m.lines] == [0.43] * 3
+    assert set(m.flags) >= {"subsynchronous:p0", "subsynchronous:p1", "subsynchronous:p2"}
+    assert np.abs(first_orders(m) / w.vector - 1).max() < 0.003
+    assert inside(m, w.vector).all()
+
+
 def test_the_same_bits_again_with_lines() -> None:
     rng = np.random.default_rng(9)
     w = Window(per_turn=77.7, turns=64)

@@ -32,8 +32,9 @@ EVEN = 0.9
 EVEN_TURNS = 4
 """... so many in a row are a rhythm at once; otherwise the most frequent length among ``TRIED`` edges is."""
 CHANGED_TURNS, CHANGED = 3, 0.7
-"""The speed has changed when so many turns are even, all shorter or all longer than the last one, and between
-this share of it and it over this share."""
+"""The speed has changed when so many turns are even, from this share of the last one to it over this ..."""
+SMOOTH = 0.02
+"""... and their second difference is no more than this, turns."""
 TRIED = 32
 ALIKE = 0.2
 """Turns are of one length within this share."""
@@ -238,7 +239,7 @@ class Rhythm:
                 return True
             if turns == 1 and not last and len(waiting) < CHANGED_TURNS:
                 return False
-            if turns == 1 and _changed(np.append(history[-1:], waiting[:CHANGED_TURNS]), turn, allowed / 2):
+            if turns == 1 and _changed(np.append(history[-1:], waiting[:CHANGED_TURNS]), turn):
                 break
         self._history = history[:0]
         if last and waiting[-1] <= now + FARTHEST * turn + turn:
@@ -262,15 +263,15 @@ class Rhythm:
             self._history = self._history[:0]
 
 
-def _changed(edges: Floats, turn: float, apart: float) -> bool:
-    """Whether these turns are alike, and all longer or all shorter than the last ``turn``, by the share
-    ``apart`` at least, but not by much: then the rhythm changed, and no pulse is at fault."""
+def _changed(edges: Floats, turn: float) -> bool:
+    """Whether the turns between ``edges`` follow each other smoothly, if not from the last ``turn``: then the
+    speed changed, and no pulse is at fault."""
     turns = (edges[1:] - edges[:-1]) / turn
+    if len(turns) < CHANGED_TURNS:
+        return False
     short, long = float(turns.min()), float(turns.max())
-    beside = long < 1 - apart or short > 1 + apart
-    return (
-        len(turns) == CHANGED_TURNS and beside and short >= max(CHANGED, EVEN * long) and long <= 1 / CHANGED
-    )
+    smooth = abs(float(turns[2] - 2 * turns[1] + turns[0])) <= SMOOTH
+    return smooth and short >= max(CHANGED, EVEN * long) and long <= 1 / CHANGED
 
 
 def _scatter_of(edges: Floats) -> float:

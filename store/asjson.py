@@ -15,6 +15,7 @@ from typing import Any
 from uuid import UUID
 
 from store.balance.orbit import SURE, Orbit
+from store.listings import RunLine
 from store.records import (
     Coefficient,
     Job,
@@ -25,7 +26,6 @@ from store.records import (
     Mount,
     Reading,
     Run,
-    RunLine,
     Vector,
     WeightEvent,
     WeightPlane,

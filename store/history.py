@@ -12,6 +12,7 @@ from sqlalchemy import Connection, Engine, func, select
 
 from config.errors import Refusal
 from store import database, recall, recall_lists, recall_measured, recall_runs, recall_traces
+from store.listings import RunLine, StoreEvent, StoreInfo
 from store.records import (
     Coefficient,
     Job,
@@ -24,10 +25,7 @@ from store.records import (
     RawSamples,
     Reading,
     Run,
-    RunLine,
     SetUp,
-    StoreEvent,
-    StoreInfo,
     Trace,
     WeightEvent,
 )

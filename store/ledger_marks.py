@@ -16,8 +16,9 @@ from store.ledger_weights import same_weights
 from store.names import check_name
 from store.records import Job, JobStory, Label, Mark, MarkState, Mount, Reading, Run, WeightEvent
 from store.tables import label as label_table
-from store.tables import mark, mark_end, mark_now
+from store.tables import mark, mark_end
 from store.tables import run as run_table
+from store.views import mark_now
 from store.writer import Writer
 
 SPEED_BAND = 0.005

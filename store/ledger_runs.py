@@ -36,11 +36,11 @@ from store.tables import (
     run,
     run_assign,
     run_end,
-    run_now,
     run_revise,
     run_void,
     vector,
 )
+from store.views import run_now
 from store.writer import Writer
 
 LOST_DAEMON = "the daemon ended without closing it"

@@ -14,7 +14,8 @@ from store import ledger_coefficients, recall, recall_runs
 from store.balance.angles import Ends, difference_deg, frame_turn_deg, plane_of, same_sense, wrap_deg
 from store.names import check_finite, check_positive, check_text
 from store.records import Mount, PieceDraft, WeightAct, WeightEvent, WeightPlane
-from store.tables import run_now, weight, weight_void
+from store.tables import weight, weight_void
+from store.views import run_now
 from store.writer import Writer
 
 AT_MOUNT = "mount"

@@ -31,8 +31,6 @@ from store.tables import (
     job_speed,
     machine,
     model,
-    mount_mark_now,
-    mount_now,
     run_revise,
     set_up,
     set_up_channel,
@@ -41,6 +39,7 @@ from store.tables import (
     weight_void,
 )
 from store.tables import run as run_table
+from store.views import mount_mark_now, mount_now
 
 # --- models and machines -----------------------------------------------------------------------------
 

@@ -10,9 +10,11 @@ from sqlalchemy import Connection, Row, Select, case, func, select
 
 from store import recall, schema
 from store.database import beside
+from store.listings import RunLine, StoreInfo
 from store.recall_runs import runs_of_job_ids
-from store.records import Coefficient, Label, Origin, RunLine, RunState, StoreInfo
-from store.tables import coefficient, job, label, raw, reading, run_now, store_info
+from store.records import Coefficient, Label, Origin, RunState
+from store.tables import coefficient, job, label, raw, reading, store_info
+from store.views import run_now
 
 # --- runs --------------------------------------------------------------------------------------------
 

@@ -27,19 +27,9 @@ from store.records import (
     Vector,
     WeightEvent,
 )
-from store.tables import (
-    job,
-    level_now,
-    mark_now,
-    mount,
-    raw,
-    raw_aged,
-    reading_now,
-    run_assign,
-    run_now,
-    vector_now,
-)
+from store.tables import job, mount, raw, raw_aged, run_assign
 from store.tables import run as run_table
+from store.views import level_now, mark_now, reading_now, run_now, vector_now
 
 # --- runs --------------------------------------------------------------------------------------------
 

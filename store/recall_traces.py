@@ -12,7 +12,8 @@ from sqlalchemy import Connection, Row, select
 from store import recall
 from store.again import scale_factors
 from store.records import Trace, TracePoint
-from store.tables import run, run_now, trace, trace_vector
+from store.tables import run, trace, trace_vector
+from store.views import run_now
 
 
 def traces_of_run(c: Connection, run_id: UUID, set_up_id: UUID | None = None) -> tuple[Trace, ...]:

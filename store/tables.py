@@ -21,7 +21,7 @@ from sqlalchemy import (
     UniqueConstraint,
 )
 
-from store.columns import Uuid16, json_text, key, real, ref, seq, text, whole
+from store.columns import json_text, key, real, ref, seq, text, whole
 
 metadata = MetaData(
     naming_convention={
@@ -382,7 +382,7 @@ measured = Table(
     UniqueConstraint("reading_id", "version"),
 )
 
-_VECTOR = ("re", "im", "var_re", "var_im", "cov", "noise_floor")
+VECTOR_FIGURES = ("re", "im", "var_re", "var_im", "cov", "noise_floor")
 
 # vectors of versions 2 and later; those of version 1 are in vector
 measured_vector = Table(
@@ -393,12 +393,12 @@ measured_vector = Table(
     whole("place", primary=True),
     text("channel"),
     whole("harmonic"),
-    *(real(name) for name in _VECTOR),
+    *(real(name) for name in VECTOR_FIGURES),
     text("unit"),
     sqlite_with_rowid=False,
 )
 
-_LEVEL = ("gap_v", "residual_sd", "peak_to_peak", "ac_rms")
+LEVEL_FIGURES = ("gap_v", "residual_sd", "peak_to_peak", "ac_rms")
 
 level = Table(
     "level",
@@ -407,7 +407,7 @@ level = Table(
     whole("version", primary=True),
     whole("place", primary=True),
     text("channel"),
-    *(real(name) for name in _LEVEL),
+    *(real(name) for name in LEVEL_FIGURES),
     text("unit"),
     sqlite_with_rowid=False,
 )
@@ -588,103 +588,3 @@ coefficient = Table(
 )
 
 SOURCE_TABLES = tuple(t for t in metadata.tables.values() if t.name not in {"coefficient", "raw"})
-
-# --- views that put later rows beside the earlier ones they speak of (made in the migrations) ----------
-
-views = MetaData()
-
-run_now = Table(
-    "run_now",
-    views,
-    seq(),
-    Column("id", Uuid16),
-    Column("job_id", Uuid16),
-    whole("number"),
-    whole("unassigned_number"),
-    Column("first_job_id", Uuid16),
-    whole("first_number"),
-    Column("mount_id", Uuid16),
-    whole("mount_seq"),
-    Column("set_up_id", Uuid16),
-    text("origin"),
-    text("operator"),
-    json_text("condition"),
-    text("software"),
-    Column("session_id", Uuid16),
-    whole("started_us"),
-    text("state"),
-    text("reason"),
-    text("detail"),
-    whole("ended_us"),
-    text("void"),
-)
-
-reading_now = Table(
-    "reading_now",
-    views,
-    seq(),
-    Column("id", Uuid16),
-    Column("run_id", Uuid16),
-    whole("number"),
-    whole("at_us"),
-    real("duration_s"),
-    real("speed_hz"),
-    whole("revolutions"),
-    whole("segment"),
-    whole("first_sample"),
-    json_text("steadiness"),
-    json_text("flags"),
-    json_text("figures"),
-    whole("version"),
-    text("label"),
-    text("labelled_by"),
-)
-
-vector_now = Table(
-    "vector_now",
-    views,
-    Column("reading_id", Uuid16),
-    whole("version"),
-    whole("place"),
-    text("channel"),
-    whole("harmonic"),
-    *(real(name) for name in _VECTOR),
-    text("unit"),
-)
-
-level_now = Table(
-    "level_now",
-    views,
-    Column("reading_id", Uuid16),
-    whole("version"),
-    whole("place"),
-    text("channel"),
-    *(real(name) for name in _LEVEL),
-    text("unit"),
-)
-
-mount_now = Table(
-    "mount_now",
-    views,
-    *(Column(c.name, c.type) for c in mount.columns),
-    whole("ended_us"),
-)
-
-mount_mark_now = Table(
-    "mount_mark_now",
-    views,
-    Column("mount_id", Uuid16),
-    whole("plane"),
-    real("from_hole1_deg"),
-    real("typed_from_hole1_deg"),
-)
-
-mark_now = Table(
-    "mark_now",
-    views,
-    *(Column(c.name, c.type) for c in mark.columns),
-    text("state"),
-    text("detail"),
-    Column("run_id", Uuid16),
-    Column("reading_id", Uuid16),
-)

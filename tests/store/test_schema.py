@@ -16,13 +16,14 @@ from store import tables
 from store.database import reader_engine, writer_engine
 from store.migrations import KNOWN, configuration, statements
 from store.records import Label, MarkPosition, PieceDraft, Trace, TracePoint
+from store.views import views
 
 
 def test_tables_are_what_the_migrations_make(store_path: Path) -> None:
     engine = reader_engine(store_path)
     with engine.begin() as connection:
         assert compare_metadata(MigrationContext.configure(connection), tables.metadata) == []
-        for view in tables.views.sorted_tables:
+        for view in views.sorted_tables:
             connection.execute(select(view)).all()
     engine.dispose()
 

@@ -31,8 +31,8 @@ TILES = (64, 32, 16)
 HEIGHT = 4
 """The number of rows is a multiple of this, the rows added zero: products are faster so."""
 SMALL_PRODUCT = 1 << 18
-"""Multiplications in one matrix product at most. So small a one stays in the cache, and the linear algebra
-library never gives it to several threads: the number of these must not change the last bit of a result."""
+"""Multiplications in one matrix product at most. The linear algebra library never gives so small a one to
+several threads: their number must not change the last bit of a result."""
 _STEPS = 1024
 _CIRCLE = 2 * np.pi * np.arange(_STEPS) / _STEPS
 _COS, _SIN = np.cos(_CIRCLE), np.sin(_CIRCLE)
@@ -134,13 +134,12 @@ def rows_at_turns(turns: Turns, start: int, stop: int, orders: Sequence[int], st
     return TiledRows(span, _tile(frames), orders, step)
 
 
-def _summed(one: Floats, other: Floats, size: int) -> Floats:
-    """The first ``size`` rows of ``one`` times those of ``other``, column by column, summed."""
-    step = SMALL_PRODUCT // len(one) ** 2
-    sums = np.zeros((len(one), len(one)))
-    for at in range(0, one.shape[1], step):
-        sums += one[:, at : at + step] @ other[:, at : at + step].T
-    found: Floats = sums[:size, :size]
+def _product(one: Floats, other: Floats) -> Floats:
+    """``one`` (m, n) times ``other`` (n, k), in slices of ``SMALL_PRODUCT``."""
+    step = max(1, SMALL_PRODUCT // (len(one) * other.shape[1]))
+    found: Floats = one[:, :step] @ other[:step]
+    for at in range(step, len(other), step):
+        found += one[:, at : at + step] @ other[at : at + step]
     return found
 
 
@@ -153,12 +152,11 @@ class DirectRows:
         self._rows = np.zeros((tall, len(fractions)))
         self._rows[0] = 1.0
         _fill(self._rows[1:], *cos_sin(fractions), orders)
-        self.gram: Floats = _summed(self._rows, self._rows, size)
+        self.gram: Floats = _product(self._rows, self._rows.T)[:size, :size]
 
     def times(self, first: int, frames: int, y: Floats) -> Floats:
         rows = self._rows[:, first : first + frames]
-        found: Floats = (rows @ y[: rows.shape[1]])[: len(self.gram)]
-        return found
+        return _product(rows, y[: rows.shape[1]])[: len(self.gram)]
 
 
 class TiledRows:
@@ -176,7 +174,7 @@ class TiledRows:
         order = np.argsort(steps, kind="stable")
         self._firsts = np.searchsorted(steps[order], np.arange(steps.max() + 2)).tolist()
         turn = np.concatenate((before, 1 + ends))[order]
-        self._values = np.zeros((padded(self._size), len(at), NODES))
+        self._values: Floats = np.zeros((padded(self._size), len(at), NODES))
         self._values[0] = 1.0
         fractions = span.fractions((at[order] * tile.frames)[:, None] + tile.nodes, turn)
         _fill(self._values[1 : self._size], *cos_sin(fractions), orders)
@@ -199,9 +197,8 @@ class TiledRows:
             self._sums = np.empty((tiles, NODES, columns))
         np.matmul(self._tile.spread, y[:frames].reshape(tiles, long, columns), out=self._sums)
         a, b = self._firsts[first // self._step : first // self._step + 2]
-        found = self._values[:, NODES * a : NODES * b] @ self._sums.reshape(-1, columns)
-        rows: Floats = found[: self._size]
-        return rows
+        values = self._values[:, NODES * a : NODES * b]
+        return _product(values, self._sums.reshape(-1, columns))[: self._size]
 
     def _used(self, span: Span, at: NDArray[np.int64]) -> NDArray[np.int64]:
         """First and stop frame of each tile that its angle holds for: (2, tiles)."""
@@ -217,7 +214,8 @@ class TiledRows:
         """Sums of the rows' products over the frames that are ``used`` of each tile."""
         weighted = self._values * (self._tile.sums[used[1]] - self._tile.sums[used[0]])
         tall = len(weighted)
-        return _summed(weighted.reshape(tall, -1), self._values.reshape(tall, -1), self._size)
+        found = _product(weighted.reshape(tall, -1), self._values.reshape(tall, -1).T)
+        return found[: self._size, : self._size]
 
 
 @dataclass(frozen=True, slots=True)

@@ -15,14 +15,16 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from daq.signal.basis import SMALL_PRODUCT, TILES, DirectRows, Rows, padded, rows_at_turns
+from daq.signal.basis import TILES, DirectRows, Rows, rows_at_turns
 from daq.signal.revolutions import Turns, turn_fractions
 from daq.signal.shapes import Complexes, Floats
 
 WIDE = 16
 """Frames taken together where a whole row of memory is cheaper to work on than single frames."""
+CACHEFUL = 1 << 17
+"""Samples worked on at a time: 1 MiB as float64, so that each is read from memory once."""
 PIECE_FRAMES = 32768
-"""Frames worked on at a time: basis and samples stay in the cache; part of what makes results repeatable."""
+"""Frames whose angles are worked on at a time; part of what makes results repeatable, as ``CACHEFUL`` is."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -87,8 +89,8 @@ class Accumulator:
             self._add(rows_at_turns(turns, start, start + frames, self.orders, step), parts, step)
 
     def _step(self, counts: NDArray[Any]) -> int:
-        """Frames in one product: as many whole tiles as ``SMALL_PRODUCT`` allows."""
-        tiles: int = SMALL_PRODUCT // (padded(len(self._gram)) * counts.shape[1] * TILES[0])
+        """Frames taken at a time, in whole tiles."""
+        tiles: int = CACHEFUL // (counts.shape[1] * TILES[0])
         return max(1, tiles) * TILES[0]
 
     def _add(self, rows: Rows, parts: Sequence[NDArray[Any]], step: int) -> None:

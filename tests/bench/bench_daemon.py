@@ -3,10 +3,11 @@
 Run it:  python tests/bench/bench_daemon.py [SECONDS]
 
 A prepared second of samples (15 probes and the once-per-rev channel, 50 turns a second) is delivered over
-and over in blocks of 10 ms at real pace. Printed: samples lost, the daemon's share of a core, the time from
-a block's end to the vectors made from it, and the share that the bare estimator (edges, angles, least
-squares of offset and 1X to 3X on the same blocks, nothing else) takes of the same core. No thresholds:
-a benchmark is read, not passed.
+and over in blocks of 10 ms at real pace; beside the analysis, which keeps the raw samples of its window,
+three readers take every sample out of the ring in hops of 0.1 s. Printed: samples lost, the daemon's share of
+a core in all and by thread, the time from a block's end to the vectors made from it, and the share that the
+bare estimator (edges, angles, least squares of offset and 1X to 3X on the same blocks, nothing else) takes of
+the same core. No thresholds: a benchmark is read, not passed.
 """
 
 from __future__ import annotations
@@ -108,6 +109,28 @@ def bare_share(stand: Stand, seconds: float) -> float:
     return (time.process_time() - begin) / seconds
 
 
+def live_reader(daemon: Daemon, taken: list[int]) -> None:
+    """Takes every sample out of the ring, as a live view would, until the ring is closed."""
+    ring = daemon._pump.ring
+    assert ring is not None
+    reader, hop = ring.reader(threading.current_thread().name), RATE_HZ // 10
+    while not ring.closed:
+        chunk = reader.read(hop, 0.5, fewest=hop)
+        if chunk is not None:
+            taken.append(len(chunk.counts))
+
+
+def by_thread() -> dict[str, float]:
+    """Processor seconds that each thread of this process has used; empty where the system does not tell."""
+    if not hasattr(time, "pthread_getcpuclockid"):
+        return {}
+    return {
+        thread.name: time.clock_gettime(time.pthread_getcpuclockid(thread.ident))
+        for thread in threading.enumerate()
+        if thread.ident is not None
+    }
+
+
 class Late:
     """Wraps ``Analysis._feed`` and keeps how long after a chunk's last sample its vectors were there."""
 
@@ -136,29 +159,44 @@ def main(seconds: float) -> None:
         driver = Prepared(DriverOptions(), channel_plan(stand), clock=clock)
         daemon = Daemon(stand, ledger, driver, access_of(None), clock)
         marks: dict[str, float] = {}
+        shares: dict[str, float] = {}
+        taken: list[int] = []
+        readers = [
+            threading.Thread(target=live_reader, args=(daemon, taken), name=f"live reader {k}")
+            for k in (1, 2, 3)
+        ]
 
         def watch() -> None:
-            time.sleep(2.0)  # start-up is not counted
-            begin, wall = time.process_time(), time.monotonic()
+            time.sleep(1.0)
+            for reader in readers:
+                reader.start()
+            time.sleep(1.0)  # start-up is not counted
+            begin, wall, threads = time.process_time(), time.monotonic(), by_thread()
             time.sleep(seconds)
-            marks["cpu"] = (time.process_time() - begin) / (time.monotonic() - wall)
+            took_s = time.monotonic() - wall
+            marks["cpu"] = (time.process_time() - begin) / took_s
             marks["lost"] = daemon._board.read().lost_samples
+            shares.update({k: (v - threads.get(k, 0.0)) / took_s for k, v in by_thread().items()})
             os.kill(os.getpid(), signal.SIGTERM)
 
         thread = threading.Thread(target=watch)
         thread.start()
         code = daemon.run(lambda _: None)
-        thread.join()
+        for ended in (thread, *readers):
+            ended.join()
         ledger.close()
         bare = bare_share(stand, 20.0)
     ms = np.sort(late.ms)
     print(
         f"exit {code}; {late.frames} frames analysed of {driver.counters.samples}; lost {marks['lost']:.0f}"
     )
+    print(f"three live readers took {sum(taken)} frames")
     share = 100 * marks["cpu"]
     print(
         f"daemon {share:.1f} % of a core, bare estimator {100 * bare:.1f} %, ratio {share / bare / 100:.2f}"
     )
+    names = sorted((k for k in shares if shares[k] >= 5e-4), key=lambda k: -shares[k])
+    print("by thread: " + ", ".join(f"{k} {100 * shares[k]:.2f} %" for k in names))
     print(
         f"block end to vectors: p50 {np.quantile(ms, 0.5):.1f} ms, p99 {np.quantile(ms, 0.99):.1f} ms, "
         f"max {ms[-1]:.1f} ms"

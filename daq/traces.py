@@ -467,6 +467,8 @@ class _Sums:
         found = inverse @ self._cross[:size]
         rest = np.maximum(0.0, self._square - np.einsum("ij,ij->j", found, self._cross[:size]))
         variance = rest / (self._samples - size) * (inverse[1, 1] + inverse[2, 2]) / 2
+        if not np.isfinite(variance).all():
+            return None
         return found[0], found[1] + 1j * found[2], np.sqrt(variance)
 
 

@@ -10,13 +10,14 @@ import click
 from cli.flagged import flag_lines
 from cli.output import (
     ANGLES,
+    NO_LAG,
     Show,
     angle,
     clean,
     json_option,
     print_json,
     say,
-    shown,
+    shown_short,
     stand_option,
     table,
     warn,
@@ -83,6 +84,8 @@ def advice_lines(advice: Json, show: Show | None = None) -> Iterator[str]:
         yield f"plane {left['plane']} is left out: {clean(left['why'])}; {_stays(left)}"
     yield ""
     yield _outlook(advice["channels"], show)
+    if any(c[key]["lag_deg"] is None for c in advice["channels"] for key in ("base", "predicted")):
+        yield NO_LAG
     yield from _words(advice)
 
 
@@ -156,10 +159,10 @@ def _outlook(channels: list[Json], show: Show | None) -> str:
     rows = []
     for channel in channels:
         name, foreseen = {"channel": channel["channel"]}, channel["predicted"]
-        base, unit, base_lag = shown({**name, **channel["base"]}, show)
-        size, _, lag = shown({**name, **foreseen}, show)
-        wide, _, _ = shown({**name, **foreseen, "amplitude_pk": channel["predicted_p90_pk"]}, show)
-        middle, _, _ = shown({**name, **foreseen, "amplitude_pk": channel["predicted_median_pk"]}, show)
+        base, unit, base_lag = shown_short({**name, **channel["base"]}, show)
+        size, _, lag = shown_short({**name, **foreseen}, show)
+        wide, _, _ = shown_short({**name, **foreseen, "amplitude_pk": channel["predicted_p90_pk"]}, show)
+        middle, _, _ = shown_short({**name, **foreseen, "amplitude_pk": channel["predicted_median_pk"]}, show)
         rows.append((channel["channel"], unit, base, base_lag, size, lag, middle, wide))
     headers = ["channel", "unit", "base", "lag", "predicted", "lag", "median", "9 of 10 below"]
     return table(rows, headers, "llrrrrrr")

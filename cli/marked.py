@@ -9,6 +9,7 @@ from cli.flagged import flag_lines
 from cli.output import (
     ANGLES,
     COLUMNS,
+    NO_LAG,
     Show,
     angle,
     clean,
@@ -17,6 +18,7 @@ from cli.output import (
     say,
     shown,
     shown_error,
+    shown_short,
     table,
     warn,
 )
@@ -83,7 +85,8 @@ def words(flags: list[str], room: int) -> str:
 
 def print_verdict(verdict: Json, show: Show | None = None) -> None:
     """Measured beside predicted, residual unbalance beside its tolerance, and the verdict."""
-    say("", _beside(verdict["channels"], show), "", _residuals(verdict["planes"]), ANGLES)
+    say("", _beside(verdict["channels"], show), *_no_lag(verdict["channels"]))
+    say("", _residuals(verdict["planes"]), ANGLES)
     say(*_verdict_lines(verdict), *flag_lines(verdict["flags"]))
     for text in verdict["warnings"]:
         warn(f"warning: {clean(text)}")
@@ -93,16 +96,21 @@ def _beside(channels: list[Json], show: Show | None) -> str:
     rows = []
     for channel in channels:
         name = {"channel": channel["channel"]}
-        size, unit, lag = shown({**name, **channel["measured"]}, show)
+        size, unit, lag = shown_short({**name, **channel["measured"]}, show)
         if channel["predicted"] is None:
             rows.append((channel["channel"], unit, size, lag, "-", "-", "-"))
             continue
-        foreseen, _, foreseen_lag = shown({**name, **channel["predicted"]}, show)
+        foreseen, _, foreseen_lag = shown_short({**name, **channel["predicted"]}, show)
         far = {**name, **channel["predicted"], "amplitude_pk": channel["difference_pk"]}
-        apart, _, _ = shown(far, show)
+        apart, _, _ = shown_short(far, show)
         rows.append((channel["channel"], unit, size, lag, foreseen, foreseen_lag, apart))
     headers = ["channel", "unit", "measured", "lag deg", "predicted", "lag deg", "apart"]
     return table(rows, headers, "llrrrrr")
+
+
+def _no_lag(channels: list[Json]) -> list[str]:
+    told = [v for c in channels for v in (c["measured"], c["predicted"]) if v is not None]
+    return [NO_LAG] if any(v["lag_deg"] is None for v in told) else []
 
 
 def _residuals(planes: list[Json]) -> str:

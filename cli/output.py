@@ -22,6 +22,9 @@ ANGLES = "angles: degrees from the rotor mark, against rotation"
 """Said once by whatever prints places on the rotor."""
 
 
+NO_LAG = "lag -: the amplitude is within its own 95 % uncertainty, so it has none"
+
+
 def clean(text: object) -> str:
     """Text fit for a terminal: control characters shown as escapes, never sent."""
     return "".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in str(text))
@@ -127,6 +130,12 @@ def shown(vector: Json, show: Show | None = None) -> tuple[str, str, str]:
         display.name,
         "below noise" if lag is None else angle(lag),
     )
+
+
+def shown_short(vector: Json, show: Show | None = None) -> tuple[str, str, str]:
+    """The same where several lags stand side by side: one below its floor is a dash."""
+    size, unit, lag = shown(vector, show)
+    return size, unit, "-" if vector["lag_deg"] is None else lag
 
 
 def shown_size(level: Json, size: float, show: Show | None = None) -> str:

@@ -11,6 +11,7 @@ from typing import Any, Literal
 
 from store.balance.angles import angle_deg, difference_deg
 from store.balance.holes import Piece
+from store.balance.orbit import CIRCLE_95
 from store.balance.reuse import NotReused
 from store.casework_flags import FlaggedReading
 
@@ -22,6 +23,11 @@ SAME_PLACE_DEG = 0.5
 def vector_dict(value: complex, unit: str, *, lag_known: bool = True) -> dict[str, Any]:
     """``lag_known`` False: the amplitude is below its noise floor, so no lag is told."""
     return {"amplitude_pk": abs(value), "unit": unit, "lag_deg": angle_deg(value) if lag_known else None}
+
+
+def foreseen_has_lag(predicted: complex, sd: float | None) -> bool:
+    """Whether a foreseen vector is larger than the 95 % circle of what may come of it."""
+    return sd is None or abs(predicted) > CIRCLE_95 * sd
 
 
 def unbalance_dict(value: complex) -> dict[str, Any]:
@@ -155,12 +161,13 @@ class ChannelOutlook:
     def to_dict(self) -> dict[str, Any]:
         slow = None if self.slow_roll is None else vector_dict(self.slow_roll, self.unit)
         now_known = self.lag_known or self.now != self.base
+        has_lag = foreseen_has_lag(self.predicted, self.sd)
         return {
             "channel": self.channel,
             "base": vector_dict(self.base, self.unit, lag_known=self.lag_known),
             "now": vector_dict(self.now, self.unit, lag_known=now_known),
             "slow_roll_subtracted": slow,
-            "predicted": vector_dict(self.predicted, self.unit),
+            "predicted": vector_dict(self.predicted, self.unit, lag_known=has_lag),
             "predicted_sd_per_component_pk": self.sd,
             "predicted_median_pk": self.median_pk,
             "predicted_p90_pk": self.p90_pk,
@@ -384,7 +391,9 @@ class ChannelVerdict:
         return {
             "channel": self.channel,
             "measured": vector_dict(self.measured, self.unit, lag_known=self.lag_known),
-            "predicted": None if predicted is None else vector_dict(predicted, self.unit),
+            "predicted": None
+            if predicted is None
+            else vector_dict(predicted, self.unit, lag_known=foreseen_has_lag(predicted, self.sd)),
             "difference_pk": None if predicted is None else abs(self.measured - predicted),
             "difference_sd_per_component_pk": self.sd,
             "innovation": self.innovation,

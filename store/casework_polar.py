@@ -19,7 +19,7 @@ from store.balance.slowroll import less
 from store.balance.standing import Standing
 from store.balance.tolerance import tolerance_of
 from store.balance.weights import mount_of, pieces_at, pieces_now
-from store.casework_answers import FittedPiece, Verdict, unbalance_dict, vector_dict
+from store.casework_answers import FittedPiece, Verdict, foreseen_has_lag, unbalance_dict, vector_dict
 from store.casework_scene import (
     Scene,
     build,
@@ -278,7 +278,7 @@ def _channel(
         number = o.reading_number if runs.count(o.run_name) > 1 else 0
         foreseen = _predicted(verdicts, o, name)
         if foreseen is not None:
-            vectors.append(PolarVector("predicted", o.run_name, number, foreseen))
+            vectors.append(PolarVector("predicted", o.run_name, number, *foreseen))
         vectors.append(_measured(scene, o, name, number))
     effects = tuple(e for o in fit.observations if (e := _effect(fit.observations, o)) is not None)
     probe = scene.standing.set_up.channel(name)
@@ -295,14 +295,15 @@ def _measured(scene: Scene, o: Observation, channel: str, number: int) -> PolarV
     return PolarVector(o.label.value, o.run_name, number, o.value, known, flags, floor)
 
 
-def _predicted(verdicts: list[Verdict], o: Observation, channel: str) -> complex | None:
-    """What the verdict on this reading foresaw, turned from the reading's own frame as the reading was."""
+def _predicted(verdicts: list[Verdict], o: Observation, channel: str) -> tuple[complex, bool] | None:
+    """What the verdict on this reading foresaw, turned from the reading's own frame as the reading was, and
+    whether its lag means anything."""
     for verdict in verdicts:
         if (verdict.run_name, verdict.reading_number) == (o.run_name, o.reading_number):
             found = next((c for c in verdict.channels if c.channel == channel), None)
             if found is not None and found.predicted is not None:
                 turned = o.value / found.measured if found.measured else 1.0 + 0j
-                return found.predicted * turned
+                return found.predicted * turned, foreseen_has_lag(found.predicted, found.sd)
     return None
 
 

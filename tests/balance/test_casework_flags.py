@@ -109,7 +109,19 @@ def test_a_verdict_tells_the_flags_before_it_and_no_lag_below_the_floor(kit):
     told = judge(book.story(), book.runs[-1].readings[0].id).to_dict()
     assert [(f["run"], f["flag"]) for f in told["flags"]] == [("0142/2", "clipped:probe 1")]
     assert told["channels"][0]["measured"]["lag_deg"] is None
-    assert told["channels"][0]["predicted"]["lag_deg"] is not None
+    assert told["channels"][0]["predicted"]["lag_deg"] is None  # 0 um is foreseen, give or take
+
+
+def test_a_foreseen_lag_is_told_only_above_what_may_come_of_it(kit):
+    """18 um with 3 % and 0.5 um of scatter is far above its 95 % circle, what a correction leaves is not."""
+    book = a_trial(kit)
+    book.remove(book.weights[0])
+    book.fit(1, 2.0, angle_deg=180.0)
+    book.run(Label.CHECK, 18 + 0j)
+    told = judge(book.story(), book.runs[-1].readings[0].id).to_dict()["channels"][0]["predicted"]
+    assert (told["amplitude_pk"], told["lag_deg"]) == (pytest.approx(18.0), pytest.approx(0.0, abs=1e-6))
+    (channel,) = correction_for(book.story()).to_dict()["channels"]
+    assert channel["predicted"]["lag_deg"] is None
 
 
 def test_no_place_for_a_trial_weight_from_a_lag_below_the_floor(kit):

@@ -246,7 +246,7 @@ def test_every_stamp_is_drawn_or_counted():
         chunks += made.chunks(run_of(k * 640, 640, edges=(at,)))
     chunks += made.rest()
     column = np.concatenate([c.counts for c in chunks])[:, 0]
-    drawn_pulses = len(find_edges(column, PulseParams(5 / 32767, FULL), Trigger(0.0, 6553.4, 65534.0)))
+    drawn_pulses = int(((column[:-1] >= 0) & (column[1:] < 0)).sum())
     left = tally.late_stamps + tally.bad_stamps + tally.gap_stamps + len(made._waiting)
     assert min(tally.late_stamps, tally.early_stamps) > 5
     assert drawn_pulses + left == 100

@@ -96,7 +96,16 @@ def _of_pulse(then: PulseSetUp, now: PulseSetUp) -> tuple[str, ...]:
         _changed("the once-per-rev edge", then.edge, now.edge)
         + _changed("the once-per-rev level", _level(then), _level(now))
         + _changed("the number of pulses a turn", then.pulses, now.pulses)
+        + (_changed("the pulse that counts", _told(then), _told(now)) if then.pulses == now.pulses else ())
     )
+
+
+def _told(pulse: PulseSetUp) -> str:
+    """By what the pulse that counts is told from the others."""
+    pattern = pulse.pattern or {}
+    if "spacing_deg" in pattern:
+        return "told by a spacing of " + "/".join(f"{d:g}" for d in pattern["spacing_deg"]) + " deg"
+    return "the longest" if pattern else "the only one"
 
 
 def _level(pulse: PulseSetUp) -> str:

@@ -132,6 +132,12 @@ def test_another_mount_is_refused(kit, rotor, change, why):
         ({"edge": "rising"}, "The once-per-rev edge was falling, now rising."),
         ({"level_v": None}, "The once-per-rev level was -11.5 V, now automatic."),
         ({"pulses": 2}, "The number of pulses a turn was 1, now 2."),
+        ({"pulses": 2, "pattern": {"marked": "long"}}, "The number of pulses a turn was 1, now 2."),
+        ({"pattern": {"marked": "long"}}, "The pulse that counts was the only one, now the longest."),
+        (
+            {"pattern": {"spacing_deg": [100.0, 260.0]}},
+            "The pulse that counts was the only one, now told by a spacing of 100/260 deg.",
+        ),
     ],
 )
 def test_another_pulse_is_refused(kit, rotor, change, why):

@@ -99,6 +99,8 @@ def test_a_corrected_sensitivity(measured: Bay) -> None:
             (found,) = history.coefficients(plane=plane, channel=channel)
             assert found.value == pytest.approx(by * value, rel=1e-12)
     assert measured.run("run", "recompute", "--job", "0142", "--json").json["count"]["apart"] == 0
+    kept = measured.must("run", "recompute", "0142/1", "--keep")
+    assert kept.out == "run 0142/1 reading 1: identical; version 2 stands\n"
     check_angle_and_sense(measured)
 
 
@@ -117,6 +119,9 @@ def test_the_same_request_is_one_act(measured: Bay) -> None:
 
 
 def check_refusals(measured: Bay) -> None:
+    for words in ((), ("0142/1", "--all"), ("--all", "--keep")):
+        assert measured.run("run", "recompute", *words).code == 2
+
     def said(*words: str, code: int = 1) -> str:
         done = measured.run("run", "revise", *words, "--why", "a test")
         no_traceback(done)

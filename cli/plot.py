@@ -80,9 +80,9 @@ def polar(job: str, file: Path, stand: str | None, *, as_json: bool, **told: Any
     how = manner(stand)
 
     def drawn() -> Drawn:
-        from cli.plots import polar as plots
+        from cli.plots.polar import draw
 
-        return plots.draw(picture, _shows(picture.channels, how), how.zone)
+        return draw(picture, _shows(picture.channels, how), how.zone)
 
     _draw(drawn, len(picture.channels), file, told["dpi"])
     if as_json:
@@ -112,9 +112,9 @@ def bode(run: str, file: Path, stand: str | None, *, as_json: bool, **told: Any)
     how = manner(stand)
 
     def drawn() -> Drawn:
-        from cli.plots import bode as plots
+        from cli.plots.bode import draw
 
-        return plots.draw(picture, _shows(picture.channels, how), how.zone)
+        return draw(picture, _shows(picture.channels, how), how.zone)
 
     _draw(drawn, len(picture.channels), file, told["dpi"])
     if as_json:

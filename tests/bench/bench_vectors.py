@@ -101,10 +101,11 @@ def stored(channels: int, seconds: float) -> None:
     wired = probes(channels)
     scales = full_scales(wired)
     for block_s in BLOCKS_S:
-        counts = prepared(channels, round(block_s * RATE_HZ) + 2 * TURN_SAMPLES)
+        counts = prepared(channels, round(block_s * RATE_HZ) + TURN_SAMPLES // 2)
         turns = turns_of(edges_in(counts[:, 0], PULSE, RATE_HZ)[1])
         assert vectors(counts, turns, scales) is not None
         good = int(turns.first_samples[-1] - turns.first_samples[0])
+        assert good == round(block_s * RATE_HZ), "rfft must not be given a length that does not suit it"
         block = counts[:good].astype(np.float64)
         rows, out = np.ascontiguousarray(block.T), np.empty_like(block)
         used = spent(

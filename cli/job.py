@@ -8,16 +8,17 @@ from typing import Any
 
 import click
 
-from cli.marked import print_verdict
+from cli.marked import NAME, print_verdict, words
 from cli.output import (
     ANGLES,
     Show,
     clean,
+    cut,
     json_option,
     local,
     print_json,
     say,
-    shown,
+    shown_short,
     stand_option,
     table,
     times,
@@ -25,6 +26,8 @@ from cli.output import (
 from cli.weight import place
 
 Json = Mapping[str, Any]
+FLAGS = 14
+"""Most columns of a channel's flags in the list of runs; ``run show`` has them in sentences."""
 
 
 @click.group(help="Jobs: one visit of one machine to the stand.")
@@ -98,20 +101,17 @@ def _lines(told: Json, show: Show, zone: tzinfo) -> Iterator[str]:
 
 
 def _runs(runs: list[Json], show: Show) -> str:
-    from daq.signal.health import short
-    from store.records import flags_of
-
     rows = []
     for run in runs:
         for reading in run["readings"]:
             for vector in reading["vectors"]:
                 if vector["order"] == 1:
-                    size, unit, lag = shown(vector, show)
-                    flags = ", ".join(map(short, flags_of(reading["flags"], vector["channel"])))
+                    size, unit, lag = shown_short(vector, show)
+                    flags = words(vector["flags"], FLAGS)
                     what = reading["label"] or "-"
                     rows.append(
                         (run["run"], reading["number"], what, f"{reading['speed_rpm']:.1f}",
-                         vector["channel"], size, unit, lag, flags)
+                         cut(vector["channel"], NAME), size, unit, lag, flags)
                     )  # fmt: skip
         if not run["readings"]:
             rows.append((run["run"], "-", "no reading", "-", "-", "-", "-", "-", ""))

@@ -321,6 +321,20 @@ def test_a_job_in_the_stands_unit_with_flags_where_they_belong(stand: Any, print
     assert rows(lines, "probe 1")[0][:5] == ["probe", "1", "mil", "pp", "0.2000"]
 
 
+def test_a_job_s_runs_are_flagged_by_its_slow_roll(stand: Any, printed: Any) -> None:
+    """12.7 um against a slow roll of 11 um: 1.7 apart, a third is 4.2. Against 5 um: 7.7 apart."""
+    stand.mount()
+    stand.run(Label.SLOW_ROLL, 11 + 0j, speed_hz=4.0, flags=())
+    stand.run(Label.O, 12.7 + 0j, flags=())
+    lines = printed("job", "show", "0142")
+    assert [words[-1] for words in rows(lines, "0142/2")] == ["runout", "runout"]
+    assert [words[-1] for words in rows(lines, "0142/1")] == ["0.0", "0.0"]
+    said = " ".join(" ".join(printed("run", "show", "0142/2")).split())
+    assert "flag: each of probe 1 and probe 2: its 1X is mostly runout" in said
+    stand.run(Label.SLOW_ROLL, 5 + 0j, speed_hz=4.0, flags=())
+    assert [words[-1] for words in rows(printed("job", "show", "0142"), "0142/2")] == ["0.0", "0.0"]
+
+
 def test_a_run_in_the_stands_unit_and_time(stand: Any, printed: Any) -> None:
     """Along a lag of 0 the variance is 0.0004 um^2: 1.96 x 0.02 um is 0.00309 mil pp. Across it 0.0005:
     1.96 x 0.02236 / 12.7 rad is 0.198 deg."""

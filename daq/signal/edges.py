@@ -218,6 +218,8 @@ class _Pulses:
     """Step between the samples about the crossing, counts."""
 
     def only(self, kept: NDArray[np.bool_]) -> _Pulses:
+        if kept.all():
+            return self
         return _Pulses(self.edges[kept], self.begun[kept], self.rest[kept], self.slope[kept])
 
 
@@ -423,8 +425,9 @@ class EdgeFinder:
         pulses = pulses.only(self._no_ringing(pulses.rest))
         if not len(pulses.edges):
             return pulses.edges
-        before = pulses.begun[0] if self._begun is None else self._begun
-        spans = np.diff(pulses.begun, prepend=before).astype(np.float64)
+        spans = np.empty(len(pulses.begun))
+        spans[0] = 0 if self._begun is None else pulses.begun[0] - self._begun
+        np.subtract(pulses.begun[1:], pulses.begun[:-1], out=spans[1:])
         widths = spans - pulses.rest
         known = slice(1 if self._begun is None else 0, None)
         self._begun = int(pulses.begun[-1])

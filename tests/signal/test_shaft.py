@@ -145,6 +145,24 @@ def test_what_sharp_edges_leave_open() -> None:
     assert unresolved_deg(float("inf"), 50.0) == 0.0
 
 
+@pytest.mark.parametrize("low", [4, 40])
+def test_edges_stamped_by_hardware_leave_nothing_open(low: int) -> None:
+    """As daq/drivers/frames draws them: +h, then h f and -h (1 - f) about the edge, then -h. A line between
+    these two is exact, at 20 samples a turn too."""
+    rng = np.random.default_rng(5)
+    h, turn = 32767, 5 * low + 0.37
+    places = 30 + turn * np.arange(200) + rng.uniform(-0.4, 0.4, 200)
+    column = np.full(int(places[-1]) + 60, h, np.int32)
+    for place in places:
+        at, part = int(place), place % 1
+        column[at : at + 2 + low] = [round(h * part), -round(h * (1 - part)), *[-h] * low]
+    finder, edges = edges_in(column, PulseParams(5 / h, (-h - 1, h)), RATE)
+    assert edges == pytest.approx(places, abs=2e-3)
+    assert finder.edge_samples == pytest.approx(2.0, abs=0.05)
+    assert unresolved_deg(finder.edge_samples, turn) == 0.0
+    assert finder.pulse_length >= 3
+
+
 def fits_of(s: Any, changed: NDArray[Any], **pulse: Any) -> tuple[BlockFitter, list[Any]]:
     params = PulseParams(s.volts_per_count, s.scale, **pulse)
     fitter = BlockFitter(params, s.channels, s.rate_hz, block_s=1.0)

@@ -17,7 +17,7 @@ from window_kit import Floats, Window, covariances, first_orders, inside
 from daq.signal.covariance import circle_factor, edge_jitter, parts_of, stated_covariance
 from daq.signal.revolutions import turns_of
 
-TRIALS, PROBES = 2000, 100
+TRIALS, PROBES = 2000, 200
 
 
 def white(w: Window, rng: np.random.Generator) -> Floats:
@@ -51,8 +51,8 @@ def coverage(w: Window, noise: Callable[[Window, np.random.Generator], Floats], 
 
 @pytest.mark.parametrize(
     "noise",
-    [white, remembering(0.03), remembering(0.3), remembering(1.0), pink],
-    ids=["white", "AR 0.03 turns", "AR 0.3 turns", "AR 1 turn", "1/f"],
+    [white, remembering(0.1), remembering(1.0), pink],
+    ids=["white", "AR 0.1 turns", "AR 1 turn", "1/f"],
 )
 def test_sixteen_parts_hold_the_truth_as_often_as_they_say(
     noise: Callable[[Window, np.random.Generator], Floats],
@@ -74,13 +74,13 @@ def test_noise_of_the_edges_is_covered() -> None:
     known variance. With noise in the probes of the same size it is 95 to 98.6 %."""
     rng = np.random.default_rng(12)
     w, held, stated, errors = Window(per_turn=64.3, turns=64), [], [], []
-    for _ in range(120):
+    for _ in range(80):
         late = rng.normal(0, np.radians(0.5) / (2 * np.pi) * w.per_turn, w.turns + 3)
         m = w.measured(w.counts(rng.normal(0, 1.7, (w.frames, 1)), late=late))
         held.append(inside(m, w.vector)[0])
         errors.append(abs(first_orders(m)[0] - w.vector) ** 2)
         stated.append(np.trace(covariances(m)[0]))
-    assert np.mean(held) > 0.91  # 120 trials: 0.95 less 2 sd
+    assert np.mean(held) > 0.9  # 80 trials: 0.95 less 2 sd
     assert 0.9 < np.sqrt(np.mean(stated) / np.mean(errors)) < 1.5
 
 
@@ -109,13 +109,13 @@ def test_parts() -> None:
 
 def test_the_share_of_an_edge_that_neighbouring_parts_hide() -> None:
     """Parts of one turn: each has the mean of its two edges, so their scatter shows half of what their mean
-    has; the other half is added. 4000 windows of 16 turns, worked out from the edges alone."""
+    has; the other half is added. 1500 windows of 16 turns, worked out from the edges alone."""
     rng = np.random.default_rng(14)
-    edges = rng.normal(0, 0.01, (4000, 17))
+    edges = rng.normal(0, 0.01, (1500, 17))
     parts = 1j * (edges[:, 1:] + edges[:, :-1]) / 2  # of a unit vector at 0 degrees
     means = parts.mean(axis=1).imag
     one_turn = np.array([[0.0, 0.0], [0.0, 0.01**2]])
     stated = [stated_covariance(np.zeros((2, 2)), p, one_turn, 16)[1, 1] for p in parts]
     hotelling = 1.33722  # scipy: 2*15/14*F(0.95; 2, 14)/chi2(0.95; 2), for the scattered half
     want = np.var(means)
-    assert np.mean(stated) == pytest.approx((0.5 * hotelling + 0.5) * want, rel=0.06)
+    assert np.mean(stated) == pytest.approx((0.5 * hotelling + 0.5) * want, rel=0.09)

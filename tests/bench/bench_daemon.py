@@ -5,9 +5,9 @@ Run it:  python tests/bench/bench_daemon.py [SECONDS]
 A prepared second of samples (15 probes and the once-per-rev channel, 50 turns a second) is delivered over
 and over at real pace, in blocks of 10 ms and then of 0.1 s (drivers are asked for 0.05 to 0.2 s); beside the
 analysis, which keeps the raw samples of its window, three readers take every sample out of the ring in hops
-of 0.1 s. Printed: samples lost, the daemon's share of a core in all and by thread, the time from a block's end
-to the vectors made from it, and the share that the bare estimator (edges, angles, least squares of offset and
-1X to 3X on the same blocks, nothing else) takes of the same core. No thresholds: a benchmark is read, not
+of 0.1 s. Printed: samples lost, the daemon's share of a core in all and by thread, the time from a block's
+end to the vectors made from it, and the share that the bare estimator (edges, angles, least squares of offset
+and 1X to 3X on the same blocks, nothing else) takes of the same core. No thresholds: a benchmark is read, not
 passed.
 """
 

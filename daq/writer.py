@@ -81,7 +81,7 @@ class Writer:
             if not full:
                 self._records.append(act)
         if full:
-            self._drop(f"store blocked and {RECORDS_HELD} records held")
+            self._drop(f"{RECORDS_HELD} records wait already: the store is blocked or too slow")
         if self._trouble is not None:
             self._post_held()
         self._asked.put(None)
@@ -97,7 +97,7 @@ class Writer:
             while not (stop.is_set() and self._drained()):
                 beat()
                 self._serve_one(IDLE_S)
-                self._write_records()
+                self._write_records(beat)
             self._try_once_more()
             self._fold()
         finally:
@@ -162,8 +162,10 @@ class Writer:
                 self._records.append(lambda ledger: ledger.note_event("store_blocked", cause))
             self._hold(error)
 
-    def _write_records(self) -> None:
+    def _write_records(self, beat: Callable[[], None] = lambda: None) -> None:
+        """Write what is held; ``beat`` after each, for more may come as fast as it is written."""
         while not self._blocked():
+            beat()
             with self._lock:
                 head = self._records[0] if self._records else None
             if head is None:

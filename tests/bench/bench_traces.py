@@ -1,8 +1,8 @@
 """What tracing costs beside the live blocks: processor time of a ramp and of a dwell, as shares.
 
 Run it: python tests/bench/bench_traces.py. Sixteen probes at 51.2 kS/s, int32, chunks of 0.1 s. A ramp of
-300 r/min a second from 600 to 3600 r/min is traced all the time, a dwell at 3000 r/min never. Reference in the
-same process: the same chunks through ``BlockFitter``, edges included.
+300 r/min a second from 600 to 3600 r/min is traced all the time, a dwell at 3000 r/min never. Reference in
+the same process: the same chunks through ``BlockFitter``, edges included.
 """
 
 from __future__ import annotations

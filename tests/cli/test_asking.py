@@ -114,7 +114,8 @@ def test_every_option_that_answers_alone_has_its_question() -> None:
 # --- a real terminal ---------------------------------------------------------------------------------
 
 PROGRAM = """
-import os, sys
+import os, signal, sys
+signal.signal(signal.SIGINT, signal.default_int_handler)  # ignored where the tests run in the background
 if sys.stdin.isatty():
     os.close(os.open(os.ttyname(0), os.O_RDWR))  # a session's leader gets its terminal so, and with it Ctrl-C
 from cli.asking import post_or_ask

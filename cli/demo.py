@@ -167,6 +167,7 @@ def _play(shell: Shell, seed: int, pace: float, *, kept: bool) -> int:
     shell.run("stand", "check", STAND)
     with shell.serving():
         verdicts = [_by_trial_weight(shell), _by_reuse(shell)]
+        _looked_at(shell, f"{FIRST[1]}/1")
         for _, job in (FIRST, SECOND):
             shell.run("job", "show", job)
             shell.run("plot", "polar", job, "-o", f"job-{job}.png")
@@ -218,6 +219,14 @@ def _by_reuse(shell: Shell) -> Verdict:
     _mount(shell, machine, job)
     _run(shell, "O")
     return _correct(shell, job, reuse=True)
+
+
+def _looked_at(shell: Shell, run: str) -> None:
+    """What a run holds beside its vectors, and that they can be had again from the stored samples."""
+    click.echo(f"\n# Run {run} once more")
+    shell.run("run", "show", run)
+    shell.run("plot", "bode", run, "-o", f"bode-{run.replace('/', '-')}.png")
+    shell.run("run", "recompute", "--all")
 
 
 def _mount(shell: Shell, machine: str, job: str) -> None:

@@ -30,6 +30,8 @@ def test_the_demo_balances_both_machines_and_readme_shows_it(operator):
     assert "OUT OF TOLERANCE" not in printed
     for job in ("0142", "0143"):
         assert (operator.folder / "demo" / f"job-{job}.png").stat().st_size > 10_000
+    assert (operator.folder / "demo" / "bode-0142-1.png").stat().st_size > 10_000
+    assert "6 readings: 6 identical to the last bit" in printed
     assert [line for line in printed.splitlines() if len(line) > 80 and "/" not in line] == []
     readme = walkthrough.README.read_text()
     assert walkthrough.words(walkthrough.filled(readme, printed)) == walkthrough.words(readme)

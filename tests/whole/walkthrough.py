@@ -15,6 +15,7 @@ import tempfile
 from pathlib import Path
 
 README = Path(__file__).parents[2] / "README.md"
+PICTURES = ("job-0142.png", "bode-0142-1.png")
 MARKER = re.compile(r"<!-- demo: (.+?)(?: #(\d+))? -->\n(?:\n```console\n.*?\n```\n)?", re.S)
 NUMBER = re.compile(r"-?\d+(?:\.\d+)?")
 FOLDERS = re.compile(r"^Store:\s+\S+$", re.M)
@@ -46,8 +47,8 @@ def filled(text: str, printed: str) -> str:
 
 
 def words(text: str) -> str:
-    """Text with every number and every run of blanks or dashes made alike."""
-    return re.sub(r"[ -]+", " ", NUMBER.sub("#", text))
+    """Text with every run of numbers, of blanks and of dashes (a lag below its floor) made alike."""
+    return re.sub(r"#(?: #)+", "#", re.sub(r"[ -]+", " ", NUMBER.sub("#", text)))
 
 
 def main() -> None:
@@ -60,7 +61,8 @@ def main() -> None:
             check=True,
         )
         README.write_text(filled(README.read_text(), done.stdout))
-        shutil.copy(folder / "job-0142.png", README.parent / ".readme" / "job-0142.png")
+        for picture in PICTURES:
+            shutil.copy(folder / picture, README.parent / ".readme" / picture)
 
 
 if __name__ == "__main__":

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections import defaultdict
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 from uuid import UUID
 
-from sqlalchemy import Connection, Row, Select, func, select, union
+from sqlalchemy import Connection, Row, Select, Table, func, select, union
 
 from config.errors import Refusal
 from store import recall
@@ -27,9 +27,9 @@ from store.records import (
     Vector,
     WeightEvent,
 )
-from store.tables import job, mount, raw, raw_aged, run_assign
+from store.tables import job, level, measured_vector, mount, raw, raw_aged, run_assign, vector
 from store.tables import run as run_table
-from store.views import level_now, mark_now, reading_now, run_now, vector_now
+from store.views import mark_now, reading_now, run_now
 
 # --- runs --------------------------------------------------------------------------------------------
 
@@ -172,18 +172,32 @@ def reading_by_id(c: Connection, reading_id: UUID) -> Reading:
 
 def _readings(c: Connection, condition: Any) -> dict[UUID, list[Reading]]:
     rows = c.execute(select(reading_now).where(condition).order_by(reading_now.c.seq)).all()
+    newest = {row.id: row.version for row in rows}
     ids = select(reading_now.c.id).where(condition)
-    vectors: dict[UUID, list[Vector]] = defaultdict(list)
-    for v in c.execute(
-        select(vector_now).where(vector_now.c.reading_id.in_(ids)).order_by(vector_now.c.place)
-    ):
-        vectors[v.reading_id].append(to_vector(v))
-    levels: dict[UUID, list[Level]] = defaultdict(list)
-    for v in c.execute(select(level_now).where(level_now.c.reading_id.in_(ids)).order_by(level_now.c.place)):
-        levels[v.reading_id].append(to_level(v))
+    first = [i for i, version in newest.items() if version == 1]
+    vectors = _parts(c, vector, ids, dict.fromkeys(first)) if first else {}
+    if len(first) < len(rows):
+        vectors |= _parts(c, measured_vector, ids, newest)
+    levels = _parts(c, level, ids, newest)
     found: dict[UUID, list[Reading]] = defaultdict(list)
     for row in rows:
-        found[row.run_id].append(_reading(row, vectors[row.id], levels[row.id]))
+        told = [to_vector(v) for v in vectors.get(row.id, ())]
+        found[row.run_id].append(_reading(row, told, [to_level(v) for v in levels.get(row.id, ())]))
+    return found
+
+
+def _parts(
+    c: Connection, table: Table, ids: Select[Any], newest: Mapping[UUID, int | None]
+) -> dict[UUID, list[Row[Any]]]:
+    """By reading, the rows of its ``newest`` version (None = the table knows none), in their places.
+
+    From the tables and not from ``vector_now``: SQLite looks through all of a view of two tables.
+    """
+    found: dict[UUID, list[Row[Any]]] = defaultdict(list)
+    for row in c.execute(select(table).where(table.c.reading_id.in_(ids)).order_by(table.c.place)):
+        version = newest.get(row.reading_id, 0)
+        if version is None or version == getattr(row, "version", None):
+            found[row.reading_id].append(row)
     return found
 
 
@@ -208,12 +222,12 @@ def _reading(row: Row[Any], vectors: Sequence[Vector], levels: Sequence[Level]) 
 
 
 def to_level(row: Row[Any]) -> Level:
-    """A row of ``level`` or ``level_now``."""
+    """A row of ``level``."""
     return Level(row.channel, row.gap_v, row.residual_sd, row.peak_to_peak, row.ac_rms, row.unit)
 
 
 def to_vector(row: Row[Any]) -> Vector:
-    """A row of ``vector``, ``measured_vector`` or ``vector_now``."""
+    """A row of ``vector`` or ``measured_vector``."""
     return Vector(
         channel=row.channel,
         order=row.harmonic,

@@ -124,6 +124,16 @@ def _plan(path: Path, sql: str) -> str:
     return plan
 
 
+def test_a_run_is_read_by_index_alone(stand: Stand) -> None:
+    """What it costs to read one run must not grow with the store: no statement looks through a table."""
+    stand.mount()
+    run, _ = stand.run(Label.O)
+    asked = _statements(stand.history, lambda: stand.history.run(run.name))
+    plans = [_plan(stand.path, sql.replace("?", "1")) for sql in asked]
+    assert len(plans) >= 4
+    assert [plan for plan in plans if "SCAN" in plan] == []
+
+
 def test_coefficients_use_the_covering_index(store_path: Path) -> None:
     wanted = coefficients_like("KR-22", 1, "probe 1", 25.0, 0.005, 5)
     sql = str(wanted.compile(dialect=sqlite.dialect(), compile_kwargs={"literal_binds": True}))

@@ -70,7 +70,7 @@ def _lines(answer: Json, zone: tzinfo) -> list[str]:
         lines.append(f"mounted  {_word(mount, 'machine')} {of}")
     else:
         lines.append("mounted  nothing; runs are stored as unassigned")
-    return lines + _run_lines(live) + _mark_lines(answer.get("pending"), zone)
+    return lines + _run_lines(live) + _mark_lines(answer.get("pending"), live, zone)
 
 
 def _run_lines(live: Json) -> list[str]:
@@ -85,11 +85,13 @@ def _run_lines(live: Json) -> list[str]:
     return lines
 
 
-def _mark_lines(pending: Json | None, zone: tzinfo) -> list[str]:
+def _mark_lines(pending: Json | None, live: Json, zone: tzinfo) -> list[str]:
     if not pending:
         return []
     since = local(pending.get("asked_utc"), zone)
-    return [f"mark     {_word(pending, 'label')} pending since {since}; {times(zone)}"]
+    waits = pending.get("waits_for")
+    below = [] if not waits or waits == live.get("still_out") else _below(f"it waits for {waits}")
+    return [f"mark     {_word(pending, 'label')} pending since {since}; {times(zone)}", *below]
 
 
 def _word(told: Json, key: str) -> str:

@@ -15,12 +15,13 @@ from daq.clock import Clock
 from daq.control import Act, Question
 from daq.desk import Desk
 from daq.live_flags import LiveFlags
-from daq.marks import MarkDesk
+from daq.marks import MarkDesk, waits_for
 from daq.pump import Pump
 from daq.rotor_desk import RotorDesk
 from daq.writer import Writer
 from store import asjson
 from store.history import History
+from store.records import Mark
 
 Json = dict[str, Any]
 NO_PARAMETERS: frozenset[str] = frozenset()
@@ -104,6 +105,11 @@ def shows(stand: Stand) -> dict[str, str]:
     return {c.name: c.display.name for c in stand.channels}
 
 
+def _pending_json(stand: Stand, history: History, live: Live, pending: Mark) -> Json:
+    waits = waits_for(live, pending, history, stand.run.slow_roll_limit_hz)
+    return {**asjson.mark_json(pending), "waits_for": waits}
+
+
 def status_json(stand: Stand, history: History, live: Live, flags: LiveFlags) -> Json:
     """What ``revmark status --json`` prints."""
     mount, pending, info = history.current_mount(), history.pending_mark(), history.info()
@@ -116,7 +122,7 @@ def status_json(stand: Stand, history: History, live: Live, flags: LiveFlags) ->
         "store": str(stand.store_path),
         "live": {**told, "state": str(live.state), "speed_rpm": None if speed is None else speed * 60},
         "mount": asjson.mount_json(mount, number) if mount else None,
-        "pending": asjson.mark_json(pending) if pending else None,
+        "pending": None if pending is None else _pending_json(stand, history, live, pending),
         "sqlite": info.sqlite,
         "wal_reset_safe": info.sqlite_wal_reset_safe,
         "wal_bytes": info.wal_bytes,

@@ -120,7 +120,7 @@ class MarkDesk:
         """The mark as JSON, with the reading it took and, for a check, the verdict."""
         told: Json = {"mark": asjson.mark_json(mark), "waits_for": "", "show": self._show}
         if mark.state is MarkState.PENDING:
-            told["waits_for"] = waits_for(self._board.read())
+            told["waits_for"] = waits_for(self._board.read(), mark, self._history, self._slow_roll_limit_hz)
         if mark.state is MarkState.LABELLED and mark.reading_id is not None and mark.run_name is not None:
             reading = self._history.reading(mark.reading_id)
             told["reading"] = consult.reading_json(self._history, reading, mark.job_number)
@@ -154,11 +154,14 @@ def _seconds(text: str) -> float:
     return value
 
 
-def waits_for(live: Live) -> str:
+def waits_for(live: Live, mark: Mark, history: History, slow_roll_limit_hz: float) -> str:
     """What a pending mark waits for, in a phrase."""
     if not live.may_be_turning:
         return f"a run to begin ({live.state})"
     if live.run is None:
         return "the rotor to pass the minimum speed"
-    speed = f" at {live.speed_hz * 60:.0f} r/min" if live.speed_hz else ""
-    return live.still_out or f"a fresh reading{speed}"
+    if live.still_out or not live.speed_hz:
+        return live.still_out or "a fresh reading"
+    why = consult.why_passed_by(history, mark, live.speed_hz, slow_roll_limit_hz)
+    at = f"{live.speed_hz * 60:.0f} r/min"
+    return f"a fresh reading at {at}" if why is None else f"another speed: {at} is {why}"

@@ -19,7 +19,20 @@ from store.casework_bode import BodePicture, bode_picture, trace_json
 from store.casework_flags import FlaggedReading, flagged_in_job
 from store.casework_slow_roll import Runout, runout_of
 from store.history import History
-from store.records import JobStory, Label, Machine, Mount, PieceDraft, Reading, Run, Trace, Vector
+from store.ledger_marks import off_speed
+from store.records import (
+    JobStory,
+    Label,
+    Machine,
+    Mark,
+    Mount,
+    PieceDraft,
+    Reading,
+    Run,
+    SetUp,
+    Trace,
+    Vector,
+)
 
 Json = dict[str, Any]
 JUDGED = (Label.CHECK, Label.TRIM)
@@ -108,6 +121,16 @@ def _judged(story: JobStory) -> Iterator[tuple[Run, UUID]]:
                 yield run, reading.id
 
 
+def why_passed_by(
+    history: History, mark: Mark, speed_hz: float, slow_roll_limit_hz: float | None
+) -> str | None:
+    """Why a pending mark takes no reading at the speed that turns now; None = it takes one."""
+    mount = history.current_mount()
+    critical_hz = None if mount is None else mount.machine.model.first_critical_hz
+    of = history.job(mark.job_number)
+    return off_speed(mark.label, speed_hz, of, slow_roll_limit_hz, critical_hz)
+
+
 def weight_entries(history: History, mounts: Iterable[Mount]) -> list[Json]:
     """Every weight entry of some mounts, void ones too, each with the run after which it was done."""
     found: list[Json] = []
@@ -133,8 +156,8 @@ def run_told(history: History, run: Run, *, minus_slow_roll: bool = False) -> Js
     """The same of a run at hand, in whichever version its readings are.
 
     Raises Refusal when a slow roll is to be taken off and there is none."""
-    story = _story_of(history, run)
     set_up, traces = history.set_up(run.set_up_id), history.traces(run.id, run.set_up_id)
+    story = _told_as(_story_of(history, run), run, set_up)
     flags = {r.id: reading_flags(story, run, r) for r in run.readings}
     seen = {r.id: standing_flags.orbits_of(story, run, r, set_up) for r in run.readings}
     runout = runout_of(story, run) if minus_slow_roll else None
@@ -154,6 +177,14 @@ def run_told(history: History, run: Run, *, minus_slow_roll: bool = False) -> Js
 
 def _story_of(history: History, run: Run) -> JobStory | None:
     return None if run.job_number is None else history.job_story(run.job_number, with_void=True)
+
+
+def _told_as(story: JobStory | None, run: Run, set_up: SetUp) -> JobStory | None:
+    """The job's story with the run in the version at hand, so that its own slow roll is of that version."""
+    if story is None:
+        return None
+    runs = tuple(run if r.id == run.id else r for r in story.runs)
+    return replace(story, runs=runs, set_ups={**story.set_ups, run.set_up_id: set_up})
 
 
 def _runout_json(run: Run, runout: Runout, traces: Iterable[Trace]) -> Json:

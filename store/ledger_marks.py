@@ -256,17 +256,25 @@ def unfit(
     critical_hz: float | None = None,
 ) -> str | None:
     """Why a reading at this speed cannot take the label; None = it can."""
-    at = f"was taken at {speed_hz * 60:.1f} r/min"
+    why = off_speed(label, speed_hz, of, slow_roll_limit_hz, critical_hz)
+    return None if why is None else f"was taken at {speed_hz * 60:.1f} r/min, {why}"
+
+
+def off_speed(
+    label: Label, speed_hz: float, of: Job, slow_roll_limit_hz: float | None, critical_hz: float | None
+) -> str | None:
+    """What keeps the label from this speed, without naming it; None = nothing does."""
     if label is Label.SLOW_ROLL:
-        if slow_roll_limit_hz is None or speed_hz <= slow_roll_limit_hz:
-            return None if slow_roll_limit_hz is not None else f"{at}, and no slow-roll limit is known"
-        return f"{at}, above the slow-roll limit of {slow_roll_limit_hz * 60:.1f} r/min"
+        if slow_roll_limit_hz is None:
+            return "and no slow-roll limit is known"
+        above = speed_hz > slow_roll_limit_hz
+        return f"above the slow-roll limit of {slow_roll_limit_hz * 60:.1f} r/min" if above else None
     bands = [_band(s, critical_hz) for s in of.speeds_hz]
     if any(abs(speed_hz - s) <= band * s for s, band in zip(of.speeds_hz, bands, strict=True)):
         return None
     speeds = ", ".join(f"{s * 60:.1f}" for s in of.speeds_hz)
     near = " (0.2 % within 10 % of the first critical speed)" if CRITICAL_BAND in bands else ""
-    return f"{at}, not within 0.5 %{near} of the balancing speed ({speeds} r/min)"
+    return f"not within 0.5 %{near} of the balancing speed ({speeds} r/min)"
 
 
 def _band(balancing_hz: float, critical_hz: float | None) -> float:

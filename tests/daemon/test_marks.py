@@ -70,6 +70,17 @@ def test_no_wait_leaves_it_pending_and_wait_ends_with_it(mounted: Bay) -> None:
     assert mounted.status()["pending"] is None
 
 
+def test_a_speed_that_no_reading_fits_is_named_while_it_waits(mounted: Bay) -> None:
+    """The bay's job balances at 1500 r/min; what is steady at 1200 is never taken (REUSE (a): 0.5 %)."""
+    process = waiting(mounted, "O")
+    mounted.turn(1200.0)
+    why = r"another speed: 1\d\d\d r/min is not within 0.5 % of the balancing speed \(1500.0 r/min\)"
+    until(lambda: re.search("waiting: " + why, " ".join(process.err.split())), "the speed to be named")
+    assert "it waits for another speed: 1200 r/min" in mounted.must("status").out
+    mounted.turn()
+    assert process.done().out.startswith("O is run 0142/1, reading 2: 1500.0 r/min")
+
+
 def test_cancel_labels_nothing(mounted: Bay) -> None:
     mounted.must("mark", "O", "--no-wait")
     assert mounted.must("mark", "--cancel").out == "O of job 0142: cancelled; nothing was labelled.\n"

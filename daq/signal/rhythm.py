@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
+from numpy.typing import NDArray
 
 from daq.signal.shapes import Floats, median
 
@@ -60,53 +61,86 @@ WEIGHTS = {n: [_weights(n, m) for m in range(1, MOST_TURNS + 1)] for n in range(
 
 
 class Mended:
-    """Edges and what lies between them, grown at the end."""
+    """Edges and what lies between them, grown at the end; in memory that doubles, so that growing by one edge
+    at a time costs no more for a long window than for a short one."""
 
     def __init__(self) -> None:
-        self.edges: Floats = np.empty(0)
-        self.good = np.empty(0, bool)
+        self._edges, self._good = np.empty(0), np.empty(0, bool)
+        self._missed, self._doubles = np.empty(0, np.int64), np.empty(0, np.int64)
+        self._count = 0
+        """Edges held."""
+
+    @property
+    def edges(self) -> Floats:
+        """Shape (edges,)."""
+        return self._edges[: self._count]
+
+    @property
+    def good(self) -> NDArray[np.bool_]:
         """Shape (edges - 1,): a whole single turn."""
-        self.missed = np.empty(0, np.int64)
+        return self._good[: max(0, self._count - 1)]
+
+    @good.setter
+    def good(self, good: NDArray[np.bool_]) -> None:
+        self._good = good
+
+    @property
+    def missed(self) -> NDArray[np.int64]:
         """Shape (edges - 1,): pulses that did not come; 1 where the edge at the turn's end is filled in."""
-        self.doubles = np.empty(0, np.int64)
+        return self._missed[: max(0, self._count - 1)]
+
+    @property
+    def doubles(self) -> NDArray[np.int64]:
         """Shape (edges - 1,): pulses too many."""
+        return self._doubles[: max(0, self._count - 1)]
+
+    def _grow(self, edges: Floats) -> int:
+        """Room for ``edges`` more, and these in it; the turns up to them are good. The first of them."""
+        first, self._count = max(0, self._count - 1), self._count + len(edges)
+        if self._count > len(self._edges):
+            more = max(len(edges), len(self._edges))
+            self._edges = np.concatenate((self._edges, np.empty(more)))
+            self._good = np.concatenate((self._good, np.ones(more, bool)))
+            self._missed = np.concatenate((self._missed, np.zeros(more, np.int64)))
+            self._doubles = np.concatenate((self._doubles, np.zeros(more, np.int64)))
+        self._edges[self._count - len(edges) : self._count] = edges
+        return first
 
     def add(self, edges: Floats, *, missed: int = 0, doubles: int = 0) -> None:
         """Add good turns up to ``edges``: the first ``missed`` of them are filled in, ``doubles`` taken out
         before the last."""
-        turns = len(edges) - (0 if len(self.edges) else 1)
-        fresh = np.zeros(turns, np.int64)
-        self.edges = np.concatenate((self.edges, edges))
-        self.good = np.concatenate((self.good, np.ones(turns, bool)))
-        self.missed = np.concatenate((self.missed, fresh))
-        self.doubles = np.concatenate((self.doubles, fresh))
-        self.missed[len(self.missed) - turns : len(self.missed) - turns + missed] = 1
+        first = self._grow(edges)
+        self._missed[first : min(first + missed, self._count - 1)] = 1
         self.book(doubles)
 
     def join(self, other: Mended, *, missed: int = 0, doubles: int = 0, good: bool = False) -> None:
         """Add ``other``; whether the turn up to its first edge, if there is one, is ``good``."""
-        link = [0] if len(self.edges) and len(other.edges) else []
-        self.edges = np.concatenate((self.edges, other.edges))
-        self.good = np.concatenate((self.good, np.full(len(link), good), other.good))
-        self.missed = np.concatenate((self.missed, [missed] * len(link), other.missed)).astype(np.int64)
-        self.doubles = np.concatenate((self.doubles, [doubles] * len(link), other.doubles)).astype(np.int64)
+        first = self._grow(other.edges)
+        link = [0] if first + len(other.good) < self._count - 1 else []
+        last = max(0, self._count - 1)
+        self._good[first:last] = np.concatenate((np.full(len(link), good), other.good))
+        self._missed[first:last] = np.concatenate(([missed] * len(link), other.missed))
+        self._doubles[first:last] = np.concatenate(([doubles] * len(link), other.doubles))
 
     def back(self) -> Mended:
         """The same with time running backwards."""
         turned = Mended()
-        turned.edges, turned.good = -self.edges[::-1], self.good[::-1]
-        turned.missed, turned.doubles = np.roll(self.missed[::-1], -1), self.doubles[::-1]
+        turned._count = self._count
+        turned._edges, turned._good = -self.edges[::-1], self.good[::-1]
+        turned._missed, turned._doubles = np.roll(self.missed[::-1], -1), self.doubles[::-1]
         return turned
 
     def drop(self, first: int) -> None:
         """Forget the ``first`` edges and the turns that begin with them."""
-        self.edges, self.good = self.edges[first:], self.good[first:]
-        self.missed, self.doubles = self.missed[first:], self.doubles[first:]
+        kept = slice(first, self._count)
+        self._edges, self._good = self._edges[kept].copy(), self._good[kept].copy()
+        self._missed, self._doubles = self._missed[kept].copy(), self._doubles[kept].copy()
+        self._count = len(self._edges)
 
     def book(self, doubles: int) -> None:
         """Book pulses too many to the last turn."""
-        if doubles and len(self.doubles):
-            self.doubles[-1] += doubles
+        if doubles and self._count > 1:
+            self._doubles[self._count - 2] += doubles
 
 
 class Rhythm:
@@ -203,7 +237,8 @@ class Rhythm:
         every = np.concatenate((self._history, new))
         place = every[_BEFORE[: len(new)]] @ WEIGHTS[HISTORY][0]
         turn = place - every[HISTORY - 1 : -1]
-        off = np.abs(new - place) / turn
+        off = np.full(len(new), np.inf)  # what is foretold before the newest edge is no rhythm
+        np.divide(np.abs(new - place), turn, out=off, where=turn > 0)
         scatter = np.concatenate((self._scatter, off))
         median_off = np.partition(scatter[_NEWEST[: len(new)]], 7, axis=1)[:, 7]
         allowed = np.clip(MISSES * median_off, *TOLERANCE)
@@ -228,7 +263,7 @@ class Rhythm:
         now = float(history[-1])
         turn = float(history @ WEIGHTS[len(history)][0]) - now
         allowed = float(np.clip(MISSES * median(self._scatter), *TOLERANCE))
-        for turns, weights in enumerate(WEIGHTS[len(history)], start=1):
+        for turns, weights in enumerate(WEIGHTS[len(history)] if turn > 0 else (), start=1):
             place = float(history @ weights)
             reach = min(allowed * (turns + 1) / 2, FARTHEST) * turn
             if not last and waiting[-1] <= place + reach:
@@ -286,9 +321,11 @@ def _scatter_of(edges: Floats) -> float:
 
 def _filled(before: float, now: float, then: float, turns: int) -> Floats:
     """Edges missed between ``now`` and ``then``, so many ``turns`` on: by the parabola through these two and
-    the edge a turn ``before`` the first."""
+    the edge a turn ``before`` the first; evenly where that parabola would turn back."""
     n = np.arange(1.0, turns)
     first, step = now - before, (then - now) / turns
+    if abs(step - first) * (turns - 1) >= step * (turns + 1):
+        first = step
     found: Floats = now + n * step + n * (n - turns) * (step - first) / (turns + 1)
     return found
 

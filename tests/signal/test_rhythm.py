@@ -16,7 +16,7 @@ from config.steadiness import PRESETS
 from daq.signal.blocks import BlockFitter
 from daq.signal.measure import measure
 from daq.signal.revolutions import turns_of
-from daq.signal.rhythm import Rhythm
+from daq.signal.rhythm import Mended, Rhythm, _filled
 from daq.signal.steadiness import Probe, judge
 
 Floats = NDArray[np.float64]
@@ -225,3 +225,31 @@ def test_blocks_of_repaired_turns_do_not_hang_on_the_chunks(
         assert (one.first_sample, one.stop_sample) == (other.first_sample, other.stop_sample)
         assert (one.missed, one.doubles) == (other.missed, other.doubles)
         assert one.vectors == pytest.approx(other.vectors, rel=1e-9)
+
+
+@pytest.mark.parametrize("after", [0.5, 1.0, 16.0, 100.0])
+def test_turns_that_shrink_to_nothing_end_the_rhythm(after: float) -> None:
+    """Turns of 16, 15, ... 1: the parabola foretells the next edge where the newest one is, and no distance
+    can be counted in turns of no length. Warnings are errors here."""
+    edges = np.cumsum([0.0, *range(16, 0, -1), *[after] * 12])
+    turns = turns_of(edges)
+    assert (turns.periods > 0).all()
+    assert turns.periods[-1] == pytest.approx(after)
+
+
+def test_edges_filled_in_never_turn_back() -> None:
+    """Turns of 300, then four in 400: the parabola through 0, 300 and 700 would be at 720 after three of
+    them. Four in 420 after one of 100, by hand: 100 + 105 n + n (n - 4) (105 - 100) / 5."""
+    assert _filled(0.0, 300.0, 700.0, 4).tolist() == [400.0, 500.0, 600.0]
+    assert _filled(0.0, 100.0, 520.0, 4).tolist() == [202.0, 306.0, 412.0]
+
+
+def test_edges_that_come_one_by_one_do_not_copy_all_before_them() -> None:
+    mended, sizes = Mended(), set()
+    for edge in range(5000):
+        mended.add(np.array([float(edge)]), doubles=edge % 2)
+        sizes.add(len(mended._edges))
+    assert len(sizes) <= 14  # 2^13 > 5000: doubled thirteen times
+    assert mended.edges.tolist() == list(range(5000))
+    assert mended.good.all()
+    assert (len(mended.good), mended.doubles.sum()) == (4999, 2500)

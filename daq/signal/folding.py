@@ -78,9 +78,10 @@ class Fold:
         if not self.bins:
             return None
         turns, bounds = self._turns, self._bounds
-        used = np.repeat(turns.good, self.bins)
+        size = bounds[1:] - bounds[:-1]
+        used = np.repeat(turns.good, self.bins) & (size > 0)  # a turn may have fewer samples than bins
         which = np.repeat(np.arange(len(turns.good)), self.bins)[used]
-        size = (bounds[1:] - bounds[:-1])[used]
+        size = size[used]
         middle = (bounds[1:] + bounds[:-1] - 1)[used] / 2 - turns.edges[which]
         period, curve = turns.periods[which], turns.curve[which]
         angle = self._numbers[which] + middle * (1 / period - curve * period + curve * middle)

@@ -7,6 +7,9 @@ import pytest
 import scipy.signal
 from window_kit import Window, covariances, first_orders, inside
 
+from daq.signal.folding import Fold
+from daq.signal.revolutions import turns_between
+from daq.signal.rhythm import Mended
 from daq.signal.shapes import Surroundings
 
 
@@ -168,3 +171,21 @@ def test_the_same_bits_again_with_lines() -> None:
     w = Window(per_turn=77.7, turns=64)
     counts = w.counts(line(w, 0.41, 5.0, np.arange(3.0)) + rng.normal(0, 0.1, (w.frames, 3)))
     assert w.measured(counts) == w.measured(counts.copy())
+
+
+def test_a_turn_with_fewer_samples_than_bins_folds_to_those_it_has() -> None:
+    """Twenty turns of 40 samples, one of 5, twenty of 40, and a probe that counts samples: every bin's mean
+    is the middle of its samples, no bin is empty, and no sample is left out or taken twice."""
+    mended = Mended()
+    mended.add(np.cumsum([0.0, *[40.0] * 20, 5.0, *[40.0] * 20]))
+    fold = Fold(turns_between(mended), 2)
+    samples = np.arange(1605)
+    fold.add(np.stack([samples, samples], axis=1), 0)
+    rows = fold.rows()
+    assert rows is not None
+    assert rows.size.min() == 1
+    assert rows.size.sum() == 1605
+    assert len(rows.size) == 40 * 16 + 5
+    first = np.cumsum(rows.size) - rows.size
+    middle = first + (rows.size - 1) / 2
+    assert rows.values[:, 0] == pytest.approx(middle - middle.mean(), abs=1e-9)

@@ -264,6 +264,9 @@ def _vectors(
     cov = _scattered(sums, values, jitter * orders)
     cov += covariance.radial(values, np.abs(values) * (gain - 1) / 2)
     cov += covariance.tangent(values, np.radians(edge_deg) * orders)
+    cov += covariance.radial(
+        values, np.abs(values) * (np.radians(edge_deg) * orders) ** 2 / 2
+    )  # along the arc
     cov += covariance.step_covariance(
         values, fit.orders.index(1), np.sqrt(2) * fit.ac_rms, fit.residual_sd, rate_hz / speed_hz
     )

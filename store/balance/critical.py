@@ -127,6 +127,8 @@ def _at(p: int, speed: Floats, vectors: Complexes, size: Floats) -> Critical | N
     why = [side for side in (low, high) if isinstance(side, str)]
     if isinstance(low, str) or isinstance(high, str):
         return NotCritical(float(speed[p]), float(size[p]), "; ".join(why))
+    if not high > low:
+        return NotCritical(float(speed[p]), float(size[p]), "the steps beside it have the same speed")
     return Critical(
         speed_hz=float(speed[p]),
         within_hz=float(max(speed[p] - speed[p - 1], speed[p + 1] - speed[p])) / 2,

@@ -180,3 +180,10 @@ def test_a_peak_on_the_shoulder_of_a_higher_one() -> None:
 
 def test_too_few_steps_say_nothing() -> None:
     assert found_at(np.array([1.0, 2.0]), np.array([1 + 0j, 2 + 0j])) == ((), ())
+
+
+def test_a_peak_among_steps_of_one_speed_is_refused() -> None:
+    """No width, so no amplification factor: by hand, both half-power speeds are 10 Hz."""
+    taken, refused = critical_speeds(np.full(5, 10.0), np.array([1, 2, 5, 2, 1 + 0j]), np.full(5, 0.01))
+    assert taken == ()
+    assert [(r.speed_hz, r.why) for r in refused] == [(10.0, "the steps beside it have the same speed")]

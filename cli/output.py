@@ -150,6 +150,8 @@ def plus_minus_deg(degrees: float | None) -> str:
     """The uncertainty of a lag: one decimal, two below 0.1; none where there is no lag."""
     if degrees is None:
         return "-"
+    if degrees < 0.005:
+        return "<0.01"
     return f"{degrees:.1f}" if degrees >= 0.1 else f"{degrees:.2f}"
 
 

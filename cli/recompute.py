@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from cli.asking import post_or_ask
 from cli.client import Client, find, new_key
 from cli.output import clean, count, json_option, operator_option, print_json, say, stand_option, warn
 from cli.typed import OfChannel, Quantity, parse_sense_of_positive, parse_stand_angle
@@ -23,6 +24,7 @@ WAIT_S = 3600.0
 LISTED = 5
 """So many differences of a reading are listed; --json has them all."""
 LARGEST = 100_000
+SENSES = {1: "rising", -1: "falling"}
 
 
 @click.command(context_settings={"max_content_width": 80})
@@ -44,8 +46,8 @@ def recompute(
     Nothing is changed and no daemon is needed, but with --keep. Exit code 1 when a figure is further off
     than another processor's rounding explains.
     """
-    if bool(run) == (every or job is not None):
-        raise click.UsageError("Name runs, or say --all or --job NUMBER.")
+    if bool(run) + every + (job is not None) != 1:
+        raise click.UsageError("Name runs, or say --all, or --job NUMBER: one of the three.")
     if keep:
         if not run:
             raise click.UsageError("Name the runs whose result shall be kept.")
@@ -163,12 +165,13 @@ def _kept(told: Json) -> str:
 @click.option("--sensor-angle", type=Quantity("angle"), metavar="ANGLE",
               help='Where the once-per-rev sensor really was: "90 deg", a stand angle.')  # fmt: skip
 @click.option("--why", required=True, metavar="TEXT", help="Why; it stays with the runs.")
+@click.option("--yes", "confirmed", is_flag=True, help="A sensitivity many times another is meant.")
 @stand_option
 @operator_option
 @json_option
 def revise(
     run: tuple[str, ...], sensitivities: tuple[Any, ...], angles: tuple[Any, ...], senses: tuple[Any, ...],
-    sensor_angle: float | None, why: str, stand: str | None, operator: str, *, as_json: bool,
+    sensor_angle: float | None, why: str, stand: str | None, operator: str, *, confirmed: bool, as_json: bool,
 ) -> None:  # fmt: skip
     """Give runs the set-up they were really measured with, and measure them again.
 
@@ -187,8 +190,12 @@ def revise(
         "channels": [{"channel": name, **told} for name, told in channels.items()],
         "sensor_angle_deg": None if sensor_angle is None else sensor_angle % 360.0,
         "why": why,
+        "confirmed": confirmed,
     }
-    answer = Client(find(stand)).post("/v1/run/revise", body, WAIT_S)
+    if not why.strip():
+        raise click.UsageError("--why is empty; say why the set-up was another.")
+    client = Client(find(stand))
+    answer = post_or_ask(lambda b: client.post("/v1/run/revise", b, WAIT_S), body, as_json=as_json)
     print_json(answer) if as_json else _print_revised(answer)
 
 
@@ -202,12 +209,24 @@ def _set(channels: dict[str, dict[str, Any]], what: str, told: list[tuple[str, d
         channels.setdefault(name, {}).update(values)
 
 
+def _change(told: Json) -> str:
+    name = "once-per-rev" if told["channel"] is None else clean(told["channel"])
+    was, now = told["was"], told["is"]
+    if told["what"] == "volts_per_unit":
+        by = f"amplitudes are {was / now:.6g} times what they were"
+        return f"{name}: sensitivity {was:.6g} -> {now:.6g} V per base unit; {by}"
+    if told["what"] == "positive":
+        return f"{name}: positive was {SENSES[was]}, is {SENSES[now]}"
+    return f"{name}: stand angle was {was:g} deg, is {now:g} deg"
+
+
 def _print_revised(answer: Json) -> None:
     for one in answer["runs"]:
         again = [r for r in one["readings"] if not r["why_not"]]
         scaled = [r for r in one["readings"] if r["why_not"]]
         say(f"Run {clean(one['run'])} has the corrected set-up: {count(len(again), 'reading')} measured again"
             + (f", {len(scaled)} scaled." if scaled else "."))  # fmt: skip
+        say(*(f"  {_change(c)}" for c in one.get("changes", ())))
         for r in scaled:
             say(f"  reading {r['reading']} was scaled exactly, not measured: {clean(r['why_not'])}")
     say("What was there stays: revmark run show RUN --version 1")

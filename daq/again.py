@@ -14,7 +14,7 @@ from config.errors import Refusal
 from daq.board import Board
 from daq.recompute import Again, again
 from daq.requests import RecomputeAsked, Request, ReviseAsked
-from daq.revise import ChannelChange, Correction, corrected, revised
+from daq.revise import ChannelChange, Correction, changes, corrected, question_far_off, revised
 from daq.writer import Writer
 from store.again import Remeasured, RunAgain
 from store.history import History
@@ -91,9 +91,12 @@ class AgainDesk:
         for run in self._closed(asked.runs):
             then = self._history.set_up(run.set_up_id)
             now = corrected(then, correction, run.name)
+            if not asked.confirmed:
+                question_far_off(then, now, run.name)
             found = [revised(self._history, run.name, r, then, now, why) for r in self._going_on(run)]
             runs.append(_run_again(run, found, now))
-            told.append({"run": run.name, "readings": [_reading_told(a, kept=True) for a in found]})
+            readings = [_reading_told(a, kept=True) for a in found]
+            told.append({"run": run.name, "changes": changes(then, now), "readings": readings})
         return runs, told
 
     def _going_on(self, run: Run) -> Iterator[Reading]:

@@ -33,7 +33,10 @@ class LiveFlags:
         told = self._records(live.run) if vectors else None
         if told is None:
             return low
-        return [*low, *derived_flags(*told, consult.reading_now(told[1], vectors, live.flags))]
+        return [
+            *low,
+            *derived_flags(*told, consult.reading_now(told[1], vectors, live.flags, live.speed_hz or 0.0)),
+        ]
 
     def _records(self, run: str | None) -> tuple[JobStory, Run] | None:
         """The open run with its job's story; None while there is none, or it belongs to no job."""

@@ -185,3 +185,5 @@ class ReviseAsked(Request):
     channels: tuple[ChannelBody, ...] = ()
     sensor_angle_deg: Annotated[float, Field(ge=0, lt=360, allow_inf_nan=False, strict=True)] | None = None
     why: Annotated[str, Field(min_length=1, max_length=500)]
+    confirmed: bool = False
+    """A sensitivity many times another than recorded is meant."""

@@ -10,7 +10,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from typing import Any
 
-from config.errors import Refusal
+from config.errors import NeedsAnswer, Refusal
 from daq.build import this_build
 from daq.recompute import Again, again
 from daq.signal.setting import Setting
@@ -67,6 +67,38 @@ def corrected(set_up: SetUp, correction: Correction, run: str) -> SetUpDraft:
             f"Run {run} was measured with that set-up already.", "Nothing to do; `revmark run show` tells it."
         )
     return draft
+
+
+FAR_OFF = 3.0
+"""A sensitivity so many times another is asked about: more likely a slip of the unit."""
+
+
+def question_far_off(then: SetUp, now: SetUpDraft, run: str) -> None:
+    """Raises NeedsAnswer when a corrected sensitivity is many times the recorded one, or a small part."""
+    for old, new in zip(then.channels, now.channels, strict=True):
+        times = new.volts_per_unit / old.volts_per_unit
+        if not 1 / FAR_OFF <= times <= FAR_OFF:
+            raise NeedsAnswer(
+                f"The sensitivity of {old.name} would be {times:.3g} times the one of run {run}, and its "
+                f"amplitudes {1 / times:.3g} times what they were.",
+                "Check the unit; --yes goes on all the same.",
+                options=("--yes",),
+            )
+
+
+def changes(then: SetUp, now: SetUpDraft) -> list[dict[str, Any]]:
+    """What a correction makes of the set-up, as plain JSON: channel (None = once-per-rev), what, was, is."""
+    fields = ("volts_per_unit", "positive", "angle_deg")
+    found = [
+        {"channel": old.name, "what": name, "was": getattr(old, name), "is": getattr(new, name)}
+        for old, new in zip(then.channels, now.channels, strict=True)
+        for name in fields
+        if getattr(old, name) != getattr(new, name)
+    ]
+    if then.pulse.angle_deg != now.pulse.angle_deg:
+        pulse = (then.pulse.angle_deg, now.pulse.angle_deg)
+        found.append({"channel": None, "what": "angle_deg", "was": pulse[0], "is": pulse[1]})
+    return found
 
 
 def _put_right(channel: ChannelSetUp, change: ChannelChange) -> ChannelSetUp:

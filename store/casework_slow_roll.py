@@ -57,7 +57,7 @@ class Runout:
         return None if slow is None or own or vector.order != 1 else less_slow_roll(vector, slow)
 
     def to_dict(self, speed_hz: float | None) -> dict[str, Any]:
-        """``speed_hz``: the highest speed that it is taken off at, for the cautions."""
+        """``speed_hz``: the speed that it is taken off at, for the cautions."""
         slow = self.reading
         return {
             "run": slow.run,

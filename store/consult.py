@@ -188,8 +188,12 @@ def _told_as(story: JobStory | None, run: Run, set_up: SetUp) -> JobStory | None
 
 
 def _runout_json(run: Run, runout: Runout, traces: Iterable[Trace]) -> Json:
-    speeds = [r.speed_hz for r in run.readings] + [p.speed_hz for t in traces for p in t.points]
-    return runout.to_dict(max(speeds, default=None))
+    """The slow roll's own unbalance counts most at the lowest speed it is taken off at: of the readings that
+    are no slow roll, else at the top of the traces."""
+    least_hz = 1.5 * runout.reading.speed_hz
+    read = [r.speed_hz for r in run.readings if r.speed_hz >= least_hz]
+    traced = [p.speed_hz for t in traces for p in t.points]
+    return runout.to_dict(min(read) if read else max(traced, default=None))
 
 
 def bode(history: History, name: str, *, minus_slow_roll: bool = False, **how: Any) -> BodePicture:
@@ -222,9 +226,9 @@ def open_run_told(history: History) -> tuple[JobStory, Run] | None:
     return history.job_story(run.job_number), run
 
 
-def reading_now(run: Run, vectors: Sequence[Vector], flags: Sequence[str]) -> Reading:
+def reading_now(run: Run, vectors: Sequence[Vector], flags: Sequence[str], speed_hz: float) -> Reading:
     """Vectors as they stand now, as a reading of the open run that nobody stored."""
-    return Reading(run.id, run.id, 0, 0, 0.0, 0.0, 0, {}, tuple(flags), tuple(vectors))
+    return Reading(run.id, run.id, 0, 0, 0.0, speed_hz, 0, {}, tuple(flags), tuple(vectors))
 
 
 def reading_json(history: History, reading: Reading, job: str) -> Json:

@@ -24,6 +24,8 @@ BELOW_FLOOR = "below_floor"
 RUNOUT_SHARE = 1 / 3
 """A vector that differs from the slow-roll vector by less than this share of itself is mostly runout: the
 motion is then less than half of the runout beside it (judgement)."""
+RUNOUT_FROM_SPEED = 1.5
+"""Times the slow roll's speed: nearer to it the vector ought to be runout."""
 
 
 def below_floor(vector: Vector) -> bool:
@@ -76,6 +78,8 @@ def _backward(reading: Reading, standing: Standing) -> Iterator[str]:
 
 def _runout(story: JobStory, run: Run, reading: Reading, standing: Standing) -> Iterator[str]:
     for channel, slow in slow_rolls_in(story, standing, frozenset({run.origin})).items():
+        if reading.speed_hz < RUNOUT_FROM_SPEED * slow.speed_hz:
+            continue
         vector = reading.vector(channel)
         if vector is not None and not below_floor(vector) and _alike(vector, slow):
             yield f"{RUNOUT}:{channel}"

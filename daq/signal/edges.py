@@ -10,6 +10,7 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Iterator
 from dataclasses import dataclass
+from statistics import NormalDist
 from typing import Any
 
 import numpy as np
@@ -99,15 +100,25 @@ class PulseHistogram:
     def add(self, counted: NDArray[np.int64]) -> None:
         self.bins += counted
 
-    def levels(self) -> tuple[float, float]:
-        """The low and the high level, in counts (middle of their bins)."""
+    def levels(self, noise: float = 0.0) -> tuple[float, float]:
+        """The low and the high level, in counts (middle of their bins), without what ``noise`` (sd, counts)
+        adds to the tails that tell them. The stream's own trigger leaves it in: it need not be that exact."""
         total = np.cumsum(self.bins)
         low, high = np.searchsorted(total, [LEVEL_TAIL * total[-1], (1 - LEVEL_TAIL) * total[-1]])
+        below = float(total[(low + high) // 2] / max(1, total[-1]))
         half = ((1 << self._shift) - 1) / 2
         return (
-            float((int(low) << self._shift) + self._low + half),
-            float((int(high) << self._shift) + self._low + half),
+            float((int(low) << self._shift) + self._low + half) + noise * _reach(below),
+            float((int(high) << self._shift) + self._low + half) - noise * _reach(1 - below),
         )
+
+
+def _reach(share: float) -> float:
+    """How many sd a normal value lies out that ``LEVEL_TAIL`` of all samples are beyond, when ``share`` of
+    them scatter about that level."""
+    if not share > LEVEL_TAIL:
+        return 0.0
+    return -NormalDist().inv_cdf(min(LEVEL_TAIL / share, 0.999))
 
 
 def noise_sd(pulse: NDArray[Any]) -> float:
@@ -154,7 +165,7 @@ def trigger_of(pulse: NDArray[Any], params: PulseParams) -> Trigger | None:
         noise.append(noise_sd(piece))
     if not noise:
         return None
-    return choose_trigger(params, *histogram.levels(), median(noise))
+    return choose_trigger(params, *histogram.levels(median(noise)), median(noise))
 
 
 class TriggerFollower:
@@ -513,7 +524,7 @@ def _held(
         if len(past) > 2 * reach + 1 or k + reach >= len(firsts) > 2 * reach:
             around.add(-past.popleft())
         if k >= 0:
-            trigger = choose_trigger(params, *around.levels(), noise) or trigger
+            trigger = choose_trigger(params, *around.levels(noise), noise) or trigger
             yield firsts[k], min(firsts[k] + step, stop), trigger
 
 
@@ -524,7 +535,7 @@ def _drifts(column: NDArray[Any], params: PulseParams, rate_hz: float, whole: Tr
     for a in range(0, max(1, len(column) - step // 2), step):
         part = PulseHistogram(params.full_scale_counts)
         part.add(part.count(column[a : a + step]))
-        found = choose_trigger(params, *part.levels(), whole.noise)
+        found = choose_trigger(params, *part.levels(whole.noise), whole.noise)
         levels += [found] if found is not None else []
     if len(levels) < 2:
         return False

@@ -164,8 +164,8 @@ def test_run_show_takes_the_slow_roll_off_beside_the_raw(
     assert " 62.5 " in less
     assert "seismo 0.141" not in less.split("+-: 95 %")[0]  # only the raw table has it
     assert "caution: near a critical speed a residual bow is amplified" in out
-    # (240/4500)^2 = 0.28 %
-    assert "holds 0.28 % of the unbalance response at 4500 r/min itself" in out
+    # of the reading, not of the trace's top: (240/1500)^2 = 2.56 %
+    assert "holds 2.6 % of the unbalance response at 1500 r/min itself" in out
 
 
 def test_the_same_as_json(stand: Any, capsys: pytest.CaptureFixture[str]) -> None:

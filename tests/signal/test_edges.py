@@ -196,3 +196,15 @@ def test_sixteen_bit_counts_at_the_end_of_their_scale() -> None:
     rising = find_edges(counts, PulseParams(1e-3, (-32768, 32767), edge="rising"))
     assert falling == pytest.approx(99.5 + 100 * np.arange(49), abs=1e-9)
     assert rising == pytest.approx(29.5 + 100 * np.arange(50), abs=1e-2)
+
+
+@pytest.mark.parametrize("share", [0.025, 0.05])
+def test_noise_on_the_pulse_does_not_shift_its_level(share: float) -> None:
+    """Noise of 2.5 and 5 % of the pulse would move the level by half of itself; the middle is 0 here."""
+    rng = np.random.default_rng(5)
+    turn = (np.arange(200_000) / 1000.3) % 1.0
+    pulse = 8000 * np.clip(np.minimum(turn, 0.1 - turn) / 0.0075, -0.5, 0.5) * -1.0
+    noisy = np.rint(pulse + rng.normal(0, share * 8000, len(pulse))).astype(np.int16)
+    trigger = trigger_of(noisy, PulseParams(30 / 32768, (-32768, 32767)))
+    assert trigger is not None
+    assert abs(trigger.level) < 0.1 * share * 8000  # a tenth of the noise: 0.03 deg and less on this edge

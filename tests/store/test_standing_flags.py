@@ -71,8 +71,9 @@ def run(
     vectors = tuple(
         Vector(f"probe {i + 1}", 1, v, sd**2, sd**2, 0.0, floor, "um") for i, v in enumerate(values)
     )
+    speed_hz = 4.0 if label is Label.SLOW_ROLL else 25.0
     reading = Reading(
-        UUID(int=100 + n), UUID(int=50 + n), 1, n * 10**6, 8.0, 25.0, 200, {}, (), vectors, label
+        UUID(int=100 + n), UUID(int=50 + n), 1, n * 10**6, 8.0, speed_hz, 200, {}, (), vectors, label
     )
     made = Run(
         UUID(int=50 + n), "0142", n, None, UUID(int=4), UUID(int=3), Origin.LIVE, "ana", {}, "1",
@@ -116,6 +117,16 @@ SLOW = run(1, Label.SLOW_ROLL, at(2.0, 30), at(1.0, 200))
 def test_a_vector_like_the_slow_roll_is_mostly_runout(vector: complex, flagged: bool) -> None:
     told = story(SLOW, run(2, Label.O, vector, at(9, 0)))
     assert flags(told) == (("mostly_runout:probe 1",) if flagged else ())
+
+
+def test_near_the_slow_rolls_own_speed_it_ought_to_be_runout() -> None:
+    def at_speed(speed_hz: float) -> tuple[str, ...]:
+        fast = run(2, None, at(2.0, 30), at(9, 0))
+        one = replace(fast.readings[0], speed_hz=speed_hz)
+        return flags(story(SLOW, replace(fast, readings=(one,))))
+
+    assert at_speed(5.9) == ()  # 1.5 times the 4 Hz of the slow roll is 6 Hz
+    assert at_speed(6.1) == ("mostly_runout:probe 1",)
 
 
 def test_what_may_be_runout_within_the_errors_is_flagged() -> None:

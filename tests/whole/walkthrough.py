@@ -17,7 +17,7 @@ from pathlib import Path
 README = Path(__file__).parents[2] / "README.md"
 PICTURES = ("job-0142.png", "bode-0142-1.png")
 MARKER = re.compile(r"<!-- demo: (.+?)(?: #(\d+))? -->\n(?:\n```console\n.*?\n```\n)?", re.S)
-NUMBER = re.compile(r"-?\d+(?:\.\d+)?")
+NUMBER = re.compile(r"[-<]?\d+(?:\.\d+)?")
 FOLDERS = re.compile(r"^Store:\s+\S+$", re.M)
 
 

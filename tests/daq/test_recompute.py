@@ -13,7 +13,7 @@ sys.path.insert(0, str(Path(__file__).parents[1] / "store"))
 
 from store_kit import SET_UP, FakeClock, Stand, measured, samples, vector
 
-from config.errors import Refusal
+from config.errors import NeedsAnswer, Refusal
 from config.onethread import is_one_thread, one_thread
 from daq import build
 from daq.again import AgainDesk
@@ -185,7 +185,10 @@ def test_a_revised_sensitivity_measures_the_counts_again(stand, desk):
     """From 0.01 to 0.0125 V/um: every length is 0.8 of what it was, every variance 0.64; the gap stays."""
     live = a_real_reading(stand)
     body = ChannelBody(channel="probe 1", volts_per_unit=0.0125, unit="um")
-    told = desk.revise(ReviseAsked(key="key-00000001", runs=("0142/1",), channels=(body,), why="x"), "ana")
+    far = ReviseAsked(key="key-00000001", runs=("0142/1",), channels=(body,), why="x")
+    with pytest.raises(NeedsAnswer, match="0142/1"):  # the kit's set-up says 7874 V/um
+        desk.revise(far, "ana")
+    told = desk.revise(far.model_copy(update={"confirmed": True}), "ana")
     assert told["runs"][0]["readings"][0]["why_not"] is None
     now = stand.history.run("0142/1").readings[0]
     for was, v in zip(live.vectors, now.vectors, strict=True):

@@ -48,7 +48,8 @@ def filled(text: str, printed: str) -> str:
 
 def words(text: str) -> str:
     """Text with every run of numbers, of blanks and of dashes (a lag below its floor) made alike."""
-    return re.sub(r"#(?: #)+", "#", re.sub(r"[ -]+", " ", NUMBER.sub("#", text)))
+    plain = re.sub(r"#(?: #)+", "#", re.sub(r"[ -]+", " ", NUMBER.sub("#", text)))
+    return re.sub(r" $", "", plain, flags=re.M)
 
 
 def main() -> None:

@@ -32,7 +32,7 @@ from daq.signal.shapes import (
     check_columns,
     noise_floor,
 )
-from daq.signal.vectors import Accumulator, Fit, turn_pieces
+from daq.signal.vectors import Accumulator, Fit, stretch_pieces
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -127,8 +127,8 @@ def _sums(
     cuts, parts, spans = [], [], []
     for first, stop in _cuts(turns):
         sums, seen = Accumulator(orders), health.RangeScan(scales)
-        for fractions, a, b in turn_pieces(turns.part(first, stop)):
-            sums.add(fractions, counts[a:b])
+        for stretch, a, b in stretch_pieces(turns.part(first, stop)):
+            sums.add_turns(stretch, a, [counts[a:b]])
             seen.add(counts[a:b])
             fold.add(counts[a:b], a)
         solved = sums.solve()

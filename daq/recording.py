@@ -182,7 +182,7 @@ def driver_options(
 ) -> dict[str, Any]:
     """The replay driver's options for one file: those of a stand file that replays, else what is given here.
 
-    Raises Refusal when nothing says which voltage the highest count means."""
+    Raises Refusal when nothing says which voltage the highest count means, or for a column of no input."""
     own = dict(stand.source.options) if stand.source.driver == "replay" else {}
     if full_scale is not None:
         own["full_scale"] = full_scale
@@ -191,6 +191,13 @@ def driver_options(
             f"The stand file reads from {stand.source.driver}, so nothing says which voltage the highest "
             f"number in {file.name} means.",
             'Say it: --full-scale "30 V".',
+        )
+    known = (stand.pulse.input, *(c.input for c in stand.channels))
+    strange = next((c for c in columns if c not in known), None)
+    if strange is not None:
+        raise Refusal(
+            f"--column names the input {strange!r}, and no channel of {stand.file.name} has it.",
+            f"Its inputs are {', '.join(known)}.",
         )
     if columns:
         own["columns"] = {**own.get("columns", {}), **columns}

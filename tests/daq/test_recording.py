@@ -132,6 +132,7 @@ def test_the_command(tmp_path, capsys):
     [
         (["--column", "x"], 2, "is no column of an input"),
         (["--column", "1=0"], 2, "is no column of an input"),
+        (["--column", "9=1"], 1, "names the input '9', and no channel of fan.toml has it. Its inputs are"),
         (["--full-scale", "30"], 1, "full_scale"),
         ([], 1, "There is no file"),
     ],

@@ -26,6 +26,12 @@ NO_END = (-(1 << 40), 1 << 40)
 """The scale of a channel that may reach its end."""
 TILE = 32
 """Frames looked at together."""
+REST_TURNS, REST_FRAMES = 4, 1 << 15
+"""So many turns of a window are looked at for a level that is held, and so many samples at most."""
+REST_COUNTS, REST_NOISE = 2.0, 7.0
+"""Width of the band at the end of a swing: in counts at least, and in standard deviations of the noise."""
+REST_SHARE, REST_RATIO = 0.03, 0.8
+"""A held level takes so much of the time, and so much of what a band four times as wide holds."""
 FLAT_COUNTS = 2
 """A probe whose samples stay within so many counts is flat."""
 HUNTING_SHARE = 0.002
@@ -43,6 +49,7 @@ DOUBLES = "double_pulses"
 FEW_SAMPLES = "few_samples"
 SAMPLES_LOST = "samples_lost"
 CLIPPED = "clipped"
+SATURATED = "saturated"
 FLAT = "flat"
 GAP = "gap_voltage"
 WEAK = "weak_1x"
@@ -73,6 +80,8 @@ SENTENCES: dict[str, str] = {
     FEW_SAMPLES: "The pulse or the turn has too few samples: the sampling rate is too low for this speed.",
     SAMPLES_LOST: "Samples were lost inside the window; nothing is computed across the gap.",
     CLIPPED: "{channel} is clipped: its voltage reaches the end of the input's range.",
+    SATURATED: "{channel} rests at one end of its swing in each turn, as a saturated probe does; if so, "
+    "its 1X reads low.",
     FLAT: "{channel} is flat: its signal does not move at all.",
     GAP: "{channel} has its gap voltage outside the limits of the stand file.",
     WEAK: "{channel}: its 1X is less than 3 times the noise of single samples (or the stand file's "
@@ -101,6 +110,7 @@ SHORT: dict[str, str] = {
     FEW_SAMPLES: "few",
     SAMPLES_LOST: "lost",
     CLIPPED: "clipped",
+    SATURATED: "flat top",
     FLAT: "flat",
     GAP: "gap V",
     WEAK: "weak",
@@ -274,6 +284,38 @@ def floor_flags(vectors: Sequence[OrderVector]) -> list[str]:
     return [
         flag(BELOW_FLOOR, v.channel) for v in vectors if v.order == 1 and not abs(v.value) > v.noise_floor
     ]
+
+
+def saturated_flags(channels: Sequence[ChannelParams], counts: NDArray[Any]) -> list[str]:
+    """Probes that rest at an end of their swing, below the input's own range; ``counts`` (frames, probes) of
+    some turns.
+
+    Near its end a sine doubles the time spent there when the band is four times as wide, and the flattest sum
+    of two harmonics adds four in ten (a fourth power); a level that is held adds next to nothing. The band is
+    as wide as the noise; where noise fills the swing nothing can be told."""
+    return [
+        flag(SATURATED, c.name)
+        for c, column in zip(channels, counts[:REST_FRAMES].T, strict=True)
+        if _rests_at_an_end(column.astype(np.float64))
+    ]
+
+
+def _rests_at_an_end(y: Floats) -> bool:
+    """``y``: (frames,) of one probe, counts."""
+    if len(y) < 3:
+        return False
+    bend = np.abs(y[2:] - 2 * y[1:-1] + y[:-2])
+    noise = float(np.median(bend)) / (0.6745 * np.sqrt(6.0))  # of white noise; quartiles at 0.6745 sd
+    high, low = y.max(), y.min()
+    band = max(REST_COUNTS, REST_NOISE * noise)
+    if 4 * band >= (high - low) / 4:
+        return False
+    for beyond in (high - y, y - low):
+        near, wide = beyond <= band, (beyond <= 4 * band).mean()
+        rests = (near[2:] & near[1:-1] & near[:-2]).mean()  # one sample in 16 is no level
+        if rests > REST_SHARE and near.mean() > REST_RATIO * wide:
+            return True
+    return False
 
 
 def lost_flags(

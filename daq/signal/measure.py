@@ -83,6 +83,7 @@ def measure(
         lost
         + health.pulse_flags(turns.missed, turns.doubles, finder.pulse_length, rate_hz / speed_hz)
         + health.mark_flags(finder.margin, finder.pulse_share, finder.untold)
+        + health.saturated_flags(channels, counts[_beginning(turns), 1:])
         + health.lost_flags(counts[_end(turns) : stop, 1:], rate_hz / speed_hz, *_swing(sums.fit))
     )
     rows, parts = sums.fold.rows(), len(sums.parts)
@@ -100,6 +101,12 @@ def measure(
 def _end(turns: Turns) -> int:
     """First sample after the last pulse."""
     return int(turns.first_samples[-1])
+
+
+def _beginning(turns: Turns) -> slice:
+    """The first turns of the window."""
+    first = turns.first_samples
+    return slice(int(first[0]), int(first[min(health.REST_TURNS, len(first) - 1)]))
 
 
 def _swing(fit: Fit) -> tuple[Floats, Floats]:

@@ -14,7 +14,9 @@ import pytest
 
 from daq.signal import health
 from daq.signal.measure import measure
-from daq.signal.shapes import Measurement, Surroundings
+from daq.signal.shapes import ChannelParams, Measurement, Surroundings
+
+VOLTS_PER_UM = 0.007874  # 200 mV/mil
 
 SIX = {1: 6.0 * np.exp(1j * np.radians(70))}
 
@@ -190,3 +192,49 @@ def test_the_level_is_marginal(signal: Callable[..., Any]) -> None:
 def test_limits_as_stated() -> None:
     assert health.speed_flags(0.0501, 25.0) == ["speed_hunting"]
     assert health.speed_flags(0.0499, 25.0) == []
+
+
+THETA = 2 * np.pi * np.arange(32_000) / 321.3
+ONE = (ChannelParams("probe 1", 30 / 32768, (-32768, 32767), VOLTS_PER_UM),)
+
+
+def held(wave: Any, noise: float = 1.0, size: float = 2000.0) -> bool:
+    """Whether a wave of about 1, times ``size`` counts, with noise, is taken for a saturated one."""
+    rng = np.random.default_rng(3)
+    counts = np.rint(size * wave + rng.normal(0, noise, len(wave))).astype(np.int16)[:, None]
+    return health.saturated_flags(ONE, counts) == ["saturated:probe 1"]
+
+
+@pytest.mark.parametrize("share", [0.5, 0.8, 0.9, 0.95])
+@pytest.mark.parametrize("end", [1, -1])
+def test_a_probe_that_saturates_below_the_inputs_range(share: float, end: int) -> None:
+    assert held(end * np.minimum(np.cos(THETA), share))
+
+
+@pytest.mark.parametrize("noise", [0.0, 1.0, 10.0, 300.0])
+@pytest.mark.parametrize(
+    "wave",
+    [
+        np.cos(THETA),
+        np.cos(THETA) - 0.25 * np.cos(2 * THETA),  # no second derivative at its top: as flat as two orders go
+        np.cos(THETA) - np.cos(3 * THETA) / 9,  # the same with the third order, at both ends
+        np.cos(THETA) + np.cos(0.43 * THETA),
+        np.zeros(len(THETA)),
+    ],
+)
+def test_waves_that_are_flat_by_nature_are_not_saturated(wave: Any, noise: float) -> None:
+    assert not held(wave, noise)
+
+
+@pytest.mark.parametrize("samples", range(5, 40))
+def test_few_samples_a_turn_are_no_held_level(samples: int) -> None:
+    theta = 2 * np.pi * (np.arange(4 * samples) + 0.25) / samples
+    for wave in (np.cos(theta), np.cos(theta) - 0.25 * np.cos(2 * theta)):
+        assert not held(wave)
+
+
+def test_a_saturated_probe_is_flagged_with_its_reading(signal: Callable[..., Any]) -> None:
+    s = signal(probes=({1: 60.0 + 0j}, {1: 60.0 + 0j}), noise_um=0.1)
+    counts = s.counts()
+    counts[:, 1] = np.minimum(counts[:, 1], np.quantile(counts[:, 1], 0.8))
+    assert run(s, counts).flags == ("saturated:probe 1",)
